@@ -1,0 +1,388 @@
+"""What a user does to a document: each function takes one and returns another; nothing here knows a screen.
+
+A cell is named by its path: keys and indices from the top of the file, with one liberty: an element of a ladder is one
+table whose ``place`` is a field, so ("filter", 0, "dm", 2, "L") is the L of the third element, be it series or shunt.
+"""
+
+from __future__ import annotations
+
+import copy
+import re
+from collections.abc import Iterable
+from typing import Any
+
+from budget import quantity
+from budget.project import document as doc
+from budget.project import read, schema, starter
+from budget.project.build import Shelf
+from budget.project.document import Document, Path, Tree
+from budget.project.problems import ProjectError, found
+from budget.project.schema import Field
+
+PLACES = ("series", "shunt")
+
+
+def spec_at(path: Path) -> Field | None:
+    """The schema's field for a cell, ``None`` for a path that is no cell."""
+    fields, rest = _table_of(path)
+    spec: Field | None = None
+    for key in rest:
+        if spec is not None and spec.kind == schema.LOADS:
+            return schema.LOAD if isinstance(key, str) else None
+        if isinstance(key, int):
+            if spec is None:
+                return None
+            if spec.kind in (schema.ROWS, schema.CURVE) and fields is not spec.fields:
+                fields = spec.fields  # the row; the next index is the column
+                continue
+            if spec.kind in (schema.ROWS, schema.CURVE):
+                spec = fields[key] if key < len(fields) else None
+                continue
+            fields = spec.fields
+            continue
+        spec = next((f for f in fields if f.key == key), None)
+        if spec is None:
+            return None
+        fields = spec.fields if spec.kind == schema.TABLE else ()
+    return spec
+
+
+def _table_of(path: Path) -> tuple[tuple[Field, ...], Path]:
+    if len(path) >= 3 and path[0] == "shelf":
+        return schema.shelf_table(str(path[1])).fields, path[3:]
+    if path and path[0] == "shelf_files":
+        return (schema.SHELF_FILES,), path
+    table = schema.TABLES_BY_KEY.get(str(path[0])) if path else None
+    if table is None:
+        return (), ()
+    return table.fields, path[2:] if table.many else path[1:]
+
+
+def owner(path: Path) -> Path:
+    """The row, shelf part or single table that a cell belongs to."""
+    if path and path[0] == "shelf":
+        return path[:3]
+    table = schema.TABLES_BY_KEY.get(str(path[0])) if path else None
+    return path[:2] if table is not None and table.many else path[:1]
+
+
+def stored_path(document: Document, path: Path) -> Path:
+    """Where the value of a cell stands in the file: the path with ``series`` or ``shunt`` put in."""
+    base = owner(path)
+    if len(path) == len(base) + 3 and str(path[len(base)]) in ("dm", "cm", "input"):
+        element = doc.get(document, path[: len(base) + 2])
+        if isinstance(element, dict) and path[-1] != "place":
+            return (*path[:-1], _place(element), path[-1])
+    return path
+
+
+def _place(element: Any) -> str:
+    return next((p for p in PLACES if isinstance(element, dict) and p in element), "series")
+
+
+def cell_of(path: Path) -> Path:
+    """The cell a problem is about: its path without ``series`` and ``shunt``."""
+    return tuple(k for i, k in enumerate(path) if not (k in PLACES and i and isinstance(path[i - 1], int)))
+
+
+def part_of(document: Document, shelves: Iterable[Shelf], path: Path) -> Tree:
+    """The shelf part that lends its fields to the row of ``path``; an empty table if none does."""
+    base = owner(path)
+    if not base or base[0] not in schema.SHELVES:
+        return {}
+    name = doc.get(document, (*base, "part"))
+    if not isinstance(name, str) or not name:
+        return {}
+    for data in (document.data, *(s.data for s in shelves)):
+        shelf = data.get("shelf")
+        named = shelf.get(base[0]) if isinstance(shelf, dict) else None
+        if isinstance(named, dict) and isinstance(named.get(name), dict):
+            return dict(named[name])
+    return {}
+
+
+def shelf_names(document: Document, shelves: Iterable[Shelf], key: str) -> tuple[str, ...]:
+    """Names of all shelf parts for ``key``, filter or converter."""
+    names: dict[str, None] = {}
+    for data in (document.data, *(s.data for s in shelves)):
+        shelf = data.get("shelf")
+        named = shelf.get(key) if isinstance(shelf, dict) else None
+        names.update(dict.fromkeys(named if isinstance(named, dict) else ()))
+    return tuple(names)
+
+
+def value_at(document: Document, shelves: Iterable[Shelf], path: Path) -> tuple[Any, bool]:
+    """The value of a cell as stored, and whether it comes from the shelf."""
+    base = owner(path)
+    rest = path[len(base) :]
+    row = doc.get(document, base)
+    if rest and isinstance(row, dict) and rest[0] not in row:
+        part = part_of(document, shelves, path)
+        if rest[0] in part:
+            lent = Document({"row": part})
+            fake: Path = ("row", *rest)
+            if len(rest) == 3 and rest[0] in ("dm", "cm", "input"):
+                element = doc.get(lent, fake[:-1])
+                if rest[-1] == "place":
+                    return _place(element), True
+                fake = (*fake[:-1], _place(element), rest[-1])
+            return doc.get(lent, fake), True
+    if rest and rest[-1] == "place":
+        return _place(doc.get(document, path[:-1])), False
+    return doc.get(document, stored_path(document, path)), False
+
+
+def typed(value: Any) -> str:
+    """A stored value as the text one would type to get it."""
+    if value is None:
+        return ""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, list):
+        return ", ".join(typed(v) for v in value)
+    return str(value)
+
+
+def stored(spec: Field, text: str) -> Any:
+    """Typed text as the value to store; raises ProjectError with a sentence where the field cannot take it."""
+    text = text.strip()
+    if spec is schema.LOAD:
+        return _checked(text, lambda raw: read.read_load(raw))
+    if spec.kind in (schema.TEXT, schema.PART, schema.FILTER):
+        if any(not c.isprintable() for c in text) or len(text) > 2000:
+            raise ProjectError("a text of printable characters on one line was expected.")
+        return text
+    if spec.kind == schema.IDENT:
+        fault = read.ident_fault(text)
+        if fault:
+            raise ProjectError(fault)
+        return text
+    if spec.kind == schema.CHOICE:
+        if text not in spec.choices:
+            raise ProjectError(f"{found(text)} was found; {read.expectation(spec)} was expected.")
+        return text
+    if spec.kind == schema.TEXTS:
+        return [part.strip() for part in text.split(",") if part.strip()]
+    cell = spec.fields[-1] if spec.kind == schema.CURVE else spec
+    if cell.kind not in quantity.KINDS:
+        raise ProjectError(f"{read.expectation(spec)} was expected; its own lines are below.")
+    return _checked(text, lambda raw: read.quantity_value(cell, raw))
+
+
+def _checked(text: str, reader: Any) -> Any:
+    """The number or text to store, after ``reader`` has accepted it; a number only where that loses nothing typed."""
+    raw: Any = text
+    if re.fullmatch(r"-?(0|[1-9]\d{0,14})", text):
+        raw = int(text)
+    elif re.fullmatch(r"-?\d{1,15}\.\d{1,15}", text) and repr(float(text)) == text:
+        raw = float(text)
+    try:
+        reader(raw)
+    except ValueError as error:
+        raise ProjectError(str(error)) from error
+    return raw
+
+
+def enter(document: Document, shelves: Iterable[Shelf], path: Path, text: str) -> Document:
+    """A document with ``text`` typed into the cell ``path``; empty text clears it.
+
+    Raises ProjectError with a sentence where the cell cannot take it; an id is renamed everywhere it is used.
+    """
+    spec = spec_at(path)
+    if spec is None:
+        raise ProjectError("this cell is calculated and cannot be typed into.")
+    if not text.strip() and spec.kind not in (schema.IDENT, schema.CHOICE):
+        return clear(document, path)
+    value = stored(spec, text)
+    if spec.kind == schema.FILTER and value not in ("", *ids(document, "filter")):
+        names = ", ".join(ids(document, "filter")) or "none"
+        raise ProjectError(f"{found(value)} does not exist; the filters are: {names}.")
+    if spec.kind == schema.PART and value not in shelf_names(document, shelves, str(path[0])):
+        raise ProjectError(f"{found(value)} is not on the shelf.")
+    if spec.kind == schema.IDENT and len(path) == 3:
+        return rename(document, path, value)
+    document = own(document, shelves, path)
+    if path[-1] == "place":
+        element = doc.get(document, path[:-1])
+        inner = element.get(_place(element), {}) if isinstance(element, dict) else {}
+        rest = {k: v for k, v in (element or {}).items() if k not in PLACES}
+        return doc.put(document, path[:-1], {**rest, value: inner})
+    document = _with_needed(document, path)
+    try:
+        return doc.put(document, stored_path(document, path), value)
+    except KeyError as error:
+        raise ProjectError("this cell stands in something that is not a table; mend that first.") from error
+
+
+def own(document: Document, shelves: Iterable[Shelf], path: Path) -> Document:
+    """A document in which the row has a copy of the nested field that its shelf part lends it."""
+    base = owner(path)
+    rest = path[len(base) :]
+    row = doc.get(document, base)
+    if len(rest) > 1 and isinstance(row, dict) and rest[0] not in row:
+        part = part_of(document, shelves, path)
+        if rest[0] in part:
+            return doc.put(document, (*base, rest[0]), copy.deepcopy(part[str(rest[0])]))
+    return document
+
+
+def _with_needed(document: Document, path: Path) -> Document:
+    """Where a first field of a nested table is typed, the others it cannot do without get typical values."""
+    key = path[-2] if len(path) >= 2 else ""
+    spec = spec_at(path[:-1]) if isinstance(key, str) else None
+    if spec is not None and spec.kind == schema.TABLE and not doc.get(document, path[:-1]):
+        needed = {f.key for f in spec.fields if f.required}
+        values = {k: v for k, v in starter.NESTED.get(spec.key, {}).items() if k in needed}
+        return doc.put(document, path[:-1], values) if values else document
+    return document
+
+
+def clear(document: Document, path: Path) -> Document:
+    """A document with the cell emptied: back to its default, or to what the shelf lends.
+
+    Raises ProjectError for a field the row cannot do without.
+    """
+    spec = spec_at(path)
+    if spec is None or path[-1] == "place":
+        raise ProjectError("this cell cannot be emptied.")
+    if isinstance(path[-1], int) or spec.kind == schema.IDENT:
+        raise ProjectError(f"{spec.title} cannot be left empty; {read.expectation(spec)} was expected.")
+    if spec.kind == schema.FILTER:
+        at = stored_path(document, path)
+        return doc.put(document, at, "") if doc.get(document, at) else document
+    nested = spec.kind != schema.LOADS and len(path) > len(owner(path)) + 1
+    if spec.required and (nested or not _lent(document, path)):
+        raise ProjectError(f"{spec.title} cannot be left empty; {read.expectation(spec)} was expected.")
+    return doc.drop(document, stored_path(document, path))
+
+
+def _lent(document: Document, path: Path) -> bool:
+    return bool(doc.get(document, (*owner(path), "part")))
+
+
+def ids(document: Document, key: str) -> tuple[str, ...]:
+    """The ids of all rows of a table that have one."""
+    rows = document.data.get(key)
+    column = "name" if key == "limit" else "id"
+    if not isinstance(rows, list):
+        return ()
+    return tuple(r[column] for r in rows if isinstance(r, dict) and isinstance(r.get(column), str))
+
+
+def free_id(document: Document, key: str, like: str) -> str:
+    """An id not taken, numbered on from ``like``: FL1 -> FL4."""
+    taken = {*ids(document, "filter"), *ids(document, "converter")} if key in schema.SHELVES else {*ids(document, key)}
+    match = re.fullmatch(r"(.*?)(\d*)", like)
+    stem = (match.group(1) if match else like) or "row"
+    number = 1
+    while f"{stem}{number}" in taken:
+        number += 1
+    return f"{stem}{number}"
+
+
+def rename(document: Document, path: Path, new: str) -> Document:
+    """A document with the id at ``path`` renamed wherever it is used; raises ProjectError where it is taken."""
+    key, index = str(path[0]), path[1]
+    column = "name" if key == "limit" else "id"
+    old = doc.get(document, (key, index, column))
+    fault = read.ident_fault(new)
+    if fault:
+        raise ProjectError(fault)
+    if new == old:
+        return document
+    taken = (*ids(document, "filter"), *ids(document, "converter")) if key in schema.SHELVES else ids(document, key)
+    if new in taken:
+        raise ProjectError(f"{found(new)} is taken; a new name was expected.")
+    document = doc.put(document, (key, index, column), new)
+    if not isinstance(old, str):
+        return document
+    if key == "filter":
+        for i, row in enumerate(document.data.get("converter", [])):
+            if isinstance(row, dict) and row.get("filter") == old:
+                document = doc.put(document, ("converter", i, "filter"), new)
+    elif key == "converter":
+        for i, row in enumerate(document.data.get("case", [])):
+            loads = row.get("load") if isinstance(row, dict) else None
+            if isinstance(loads, dict) and old in loads:
+                renamed = {(new if k == old else k): v for k, v in loads.items()}
+                document = doc.put(document, ("case", i, "load"), renamed)
+    elif key == "limit":
+        names = doc.get(document, ("rules", "emissions"))
+        if isinstance(names, list) and old in names:
+            document = doc.put(document, ("rules", "emissions"), [new if n == old else n for n in names])
+    return document
+
+
+def new_row(document: Document, key: str, at: int, **values: Any) -> tuple[Document, Path]:
+    """A document with a new row of typical values before index ``at``, and the path of the row."""
+    row = copy.deepcopy({**starter.ROWS[key], **values})
+    column = "name" if key == "limit" else "id"
+    row[column] = free_id(document, key, row[column])
+    return insert_row(document, (key, at), row)
+
+
+def insert_row(document: Document, path: Path, row: Tree) -> tuple[Document, Path]:
+    """A document with ``row`` put in at ``path``; its id is numbered on where it is taken."""
+    key = str(path[0])
+    column = "name" if key == "limit" else "id"
+    if len(path) == 2 and key in schema.TABLES_BY_KEY:
+        ident = row.get(column)
+        taken = (*ids(document, "filter"), *ids(document, "converter")) if key in schema.SHELVES else ids(document, key)
+        if not isinstance(ident, str) or ident in taken:
+            row = {**row, column: free_id(document, key, ident if isinstance(ident, str) else key)}
+    return doc.insert(document, path, copy.deepcopy(row)), path
+
+
+def remove_row(document: Document, path: Path) -> Document:
+    """A document without the row at ``path``; what referred to it lets go of it."""
+    key = str(path[0])
+    ident = doc.get(document, (*path, "name" if key == "limit" else "id"))
+    document = doc.remove(document, path)
+    if len(path) != 2 or not isinstance(ident, str) or ident in ids(document, key):
+        return document
+    if key == "filter":
+        for i, row in enumerate(document.data.get("converter", [])):
+            if isinstance(row, dict) and row.get("filter") == ident:
+                document = doc.put(document, ("converter", i, "filter"), "")
+    elif key == "converter":
+        for i, row in enumerate(document.data.get("case", [])):
+            loads = row.get("load") if isinstance(row, dict) else None
+            if isinstance(loads, dict) and ident in loads:
+                document = doc.drop(document, ("case", i, "load", ident))
+    elif key == "limit":
+        names = doc.get(document, ("rules", "emissions"))
+        if isinstance(names, list) and ident in names:
+            document = doc.put(document, ("rules", "emissions"), [n for n in names if n != ident])
+    return document
+
+
+def new_item(document: Document, shelves: Iterable[Shelf], path: Path) -> tuple[Document, Path]:
+    """A document with one more item in a nested list (ladder, outputs, rows of numbers), and the item's path.
+
+    ``path`` is the list itself (then the item starts it, or joins its end) or an item (then it goes behind that).
+    """
+    base = owner(path)
+    rest = path[len(base) :]
+    at: Path = (*base, rest[0])
+    spec = spec_at(at)
+    if spec is None or spec.kind not in (schema.TABLES, schema.LADDER, schema.ROWS, schema.CURVE, schema.TABLE):
+        raise ProjectError("there is no list here to add to.")
+    document = own(document, shelves, (*at, 0))
+    old = doc.get(document, at)
+    if spec.kind == schema.TABLE:
+        if isinstance(old, dict):
+            raise ProjectError(f"{spec.title} is there already; its lines are below.")
+        return doc.put(document, at, copy.deepcopy(starter.NESTED[spec.key])), at
+    if spec.kind == schema.CURVE and old is not None and not isinstance(old, list):
+        rows = [["20 %", old], ["100 %", old]]  # the one number becomes a curve with the same value at both ends
+        return doc.put(document, at, rows), (*at, 0)
+    if not isinstance(old, list) or not old:
+        return doc.put(document, at, copy.deepcopy(starter.LISTS[spec.key])), (*at, 0)
+    index = rest[1] + 1 if len(rest) > 1 and isinstance(rest[1], int) else len(old)
+    model = old[index - 1] if spec.kind in (schema.ROWS, schema.CURVE) else starter.LISTS[spec.key][0]
+    return doc.insert(document, (*at, index), copy.deepcopy(model)), (*at, index)
+
+
+def to_filter(document: Document, index: int, ident: str) -> Document:
+    """A document with converter number ``index`` moved behind filter ``ident`` ("": behind none)."""
+    return doc.put(document, ("converter", index, "filter"), ident)

@@ -1,0 +1,1 @@
+"""Results as text, markdown, CSV and JSON."""

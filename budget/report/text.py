@@ -1,0 +1,101 @@
+"""A result for people: plain text for a terminal or a pipe, and markdown for a document."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from budget.engine.evaluate import Result
+from budget.engine.model import LINES
+from budget.report import tables, words
+
+# Bold and the three colours that every palette has; the word beside them says the same.
+_TONES = {"fail": "\x1b[1;31m", "thin": "\x1b[33m", "ok": "\x1b[32m", "no data": "\x1b[2m"}
+_END = "\x1b[0m"
+_RIGHT = {
+    "value",
+    "limit",
+    "wanted",
+    "output",
+    "input",
+    "current",
+    "of allowed",
+    "terminals",
+    "heat",
+    "energy",
+    "charge",
+}
+
+
+def as_text(name: str, result: Result, warnings: Sequence[str], *, colour: bool = False) -> str:
+    """The report of one file as text; ``colour`` adds ANSI colours to the words that state a status."""
+    lines = [_headline(name, result, colour), _scope(result), ""]
+    sections = (
+        ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
+        ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
+        ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
+    )
+    for title, head, rows in sections:
+        if rows:
+            lines += [title, *_columns(head, rows, colour), ""]
+    if warnings:
+        lines += ["Warnings", *(f"  {w}" for w in warnings), ""]
+    lines += words.CAUTION
+    return "\n".join(lines) + "\n"
+
+
+def _headline(name: str, result: Result, colour: bool) -> str:
+    status = _tone(result.status.upper(), result.status) if colour else result.status.upper()
+    title = result.project.title or name
+    return f"{title}: {status} ({words.summary(result.checks)})"
+
+
+def _scope(result: Result) -> str:
+    cases = ", ".join(case.id for case in result.project.cases)
+    lines = ", ".join(LINES[k] for k in result.lines)
+    return f"cases {cases}; lines {lines}"
+
+
+def _tone(text: str, status: str) -> str:
+    return f"{_TONES[status]}{text}{_END}"
+
+
+def _columns(head: tuple[str, ...], rows: list[tuple[str, ...]], colour: bool) -> list[str]:
+    used = [i for i in range(len(head)) if any(row[i] for row in rows)]
+    widths = {i: max(len(head[i]), *(len(row[i]) for row in rows)) for i in used}
+
+    def line(row: tuple[str, ...], tint: bool) -> str:
+        cells = []
+        for i in used:
+            cell = row[i].rjust(widths[i]) if head[i] in _RIGHT else row[i].ljust(widths[i])
+            cells.append(_tone(cell, row[i]) if tint and head[i] == "status" else cell)
+        return ("  " + "  ".join(cells)).rstrip()
+
+    return [line(head, False), *(line(row, colour) for row in rows)]
+
+
+def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
+    """The report of one file as markdown."""
+    lines = [f"# {_escape(result.project.title or name)}", ""]
+    lines += [f"**{result.status}**: {words.summary(result.checks)}; {_scope(result)}.", ""]
+    sections = (
+        ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
+        ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
+        ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
+    )
+    for title, head, rows in sections:
+        if not rows:
+            continue
+        lines += [f"## {title}", "", "| " + " | ".join(head) + " |"]
+        lines.append("|" + "|".join("---:" if h in _RIGHT else "---" for h in head) + "|")
+        lines += ["| " + " | ".join(_escape(cell.strip()) for cell in row) + " |" for row in rows]
+        lines.append("")
+    if warnings:
+        lines += ["## Warnings", "", *(f"- {_escape(w)}" for w in warnings), ""]
+    lines += ["> " + line for line in words.CAUTION]
+    return "\n".join(lines) + "\n"
+
+
+def _escape(text: str) -> str:
+    for sign in "\\|`*_<>[]":
+        text = text.replace(sign, "\\" + sign)
+    return text

@@ -1,0 +1,128 @@
+"""Results in words: the one place where codes, margins and missing fields become sentences."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import TYPE_CHECKING
+
+from budget import quantity
+
+if TYPE_CHECKING:  # the sheet words results before numpy is loaded
+    from budget.engine.checks import CheckRow
+
+CAUTION = (
+    "These numbers are estimates from the values entered; they replace neither measurement nor an accredited test.",
+    "Capacitors hold their charge after switch-off, 270 V DC kills, filters and converters get hot, and fuses arc:",
+    "work on the hardware only as local codes and licensed practice require.",
+)
+
+RANK = {"fail": 0, "no data": 2, "thin": 1, "ok": 3}
+REMARKS = {
+    "not allocated": "it has no filter",
+    "no operating point": "no operating point",
+    "unsolved corners left out": "corners without an operating point left out",
+    "never runs": "off in every case",
+    "beyond data": "efficiency beyond its last point",
+}
+_KINDS = {"A": "current", "V": "voltage", "W": "power"}
+
+
+def show(value: float | None, unit: str) -> str:
+    """A value of a check row as text, in its unit."""
+    return quantity.show(value, quantity.KINDS[_KINDS[unit]]) if unit in _KINDS and value is not None else ""
+
+
+def percent(ratio: float) -> str:
+    """A margin as a percentage: two significant digits are enough near the limit, whole numbers elsewhere."""
+    number = f"{abs(ratio) * 100:.2g}" if abs(ratio) < 0.1 else f"{abs(ratio) * 100:.0f}"
+    return f"{number} %"
+
+
+def margin(row: CheckRow) -> str:
+    """The margin of a row: '3 % over', '12 % left', '1 % below'; empty where it has none."""
+    if row.margin is None:
+        return "over" if row.status == "fail" and row.limit is not None else ""
+    if row.margin_unit == "dB":
+        return f"{abs(row.margin):.1f} dB {'left' if row.margin >= 0 else 'over'}"
+    if row.margin >= 0:
+        return f"{percent(row.margin)} left"
+    return f"{percent(row.margin)} {'below' if row.check == 'input low' else 'over'}"
+
+
+def corner(row: CheckRow) -> str:
+    """The corner of a row: 'climb, low line'; empty for a row that has none."""
+    words = [row.case] if row.case else []
+    if row.line:
+        words.append(f"{row.line} line")
+    return ", ".join(words)
+
+
+def note(row: CheckRow) -> str:
+    """What the row has to add: missing fields and remarks, as a sentence without its stop."""
+    words = []
+    if row.missing:
+        words.append("not entered: " + ", ".join(name.replace(".", " ") for name in row.missing))
+    words += [REMARKS.get(code, code) for code in row.remarks]
+    return "; ".join(words)
+
+
+def verdict(row: CheckRow) -> str:
+    """A row in a few words for a narrow column: 'FAIL current 3 % over'."""
+    name = short(row.check)
+    if row.status == "no data":
+        return f"no data {name}"
+    status = "FAIL" if row.status == "fail" else row.status
+    return " ".join(w for w in (status, name, margin(row)) if w)
+
+
+def short(check: str) -> str:
+    """A check's name for a narrow column."""
+    names = {"filter current": "current", "bus current": "current", "filter voltage": "voltage"}
+    return names.get(check, "load" if check == "converter load" else check)
+
+
+def sentence(row: CheckRow) -> str:
+    """A row in full: 'FL2 filter current 8.2 A, limit 8 A, wanted 6.4 A: 3 % over (climb, low line)'."""
+    words = f"{row.subject} {row.check}"
+    if row.value is not None:
+        words += f" {show(row.value, row.unit)}"
+    if row.limit is not None:
+        words += f", limit {show(row.limit, row.unit)}"
+    if row.wanted is not None and row.wanted != row.limit:
+        words += f", wanted {show(row.wanted, row.unit)}"
+    state = row.status if row.status != "fail" else "FAIL"
+    left = margin(row)
+    words += f": {state}" + (f", {left}" if left else "")
+    where = corner(row)
+    more = note(row)
+    return words + (f" ({where})" if where else "") + (f"; {more}" if more else "")
+
+
+def by_severity(rows: Iterable[CheckRow]) -> list[CheckRow]:
+    """Rows from worst to best: fail, thin, no data, ok; within one by their margin."""
+
+    def key(row: CheckRow) -> tuple[int, float]:
+        lacking = -9.9 if row.status == "fail" else 9.9
+        return RANK[row.status], row.margin if row.margin is not None else lacking
+
+    return sorted(rows, key=key)
+
+
+def counts(rows: Iterable[CheckRow]) -> dict[str, int]:
+    """How many rows there are of each status."""
+    found = {"fail": 0, "thin": 0, "no data": 0, "ok": 0}
+    for row in rows:
+        found[row.status] += 1
+    return found
+
+
+def summary(rows: Iterable[CheckRow]) -> str:
+    """The counts in words: '1 fail, 2 thin, 30 ok'; what is zero is left out."""
+    return ", ".join(f"{n} {status}" for status, n in counts(rows).items() if n) or "nothing to check"
+
+
+def engine_warning(code: tuple[str, ...]) -> str:
+    """A warning of the engine as a sentence."""
+    if code[0] == "beyond data":
+        return f"converter {code[1]}, case {code[2]}: the load lies beyond the last efficiency point; that was held."
+    return " ".join(code)

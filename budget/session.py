@@ -1,0 +1,229 @@
+"""One open project: its document, history, file and latest results; no screen.
+
+The session is the only thing that changes. Everything it holds is immutable, so a worker may calculate on a snapshot
+while the user goes on typing; a result carries the generation of the document it belongs to, and an older one is let
+go.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from pathlib import Path as FilePath
+from typing import TYPE_CHECKING, Any
+
+from budget.project import edits, store
+from budget.project.build import Built, Cache, Shelf, build
+from budget.project.document import Document, Path, Tree, drop, from_data, get, put
+from budget.project.problems import Problem, ProjectError, place
+
+if TYPE_CHECKING:
+    from budget.engine.evaluate import Result
+
+DEMO = "heron.toml"
+
+
+@dataclass(frozen=True, slots=True)
+class Step:
+    """One entry of the history: what was done, the document before it, and where the cursor stood."""
+
+    label: str
+    document: Document
+    spot: Any
+
+
+@dataclass(frozen=True, slots=True)
+class Snapshot:
+    """What a worker needs to calculate one generation."""
+
+    generation: int
+    document: Document
+    shelves: tuple[Shelf, ...]
+    problems: tuple[Problem, ...]
+    cache: Cache
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What a worker gives back; ``result`` is ``None`` where there is nothing to calculate."""
+
+    generation: int
+    built: Built
+    result: Result | None
+
+
+def calculate(snapshot: Snapshot) -> Outcome:
+    """Read the document of a snapshot and evaluate it. Runs in any thread, one at a time (the cache is shared)."""
+    from budget.engine.evaluate import evaluate  # numpy is loaded here, after the first paint
+
+    built = build(snapshot.document, snapshot.shelves, snapshot.cache)
+    built = Built(built.project, (*snapshot.problems, *built.problems), built.left_out)
+    result = evaluate(built.project) if built.project is not None else None
+    return Outcome(snapshot.generation, built, result)
+
+
+@dataclass(slots=True)
+class Session:
+    document: Document
+    path: FilePath | None = None
+    shelves: tuple[Shelf, ...] = ()
+    file_problems: tuple[Problem, ...] = ()
+    fingerprint: store.Fingerprint | None = None
+    saved: Document | None = None  # the document as it stands in the file
+    done: list[Step] = field(default_factory=list)
+    undone: list[Step] = field(default_factory=list)
+    generation: int = 1
+    outcome: Outcome | None = None
+    cache: Cache = field(default_factory=Cache)
+
+    @property
+    def dirty(self) -> bool:
+        """Whether there is work that the file does not have."""
+        return self.document is not self.saved
+
+    @property
+    def fresh(self) -> bool:
+        """Whether the results belong to the present document."""
+        return self.outcome is not None and self.outcome.generation == self.generation
+
+    @property
+    def result(self) -> Result | None:
+        return self.outcome.result if self.outcome else None
+
+    @property
+    def title(self) -> str:
+        title = get(self.document, ("project", "title"))
+        return title if isinstance(title, str) and title else self.name
+
+    @property
+    def name(self) -> str:
+        return self.path.name if self.path else "unsaved project"
+
+    def snapshot(self) -> Snapshot:
+        return Snapshot(self.generation, self.document, self.shelves, self.file_problems, self.cache)
+
+    def accept(self, outcome: Outcome) -> bool:
+        """Take a result if it belongs to the present document; an older one is let go."""
+        if outcome.generation != self.generation:
+            return False
+        self.outcome = outcome
+        return True
+
+    def apply(self, label: str, document: Document, spot: Any) -> bool:
+        """Make ``document`` the present one, one step of history; False where nothing changed."""
+        if document is self.document:
+            return False
+        self.done.append(Step(label, self.document, spot))
+        self.undone.clear()
+        self._show(document)
+        return True
+
+    def undo(self, spot: Any) -> Step | None:
+        return self._back(self.done, self.undone, spot)
+
+    def redo(self, spot: Any) -> Step | None:
+        return self._back(self.undone, self.done, spot)
+
+    def _back(self, source: list[Step], target: list[Step], spot: Any) -> Step | None:
+        if not source:
+            return None
+        step = source.pop()
+        target.append(Step(step.label, self.document, step.spot))
+        self._show(step.document)
+        return step
+
+    def _show(self, document: Document) -> None:
+        names = get(self.document, ("shelf_files",))
+        self.document = document
+        self.generation += 1
+        if get(document, ("shelf_files",)) is not names:
+            self._read_shelves()
+
+    def _read_shelves(self) -> None:
+        if self.path is not None:
+            self.shelves, self.file_problems = store.read_shelves(self.document.data, self.path)
+
+    # -- the file
+
+    def save(self, *, over: bool = False) -> tuple[str, ...]:
+        """Write to the session's own file; returns notes for the user. Raises as ``store.save``."""
+        if self.path is None:
+            raise ProjectError("this project has no file yet; save it under a name.")
+        saved = store.save(self.document, self.path, self.fingerprint, over=over)
+        self.fingerprint, self.saved = saved.fingerprint, self.document
+        return saved.notes
+
+    def save_as(self, path: FilePath, *, over: bool = False) -> tuple[str, ...]:
+        """Write to another file, which becomes the session's own; its shelf files come along."""
+        if not over and path.exists():
+            raise store.ChangedOnDiskError(f"{path} exists already; nothing was written.")
+        if self.path is not None and self.path.parent.resolve() != path.parent.resolve():
+            store.copy_shelves([s.name for s in self.shelves], self.path.parent, path.parent)
+        saved = store.save(self.document, path, None, over=over)
+        self.path, self.fingerprint, self.saved = path, saved.fingerprint, self.document
+        self._read_shelves()
+        return saved.notes
+
+    def copy_to(self, path: FilePath) -> None:
+        """Write a copy beside; the session stays with its own file."""
+        store.save(self.document, path, None)
+
+    def changed_on_disk(self) -> bool:
+        return self.path is not None and self.fingerprint is not None and store.changed(self.path, self.fingerprint)
+
+    def reload(self, spot: Any) -> None:
+        """Take what the file holds now, as one step of history that can be undone."""
+        assert self.path is not None
+        loaded = store.load(self.path)
+        self.done.append(Step("reload", self.document, spot))
+        self.undone.clear()
+        self.document = loaded.document
+        self.generation += 1
+        self.shelves, self.file_problems, self.fingerprint = loaded.shelves, loaded.problems, loaded.fingerprint
+        self.saved = loaded.document
+
+    # -- the cells
+
+    def enter(self, path: Path, text: str, spot: Any) -> bool:
+        """Type ``text`` into a cell; raises ProjectError with a sentence where the cell cannot take it."""
+        document = edits.enter(self.document, self.shelves, path, text)
+        label = place(self.document, path)
+        return self.apply(f"{label} = {text.strip() or 'empty'}", document, spot)
+
+
+def open_file(path: FilePath) -> Session:
+    """A session on an existing file; raises ProjectError, a sentence, where it cannot be used at all."""
+    loaded = store.load(path)
+    return Session(
+        loaded.document,
+        path,
+        loaded.shelves,
+        loaded.problems,
+        loaded.fingerprint,
+        saved=loaded.document,
+    )
+
+
+def open_demo() -> Session:
+    """The demo as an unsaved project, with the shelf parts it uses taken into it, so that it stands alone."""
+    folder = demo_folder()
+    loaded = store.load(folder / DEMO)
+    document = from_data(loaded.document.data, loaded.document.text)
+    for shelf in loaded.shelves:
+        for key, named in _shelf_section(shelf.data).items():
+            for name, part in named.items():
+                if get(document, ("shelf", key, name)) is None:
+                    document = put(document, ("shelf", key, name), part)
+    document = drop(document, ("shelf_files",))
+    return Session(document, saved=document)
+
+
+def _shelf_section(data: Tree) -> Tree:
+    section = data.get("shelf")
+    return section if isinstance(section, dict) else {}
+
+
+def demo_folder() -> FilePath:
+    """Where the demo projects are: inside the installed package, or beside it in a checkout."""
+    here = FilePath(__file__).resolve().parent
+    packed = here / "demo"
+    return packed if packed.is_dir() else here.parent / "projects"

@@ -1,0 +1,232 @@
+"""The desk in a terminal: textual brings keys in and lines out, a thread calculates. Only this module knows textual.
+
+One widget covers the screen and has every key. After each key the frame is painted anew as plain data and compared with
+the one before; only the spans that differ are sent to the terminal.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import sys
+import threading
+from collections.abc import Callable
+
+from rich.segment import Segment
+from rich.style import Style
+from textual.app import App, ComposeResult
+from textual.events import Key, Paste, Resize
+from textual.geometry import Region
+from textual.message import Message
+from textual.strip import Strip
+from textual.widget import Widget
+
+from budget.session import Outcome, Session, Snapshot, calculate
+from budget.ui.desk import Desk
+from budget.ui.paint import Line, frame
+
+LATE = 0.05  # seconds after which results that have not come look stale
+WATCH = 2.0  # seconds between looks at the file on disk
+
+STYLES: dict[str, Style] = {
+    "": Style(),
+    "head": Style(bold=True),
+    "heading": Style(bold=True, underline=True),
+    "pale": Style(dim=True),
+    "lent": Style(italic=True),
+    "bar": Style(reverse=True),
+    "cursor": Style(reverse=True, bold=True),
+    "edit": Style(underline=True),
+    "fail": Style(color="red", bold=True),
+    "thin": Style(color="yellow"),
+    "ok": Style(color="green"),
+    "no data": Style(dim=True),
+}
+
+
+class Calculated(Message):
+    """Results from the worker."""
+
+    def __init__(self, outcome: Outcome) -> None:
+        super().__init__()
+        self.outcome = outcome
+
+
+class Trouble(Message):
+    """The worker met an error that is a fault of this program."""
+
+    def __init__(self, generation: int, text: str) -> None:
+        super().__init__()
+        self.generation = generation
+        self.text = text
+
+
+class Worker:
+    """One thread that calculates the newest snapshot; a newer one replaces one that waits."""
+
+    def __init__(self, post: Callable[[Message], object]) -> None:
+        self._post = post
+        self._wanted: Snapshot | None = None
+        self._wake = threading.Condition()
+        self._thread = threading.Thread(target=self._run, name="calculate", daemon=True)
+        self._thread.start()
+
+    def want(self, snapshot: Snapshot) -> None:
+        with self._wake:
+            self._wanted = snapshot
+            self._wake.notify()
+
+    def _run(self) -> None:
+        while True:
+            with self._wake:
+                while self._wanted is None:
+                    self._wake.wait()
+                snapshot, self._wanted = self._wanted, None
+            try:
+                message: Message = Calculated(calculate(snapshot))
+            except Exception as error:  # the sheet must stay open whatever the calculation does
+                message = Trouble(snapshot.generation, f"{type(error).__name__}: {error}")
+            with contextlib.suppress(Exception):  # the program may be closing
+                self._post(message)
+
+
+class Screenful(Widget, can_focus=True):
+    """The whole screen as lines of the present frame."""
+
+    DEFAULT_CSS = "Screenful { width: 100%; height: 100%; background: ansi_default; color: ansi_default; }"
+
+    def __init__(self, desk: Desk) -> None:
+        super().__init__()
+        self.desk = desk
+        self.lines: list[Line] = []
+
+    def render_line(self, y: int) -> Strip:
+        width = self.size.width
+        if y >= len(self.lines):
+            return Strip.blank(width)
+        return Strip([Segment(text, STYLES.get(tone, STYLES[""])) for text, tone in self.lines[y]], width)
+
+    def sync(self) -> None:
+        """Paint the desk and send what differs from the frame on the screen."""
+        width, height = self.size
+        if not width or not height:
+            return
+        new = frame(self.desk, width, height)
+        old, self.lines = self.lines, new
+        if len(old) != len(new):
+            self.refresh()
+            return
+        for y, (before, after) in enumerate(zip(old, new, strict=True)):
+            if before != after:
+                start, end = difference(before, after)
+                self.refresh(Region(start, y, min(width, end) - start, 1))
+
+    def on_resize(self, event: Resize) -> None:
+        self.lines = []
+        self.sync()
+
+    def on_key(self, event: Key) -> None:
+        event.stop()
+        event.prevent_default()
+        character = event.character if event.is_printable else None
+        self.desk.key(event.key, character)
+        self.sync()
+
+    def on_paste(self, event: Paste) -> None:
+        event.stop()
+        self.desk.paste(event.text)
+        self.sync()
+
+
+def difference(before: Line, after: Line) -> tuple[int, int]:
+    """The first and the last column (exclusive) in which two lines of one width differ; wide signs count whole."""
+    one, two = _cells(before), _cells(after)
+    if len(one) != len(two):
+        return 0, max(len(one), len(two))
+    start = 0
+    while start < len(one) and one[start] == two[start]:
+        start += 1
+    end = len(one)
+    while end > start and one[end - 1] == two[end - 1]:
+        end -= 1
+    return start, end
+
+
+def _cells(line: Line) -> list[tuple[str, str]]:
+    cells: list[tuple[str, str]] = []
+    for text, tone in line:
+        if text.isascii():
+            cells += [(c, tone) for c in text]
+        else:
+            for segment in Strip([Segment(text)]):
+                for character in segment.text:
+                    width = Segment(character).cell_length
+                    cells += [(character, tone)] * width
+    return cells
+
+
+class BudgetApp(App[int], inherit_bindings=False):
+    """Holds the widget, the worker and the timers."""
+
+    ENABLE_COMMAND_PALETTE = False
+    CSS = "Screen { background: ansi_default; color: ansi_default; }"
+
+    def __init__(self, desk: Desk) -> None:
+        super().__init__(ansi_color=True)
+        self.desk = desk
+        self.board = Screenful(desk)
+        self.animation_level = "none"
+        self.worker: Worker | None = None
+        self.told_changed = False
+
+    def compose(self) -> ComposeResult:
+        yield self.board
+
+    def on_mount(self) -> None:
+        self.board.focus()
+        self.desk.leave = lambda: self.exit(0)
+        self.desk.clip = self.copy_to_clipboard
+        self.desk.calculate = self.start_calculation
+        self.set_interval(WATCH, self.look_at_file)
+        self.call_after_refresh(self.begin)  # numpy and pint are loaded by the worker, behind the first paint
+
+    def begin(self) -> None:
+        self.worker = Worker(self.post_message)
+        self.start_calculation()
+
+    def start_calculation(self) -> None:
+        if self.worker is None:
+            return
+        self.worker.want(self.desk.session.snapshot())
+        generation = self.desk.session.generation
+        self.set_timer(LATE, lambda: self.late(generation))
+
+    def late(self, generation: int) -> None:
+        session = self.desk.session
+        if session.generation == generation and not session.fresh and not self.desk.pending:
+            self.desk.pending = True
+            self.board.sync()
+
+    def on_calculated(self, event: Calculated) -> None:
+        if self.desk.accept(event.outcome):
+            self.board.sync()
+
+    def on_trouble(self, event: Trouble) -> None:
+        if event.generation == self.desk.session.generation:
+            self.desk.say(f"the calculation failed, a fault of this program ({event.text}); undo the edit", "fail")
+            self.board.sync()
+
+    def look_at_file(self) -> None:
+        """Notice a file that someone else has changed."""
+        changed = self.desk.session.changed_on_disk()
+        if changed and not self.told_changed:
+            self.desk.say(f"{self.desk.session.name} was changed on disk by someone else; w asks what to do", "thin")
+            self.board.sync()
+        self.told_changed = changed
+
+
+def show(session: Session, *, ascii_only: bool = False) -> int:
+    """Run the sheet until the user leaves; returns the exit status."""
+    sys.setswitchinterval(0.001)  # a key must not wait for a calculation
+    app = BudgetApp(Desk(session, ascii_only))
+    status = app.run(mouse=False)
+    return status if status is not None else (app.return_code or 0)

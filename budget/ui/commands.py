@@ -1,0 +1,133 @@
+"""The one table of commands: keys, hint line, command list, help screen and the README's key table come from it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+SHEET, LOADS, LISTS, ALL = "sheet", "loads", "lists", "all"
+
+
+@dataclass(frozen=True, slots=True)
+class Command:
+    """One command: ``name`` is the method of the desk that does it, ``keys`` as textual names them.
+
+    The first key is one that arrives on every terminal; ``hint`` is its word on the hint line ("" keeps it off), and
+    ``where`` the views in which it means something.
+    """
+
+    name: str
+    keys: tuple[str, ...]
+    label: str
+    group: str
+    hint: str = ""
+    where: tuple[str, ...] = (ALL,)
+
+
+COMMANDS: tuple[Command, ...] = (
+    Command("up", ("up",), "one row up", "move"),
+    Command("down", ("down",), "one row down", "move"),
+    Command("left", ("left", "shift+tab"), "one cell to the left", "move"),
+    Command("right", ("right", "tab"), "one cell to the right", "move"),
+    Command("first", ("home",), "first cell of the row", "move"),
+    Command("last", ("end",), "last cell of the row", "move"),
+    Command("page_up", ("pageup",), "one page up", "move"),
+    Command("page_down", ("pagedown",), "one page down", "move"),
+    Command("find", ("g",), "go to a row by its name", "move"),
+    Command("edit", ("enter",), "edit the cell; on a calculated one, go to what it follows from", "edit", "edit"),
+    Command("empty", ("delete", "backspace"), "empty the cell: back to its default", "edit"),
+    Command("undo", ("u", "ctrl+z"), "undo", "edit", "undo"),
+    Command("redo", ("U", "ctrl+y"), "redo", "edit"),
+    Command("copy", ("c", "ctrl+c"), "copy the cell", "edit"),
+    Command("cut", ("x", "ctrl+x"), "cut the cell", "edit"),
+    Command("paste", ("v", "ctrl+v"), "paste the cell", "edit"),
+    Command("fill", ("d",), "fill down: take the value of the cell above", "edit"),
+    Command("new", ("n",), "new row after this one (on a filter: a converter behind it)", "rows", "new"),
+    Command("new_filter", ("N",), "new filter", "rows", "", (SHEET,)),
+    Command("duplicate", ("D",), "duplicate the row", "rows"),
+    Command("remove", ("R",), "remove the row", "rows"),
+    Command("copy_row", ("C",), "copy the row", "rows"),
+    Command("cut_row", ("X",), "cut the row", "rows"),
+    Command("paste_row", ("V",), "paste the row after this one", "rows"),
+    Command("earlier", ("[",), "move the row up", "rows"),
+    Command("later", ("]",), "move the row down", "rows"),
+    Command("rename", ("e",), "rename its id everywhere", "rows"),
+    Command("filter_up", ("<",), "converter behind the filter above", "rows", "", (SHEET,)),
+    Command("filter_down", (">",), "converter behind the filter below", "rows", "other filter", (SHEET,)),
+    Command("to_filter", ("m",), "converter behind a filter from a list", "rows", "", (SHEET,)),
+    Command("take_part", ("p",), "take a part from the shelf", "rows", "", (SHEET,)),
+    Command("corner", ("o",), "choose the case and line that are shown", "show", "corner"),
+    Command("worst", ("O",), "show the worst over all cases and lines", "show"),
+    Command("view_sheet", ("s", "escape", "f2"), "the sheet: bus, filters, converters", "show"),
+    Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields"),
+    Command("view_rules", ("r", "f4"), "the rules: wanted margins", "show"),
+    Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads"),
+    Command("view_checks", ("k", "f6"), "all checks from worst to best", "show", "checks"),
+    Command("view_limits", ("i", "f7"), "emission limit lines of your own", "show"),
+    Command("view_shelf", ("h", "f8"), "shelf of reusable parts", "show"),
+    Command("view_project", ("t", "f9"), "title, author, shelf files", "show"),
+    Command("view_faults", ("b",), "cells that cannot be read, and warnings", "show"),
+    Command("save", ("w", "ctrl+s"), "save", "file", "save"),
+    Command("save_as", ("W",), "save under another name", "file"),
+    Command("commands", ("space",), "list of all commands", "file", "all commands"),
+    Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help"),
+    Command("quit", ("q", "ctrl+q"), "quit", "file", "quit"),
+)
+
+BY_KEY: dict[str, Command] = {key: command for command in COMMANDS for key in command.keys}
+GROUPS = {"move": "Moving", "edit": "Editing", "rows": "Rows", "show": "Showing", "file": "File and program"}
+
+# Characters that start typing into a cell at once.
+STARTS_NUMBER = frozenset("0123456789.+-(")
+
+_SHOWN = {
+    "question_mark": "?",
+    "escape": "Esc",
+    "enter": "Enter",
+    "pageup": "PageUp",
+    "pagedown": "PageDown",
+    "delete": "Del",
+    "backspace": "Backspace",
+    "space": "Space",
+    "shift+tab": "Shift+Tab",
+    "tab": "Tab",
+    "up": "Up",
+    "down": "Down",
+    "left": "Left",
+    "right": "Right",
+    "home": "Home",
+    "end": "End",
+}
+
+
+def key_text(key: str) -> str:
+    """A key as it is written on the screen and in the docs."""
+    if key in _SHOWN:
+        return _SHOWN[key]
+    if key.startswith("ctrl+"):
+        return f"Ctrl+{key[5:].upper()}"
+    return key.upper() if len(key) > 1 and key[0] == "f" else key
+
+
+def keys_text(command: Command) -> str:
+    return " or ".join(key_text(key) for key in command.keys)
+
+
+def hints(view: str) -> list[tuple[str, str]]:
+    """(key, word) for the hint line of a view, most useful first."""
+    return [
+        (key_text(command.keys[0]), command.hint)
+        for command in COMMANDS
+        if command.hint and (ALL in command.where or view in command.where)
+    ]
+
+
+def markdown_table() -> str:
+    """The key table of the README."""
+    lines = ["| Keys | What they do |", "|---|---|"]
+    for group, title in GROUPS.items():
+        lines.append(f"| **{title}** | |")
+        for command in COMMANDS:
+            if command.group == group:
+                keys = ", ".join(f"`{key_text(key)}`" for key in command.keys)
+                lines.append(f"| {keys} | {command.label} |")
+    return "\n".join(lines)

@@ -1,0 +1,484 @@
+"""The desk: what is on the screen and what a key does to it, without a screen.
+
+Every key of the program arrives at ``Desk.key``, one after the other, whatever is open: the grid, the editor in a cell,
+a list to choose from, a question. So a burst of keys always lands where the user meant it. The desk draws nothing
+(``paint`` does) and calculates nothing (a worker does); it is tested by typing.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Any
+
+from budget.engine.model import LINES
+from budget.project import edits
+from budget.project.document import Document, Path
+from budget.project.problems import ProjectError
+from budget.report import change
+from budget.session import Outcome, Session
+from budget.ui import commands, fields, layout, lists, sheet
+from budget.ui.commands import COMMANDS, SHEET
+from budget.ui.numbers import Corner
+from budget.ui.sheet import Context
+from budget.ui.view import Cell, Row, Section, View
+
+VIEWS: dict[str, Callable[[Context], View]] = {
+    "sheet": sheet.sheet,
+    "fields": fields.fields,
+    "rules": fields.rules,
+    "loads": lists.loads,
+    "checks": lists.checks,
+    "limits": fields.limits,
+    "shelf": fields.shelf,
+    "project": fields.project,
+    "faults": lists.faults,
+    "help": lists.help_view,
+}
+LONGEST = 2000  # characters of one cell; more is cut when pasted
+
+
+@dataclass(slots=True)
+class Cursor:
+    """Where the cursor stands in one view; the row is found again by its key, else by its number."""
+
+    key: tuple[Any, ...] = ()
+    index: int = 0
+    column: int = 0
+    top: int = 0
+    left: int = 0
+
+
+@dataclass(frozen=True, slots=True)
+class Spot:
+    """A place of the cursor as the history remembers it."""
+
+    view: str
+    subject: Path
+    key: tuple[Any, ...]
+    index: int
+    column: int
+
+
+@dataclass(slots=True)
+class Edit:
+    """Text being typed, in a cell (``path``) or as the answer to a question (``label``)."""
+
+    text: str
+    caret: int
+    accept: Callable[[str], None]  # raises ProjectError where the text cannot be taken
+    label: str = ""
+    path: Path | None = None
+    error: str = ""
+    refused: str = ""  # why nothing can be typed here; the keys are swallowed all the same
+
+
+@dataclass(slots=True)
+class Pick:
+    """A list to choose from; typing narrows it."""
+
+    title: str
+    items: list[tuple[str, Any]]
+    accept: Callable[[Any], None]
+    query: str = ""
+    index: int = 0
+
+    def shown(self) -> list[tuple[str, Any]]:
+        words = self.query.lower().split()
+        return [item for item in self.items if all(w in item[0].lower() for w in words)]
+
+
+@dataclass(slots=True)
+class Ask:
+    """A question answered by one key."""
+
+    question: str
+    options: dict[str, tuple[str, Callable[[], None]]]
+
+
+@dataclass(slots=True)
+class Desk:
+    session: Session
+    ascii_only: bool = False
+    width: int = 80
+    height: int = 24
+    view_name: str = SHEET
+    subject: Path = ("bus",)
+    cursors: dict[tuple[str, Path], Cursor] = field(default_factory=dict)
+    mode: Edit | Pick | Ask | None = None
+    message: str = ""
+    tone: str = ""
+    corner: Corner | None = None
+    pending: bool = True  # results are late enough to look stale
+    cell_clip: str = ""
+    row_clip: tuple[str, Any] | None = None
+    calculate: Callable[[], None] = lambda: None
+    leave: Callable[[], None] = lambda: None
+    clip: Callable[[str], None] = lambda _: None
+    actions: dict[str, Callable[[Desk], None]] = field(default_factory=dict)
+    label: str = ""  # of the last edit, told with what it changed
+    before: Any = None  # the result before it
+    _made: tuple[Any, View] | None = None
+    _lines: list[tuple[Section, Row | None]] = field(default_factory=list)
+
+    def __post_init__(self) -> None:
+        from budget.ui.actions import ACTIONS
+
+        self.actions = ACTIONS
+
+    # -- what is shown
+
+    @property
+    def cursor(self) -> Cursor:
+        where = (self.view_name, self.subject if self.view_name == "fields" else ())
+        return self.cursors.setdefault(where, Cursor())
+
+    def context(self) -> Context:
+        outcome = self.session.outcome
+        bad = frozenset(edits.cell_of(p.path) for p in outcome.built.errors) if outcome else frozenset()
+        return Context(self.session, self.corner, bad, self.subject, self.ascii_only)
+
+    def view(self) -> View:
+        """The present view, made anew only when something it shows has changed."""
+        key = (self.view_name, self.subject, self.session.generation, id(self.session.outcome), self.corner)
+        if self._made is None or self._made[0] != key:
+            self._made = (key, VIEWS[self.view_name](self.context()))
+            self._lines = self._made[1].flat()
+        return self._made[1]
+
+    def lines(self) -> list[tuple[Section, Row | None]]:
+        self.view()
+        return self._lines
+
+    def row_index(self) -> int:
+        """The line the cursor is on: where its row is now, or the nearest row to where it was."""
+        lines, cursor = self.lines(), self.cursor
+        at = cursor.index
+        if not (0 <= at < len(lines) and (row := lines[at][1]) is not None and row.key == cursor.key):
+            found = [i for i, (_, row) in enumerate(lines) if row is not None and row.key == cursor.key]
+            rows = [i for i, (_, row) in enumerate(lines) if row is not None]
+            at = found[0] if found else min(rows, key=lambda i: abs(i - at), default=0)
+        self._stand(at)
+        return at
+
+    def _stand(self, at: int) -> None:
+        cursor, lines = self.cursor, self.lines()
+        row = lines[at][1] if 0 <= at < len(lines) else None
+        cursor.index, cursor.key = at, row.key if row else ()
+
+    def here(self) -> tuple[Row | None, Cell]:
+        """The row and the cell under the cursor."""
+        lines = self.lines()
+        if not lines:
+            return None, Cell()
+        row = lines[self.row_index()][1]
+        if row is None:
+            return None, Cell()
+        return row, row.cells[min(self.cursor.column, len(row.cells) - 1)]
+
+    def item(self) -> Path | None:
+        """The thing that row commands act on."""
+        row, cell = self.here()
+        return cell.item or (row.item if row else None)
+
+    def body_height(self) -> int:
+        return max(1, self.height - 5)
+
+    def spot(self) -> Spot:
+        cursor = self.cursor
+        self.row_index()
+        return Spot(self.view_name, self.subject, cursor.key, cursor.index, cursor.column)
+
+    def stand_at(self, spot: Spot) -> None:
+        self.view_name, self.subject = spot.view, spot.subject
+        cursor = self.cursor
+        cursor.key, cursor.index, cursor.column = spot.key, spot.index, spot.column
+
+    # -- what happens
+
+    def say(self, text: str, tone: str = "") -> None:
+        self.message, self.tone = text, tone
+
+    def key(self, name: str, character: str | None = None) -> None:
+        """One key, as textual names it, with the character it types if it types one."""
+        if isinstance(self.mode, Edit):
+            self._edit_key(self.mode, name, character)
+        elif isinstance(self.mode, Pick):
+            self._pick_key(self.mode, name, character)
+        elif isinstance(self.mode, Ask):
+            self._ask_key(self.mode, name)
+        else:
+            self._browse_key(name, character)
+
+    def paste(self, text: str) -> None:
+        """Text pasted by the terminal: into the editor, or as a new text of the cell."""
+        line = next((part for part in text[: 4 * LONGEST].replace("\r", "\n").split("\n") if part.strip()), "")
+        clean = "".join(c if c.isprintable() else " " for c in line).strip()[:LONGEST]
+        if not clean:
+            return
+        if self.mode is None:
+            self.start_edit("")
+        if isinstance(self.mode, Edit) and not self.mode.refused:
+            edit = self.mode
+            edit.text = (edit.text[: edit.caret] + clean + edit.text[edit.caret :])[:LONGEST]
+            edit.caret = min(edit.caret + len(clean), len(edit.text))
+        elif isinstance(self.mode, Pick):
+            self.mode.query += clean[:40]
+
+    def accept(self, outcome: Outcome) -> bool:
+        """Take results; tell what the last edit changed."""
+        if not self.session.accept(outcome):
+            return False
+        self.pending = False
+        if self.label:
+            told = change.describe(self.before, outcome.result)
+            self.say(f"{self.label}: {told}" if told else self.label)
+            self.label = ""
+        self.before = outcome.result
+        return True
+
+    def change(self, label: str, document: Document, spot: Spot | None = None) -> bool:
+        """Make an edit: one step of history, and a new calculation."""
+        if not self.session.apply(label, document, spot or self.spot()):
+            self.say("nothing changed")
+            return False
+        self.changed(label)
+        return True
+
+    def changed(self, label: str) -> None:
+        self.label = label
+        self.say(f"{label}: calculating")
+        self.calculate()
+
+    # -- keys by mode
+
+    def _browse_key(self, name: str, character: str | None) -> None:
+        if character is not None and character in commands.STARTS_NUMBER:
+            self.start_edit(character)
+            return
+        command = commands.BY_KEY.get(name) or commands.BY_KEY.get(character or "")
+        if command is None:
+            self.say(f"no command on the key {character or name}; ? shows all keys" if character else "")
+            return
+        if command.group != "move":
+            self.say("")
+        self.run(command.name)
+
+    def run(self, name: str) -> None:
+        """Carry out a command; what it cannot do is said on the message line."""
+        try:
+            self.actions[name](self)
+        except ProjectError as error:
+            self.say(str(error), "fail")
+
+    def start_edit(self, text: str | None = None) -> None:
+        """Open the editor in the cell: with ``text`` in place of its value, or (None) with what was typed before."""
+        _, cell = self.here()
+        path = cell.path
+        if path is None:
+            why = "this cell is calculated" if cell.calculated else "this cell cannot be typed into"
+            if text is not None:
+                hint = "; Esc, then Enter, goes to what it follows from" if cell.leads else ""
+                self.mode = Edit("", 0, _nothing, refused=why + hint)
+            return
+        if text is None:
+            value, _ = edits.value_at(self.session.document, self.session.shelves, path)
+            text = edits.typed(value)
+        self.mode = Edit(text, len(text), lambda typed: self._enter(path, typed), path=path)
+
+    def _enter(self, path: Path, text: str) -> None:
+        spot = self.spot()
+        if self.session.enter(path, text, spot):
+            self.changed(self.session.done[-1].label)
+
+    def prompt(self, label: str, text: str, accept: Callable[[str], None]) -> None:
+        self.mode = Edit(text, len(text), accept, label)
+
+    def _edit_key(self, edit: Edit, name: str, character: str | None) -> None:
+        if name == "escape":
+            self.mode = None
+            self.say("")
+        elif name in ("enter", "tab", "shift+tab", "up", "down"):
+            self._commit(edit, name)
+        elif edit.refused:
+            return
+        elif name == "left":
+            edit.caret = max(0, edit.caret - 1)
+        elif name == "right":
+            edit.caret = min(len(edit.text), edit.caret + 1)
+        elif name == "home":
+            edit.caret = 0
+        elif name == "end":
+            edit.caret = len(edit.text)
+        elif name in ("backspace", "ctrl+h") and edit.caret:
+            edit.text = edit.text[: edit.caret - 1] + edit.text[edit.caret :]
+            edit.caret -= 1
+        elif name == "delete":
+            edit.text = edit.text[: edit.caret] + edit.text[edit.caret + 1 :]
+        elif name == "ctrl+u":
+            edit.text, edit.caret = edit.text[edit.caret :], 0
+        elif name == "ctrl+v":
+            self.paste(self.cell_clip)
+        elif character and character.isprintable() and len(edit.text) < LONGEST:
+            edit.text = edit.text[: edit.caret] + character + edit.text[edit.caret :]
+            edit.caret += 1
+        if not edit.refused and name not in ("enter", "tab", "shift+tab", "up", "down"):
+            edit.error = ""
+
+    def _commit(self, edit: Edit, name: str) -> None:
+        if edit.refused:
+            self.mode = None
+            return
+        try:
+            edit.accept(edit.text)
+        except ProjectError as error:
+            edit.error = str(error)
+            return
+        if self.mode is edit:
+            self.mode = None
+        if edit.path is not None:
+            self.move({"enter": "down", "tab": "right", "shift+tab": "left"}.get(name, name))
+
+    def pick(self, title: str, items: list[tuple[str, Any]], accept: Callable[[Any], None], at: int = 0) -> None:
+        if not items:
+            raise ProjectError(f"{title}: there is nothing to choose from.")
+        self.mode = Pick(title, items, accept, index=at)
+
+    def _pick_key(self, pick: Pick, name: str, character: str | None) -> None:
+        shown = pick.shown()
+        if name == "escape":
+            self.mode = None
+        elif name in ("down", "tab"):
+            pick.index = min(pick.index + 1, max(0, len(shown) - 1))
+        elif name in ("up", "shift+tab"):
+            pick.index = max(0, pick.index - 1)
+        elif name in ("pagedown", "end"):
+            pick.index = max(0, len(shown) - 1) if name == "end" else min(pick.index + 10, max(0, len(shown) - 1))
+        elif name in ("pageup", "home"):
+            pick.index = 0 if name == "home" else max(0, pick.index - 10)
+        elif name == "enter":
+            if not shown:
+                return
+            self.mode = None
+            try:
+                pick.accept(shown[min(pick.index, len(shown) - 1)][1])
+            except ProjectError as error:
+                self.say(str(error), "fail")
+        elif name in ("backspace", "ctrl+h"):
+            pick.query, pick.index = pick.query[:-1], 0
+        elif character and character.isprintable() and len(pick.query) < 40:
+            pick.query, pick.index = pick.query + character, 0
+
+    def ask(self, question: str, options: dict[str, tuple[str, Callable[[], None]]]) -> None:
+        self.mode = Ask(question, options)
+
+    def _ask_key(self, ask: Ask, name: str) -> None:
+        if name == "escape":
+            self.mode = None
+            self.say("")
+        elif name in ask.options:
+            self.mode = None
+            try:
+                ask.options[name][1]()
+            except ProjectError as error:
+                self.say(str(error), "fail")
+
+    # -- moving
+
+    def move(self, where: str) -> None:
+        lines, cursor = self.lines(), self.cursor
+        at = self.row_index()
+        rows = [i for i, (_, row) in enumerate(lines) if row is not None]
+        if not rows:
+            return
+        row = lines[at][1]
+        last = len(row.cells) - 1 if row else 0
+        n = rows.index(at) if at in rows else 0
+        column = min(cursor.column, last)
+        page = max(1, self.body_height() - 2)
+        steps = {"up": -1, "down": 1, "page_up": -page, "page_down": page}
+        if where in steps:
+            self._stand(rows[max(0, min(len(rows) - 1, n + steps[where]))])
+            return  # the column stays as it was, also past the end of a short row
+        if where == "left":
+            cursor.column = max(0, column - 1)
+        elif where == "right":
+            cursor.column = min(last, column + 1)
+        elif where == "first":
+            cursor.column = 0
+        elif where == "last":
+            cursor.column = last
+
+    def scroll(self, width: int, height: int) -> None:
+        """Bring the cursor into sight of ``height`` lines of the grid; headings above its row stay in sight with it."""
+        lines, cursor = self.lines(), self.cursor
+        at = self.row_index()
+        one = len(self.view().sections) == 1  # a single heading is pinned and takes a line of its own
+        top = cursor.top
+        room = height - 1 if one else height
+        first = at - 1 if at and lines[at - 1][1] is None else at
+        if one:
+            first = at
+        low = 1 if one else 0
+        top = max(low, min(top, first))
+        if at - top + 1 > room:
+            top = at - room + 1
+        cursor.top = max(low, min(top, max(low, len(lines) - room)))
+        section = lines[at][0] if lines else None
+        if section:
+            cursor.left = layout.scroll_to(section, width, cursor.left, cursor.column)
+
+    def go_to(self, path: Path) -> None:
+        """Show the cell at ``path`` in the view where it can be changed."""
+        base = edits.owner(path)
+        head = str(path[0]) if path else "bus"
+        if head == "case" and len(path) > 1:
+            self.view_name = "loads"
+            self.cursor.key = (
+                ("load", path[3]) if len(path) > 3 else ("case-field", path[2] if len(path) > 2 else "name")
+            )
+            self.cursor.column = int(path[1]) + 1
+            return
+        views = {"rules": "rules", "project": "project", "shelf_files": "project", "limit": "limits"}
+        self.view_name = views.get(head, "fields")
+        if self.view_name == "fields":
+            self.subject = base if head in ("bus", "filter", "converter", "shelf") else ("bus",)
+        keys = {row.key for _, row in self.lines() if row is not None}
+        n = len(path)
+        while n > 0 and path[:n] not in keys:
+            n -= 1
+        cursor = self.cursor
+        if n:
+            cursor.key = path[:n]
+        cursor.column = 1
+        row, _ = self.here()
+        for column, cell in enumerate(row.cells if row else ()):
+            if cell.path == path:
+                cursor.column = column
+
+    def corner_title(self) -> str:
+        if self.corner is not None:
+            return f"{self.corner[0]}, {self.corner[1]} line"
+        result = self.session.result
+        count = len(result.project.cases) * len(LINES) if result else 0
+        return f"worst of {count} corners" if count else "worst of all corners"
+
+    def hint_pairs(self) -> list[tuple[str, str]]:
+        """(key, word) of what can be done now."""
+        if isinstance(self.mode, Edit):
+            return [("Enter", "accept"), ("Esc", "cancel"), ("Home/End", "move"), ("Ctrl+U", "clear")]
+        if isinstance(self.mode, Pick):
+            return [("Up/Down", "choose"), ("Enter", "take"), ("type", "to narrow"), ("Esc", "cancel")]
+        if isinstance(self.mode, Ask):
+            return [(commands.key_text(k), label) for k, (label, _) in self.mode.options.items()] + [("Esc", "go back")]
+        pairs = commands.hints(self.view_name)
+        return pairs if self.view_name == SHEET else [("Esc", "sheet"), *pairs]
+
+
+def _nothing(_: str) -> None:
+    return
+
+
+def command_items() -> list[tuple[str, str]]:
+    """All commands for the list of commands."""
+    return [(f"{commands.keys_text(c):<18} {c.label}", c.name) for c in COMMANDS]

@@ -1,0 +1,149 @@
+"""Views that list: the load cases by converters, the checks, what cannot be read, and the help."""
+
+from __future__ import annotations
+
+from budget.project import edits, schema
+from budget.project.document import Path
+from budget.report import words
+from budget.ui import commands
+from budget.ui.sheet import Context, behind, rows_of, value_cell, words_only
+from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
+
+
+def loads(context: Context) -> View:
+    """The load-case matrix: converters down, cases across."""
+    document = context.session.document
+    cases = rows_of(document, "case")
+    columns = [Column("converter", 20, most=30)]
+    columns += [Column(words_only(str(case.get("id", f"case {k + 1}"))), 11, RIGHT, most=16) for k, case in cases]
+    rows = []
+    for key in ("name", "duration", "note"):
+        spec = schema.CASE.field(key)
+        assert spec is not None
+        head = Cell(spec.title, tone="head", info=spec.help)
+        cells = [_in_case(value_cell(context, ("case", k, key)), k) for k, _ in cases]
+        rows.append(Row(("case-field", key), (head, *cells)))
+    for _, unit in rows_of(document, "converter"):
+        ident = str(unit.get("id", "?"))
+        head = Cell(words_only(f"{ident} {unit.get('name', '')}".strip()))
+        cells = [_in_case(value_cell(context, ("case", k, "load", ident)), k) for k, _ in cases]
+        rows.append(Row(("load", ident), (head, *cells)))
+    if not cases:
+        columns.append(Column("full", 40))
+        note = Cell("everything at 100 %; n adds a load case", tone="pale", item=("case",))
+        rows = [Row(r.key, (r.cells[0], note)) for r in rows]
+    return View("loads", "load cases: what each converter delivers", (Section(tuple(columns), tuple(rows)),))
+
+
+def _in_case(cell: Cell, index: int) -> Cell:
+    return Cell(cell.text, cell.path, RIGHT, cell.tone, cell.mark, cell.info, item=("case", index))
+
+
+def checks(context: Context) -> View:
+    """All checks from worst to best; Enter goes to the cell behind one."""
+    result = context.session.result
+    rows = []
+    for row in words.by_severity(result.checks if result else ()):
+        lead = behind(row, context.session.document)
+        info = words.sentence(row)
+        status = "FAIL" if row.status == "fail" else row.status
+        texts = (
+            (status, "left"),
+            (row.check, "left"),
+            (row.subject, "left"),
+            (words.show(row.value, row.unit), RIGHT),
+            (words.show(row.limit, row.unit), RIGHT),
+            (words.margin(row), RIGHT),
+            (", ".join(w for w in (row.case, row.line) if w), "left"),
+            (words.note(row), "left"),
+        )
+        cells = tuple(
+            Cell(words_only(t), None, align, row.status if not k else "", "", info, leads=lead, calculated=True)
+            for k, (t, align) in enumerate(texts)
+        )
+        rows.append(Row(("check", row.check, row.subject), cells))
+    if not rows:
+        rows.append(Row(("none",), (Cell("~" if context.session.outcome is None else "nothing to check"),)))
+    columns = (
+        Column("state", 7),
+        Column("check", 15),
+        Column("of", 8, most=14),
+        Column("value", 8, RIGHT),
+        Column("limit", 8, RIGHT),
+        Column("margin", 11, RIGHT),
+        Column("where", 16, most=24),
+        Column("note", 20, most=60),
+    )
+    return View("checks", "checks, worst first", (Section(columns, tuple(rows)),))
+
+
+def faults(context: Context) -> View:
+    """What is wrong with the entries, and warnings; Enter goes to the cell."""
+    outcome = context.session.outcome
+    rows = []
+    for k, p in enumerate(outcome.built.problems if outcome else ()):
+        lead = edits.cell_of(p.path)
+        cells = (
+            Cell("error" if p.error else "warning", tone="fail" if p.error else "thin", info=p.sentence()),
+            Cell(": ".join(x for x in (p.source, p.place) if x)),
+            Cell(p.text),
+        )
+        shown = tuple(Cell(words_only(c.text), tone=c.tone, info=p.sentence(), leads=lead) for c in cells)
+        rows.append(Row(("fault", k), shown))
+    for k, code in enumerate(outcome.result.warnings if outcome and outcome.result else ()):
+        text = words.engine_warning(code)
+        rows.append(
+            Row(("warning", k), (Cell("warning", tone="thin", info=text), Cell(code[1]), Cell(text, info=text)))
+        )
+    if not rows:
+        rows.append(Row(("none",), (Cell("nothing: every cell can be read"),)))
+    columns = (Column("kind", 8), Column("where", 24, most=36), Column("what", 44, most=110))
+    return View("faults", "cells that cannot be read, and warnings", (Section(columns, tuple(rows)),))
+
+
+GLOSSARY = (
+    ("corner", "one load case at one line: low, nominal or high voltage of the source"),
+    ("worst", "the corner with the least margin; the default of every view"),
+    ("allowed", "rated current of a filter, derated for the mounting temperature"),
+    ("wanted", "what the rules leave of a limit: thin is inside the limit, beyond the wanted"),
+    ("out, in", "output power at the rails; input power at the terminals (a filter: of all behind it)"),
+    ("heat", "what does not come out again: converter and lead; a filter's row adds all behind it"),
+    ("at V", "voltage at the terminals; of a filter: behind it; of the bus: where filters are tied"),
+    ("marks", "! cannot be read or over   ~ being calculated   * not saved   FAIL, thin, ok, no data"),
+    ("typing", "2.2 uH, 4.5 A, 85 %, off; 4.7u takes the unit of its field; 2 * 1.5 A + 200 mA adds up"),
+)
+
+
+def help_view(context: Context) -> View:
+    """Every key, the words used, and the cautions."""
+    rows: list[Row] = []
+
+    def line(key: str, text: str, tone: str = "") -> None:
+        rows.append(Row(("help", len(rows)), (Cell(key, tone="head"), Cell(text, tone=tone))))
+
+    for caution in words.CAUTION:
+        line("caution", caution, "thin")
+    for group, title in commands.GROUPS.items():
+        line("", "")
+        line(title, "")
+        for command in commands.COMMANDS:
+            if command.group == group:
+                line(commands.keys_text(command), command.label)
+    line("", "")
+    line("Words", "")
+    for word, meaning in GLOSSARY:
+        line(word, meaning)
+    return View(
+        "help",
+        "help: Esc goes back",
+        (Section((Column("keys", 18), Column("what they do", 60, most=110)), tuple(rows)),),
+    )
+
+
+def subjects(context: Context) -> list[tuple[str, Path]]:
+    """Everything that can be gone to by name: id and name, and the row."""
+    found: list[tuple[str, Path]] = [("bus", ("bus",))]
+    for key in ("filter", "converter"):
+        for index, row in rows_of(context.session.document, key):
+            found.append((words_only(f"{row.get('id', '?')} {row.get('name', '')}".strip()), (key, index)))
+    return found

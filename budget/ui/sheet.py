@@ -1,0 +1,330 @@
+"""The main view: the bus, each filter with its converters beneath it, and what is not allocated."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+from budget import quantity
+from budget.project import document as doc
+from budget.project import edits
+from budget.project.document import Path
+from budget.report import words
+from budget.session import Session
+from budget.ui.numbers import Corner, Number, Numbers, numbers
+from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
+
+if TYPE_CHECKING:
+    from budget.engine.checks import CheckRow
+
+PENDING = "~"
+BAR = 5
+
+COLUMNS = (
+    Column("bus, filter, converter", 17, most=30, wide=24),
+    Column("out W", 6, RIGHT),
+    Column("in W", 6, RIGHT),
+    Column("in A", 6, RIGHT),
+    Column("of allowed", 11, RIGHT),
+    Column("at V", 6, RIGHT),
+    Column("heat W", 6, RIGHT),
+    Column("worst check", 15, most=34, wide=26),
+    Column("rated", 7, RIGHT),
+    Column("filter", 7),
+    Column("load", 7, RIGHT),
+    Column("lead R", 8, RIGHT),
+    Column("note", 12, most=30),
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Context:
+    """What a view is made from: the session, the corner shown, the cells that cannot be read, the subject in focus."""
+
+    session: Session
+    corner: Corner | None
+    bad: frozenset[Path]
+    subject: Path
+    ascii_only: bool = False
+
+
+def figure(value: float | None, unit: str) -> str:
+    """A number for a column whose heading names the unit: only the prefix stays with it."""
+    if value is None:
+        return ""
+    number, scaled = quantity.show_parts(value, quantity.KINDS[{"W": "power", "A": "current", "V": "voltage"}[unit]])
+    return number + scaled.removesuffix(unit)
+
+
+def bar(share: float, ascii_only: bool) -> str:
+    """A share as a small bar with its number; more than all of it is marked."""
+    full, empty = ("#", ".") if ascii_only else ("\u2588", "\u2591")
+    filled = max(0, min(BAR, round(share * BAR)))
+    percent = f"{share * 100:.0f}" if share < 99.995 else ">9999"
+    return f"{full * filled}{empty * (BAR - filled)} {percent + '%':>5}"
+
+
+def sheet(context: Context) -> View:
+    """The sheet as a view; it works without results too, with every calculated cell pending."""
+    maker = _Maker(context)
+    document = context.session.document
+    rows = [maker.bus()]
+    filters = rows_of(document, "filter")
+    converters = rows_of(document, "converter")
+    known = {f.get("id") for _, f in filters}
+    for index, part in filters:
+        rows.append(maker.filter(index, part))
+        rows += [maker.converter(n, unit) for n, unit in converters if unit.get("filter") == part.get("id")]
+    loose = [(n, unit) for n, unit in converters if unit.get("filter", "") not in known or not unit.get("filter")]
+    if loose:
+        rows.append(
+            Row(("loose",), (Cell("not allocated", tone="head", info="These draw nothing: give each a filter."),))
+        )
+        rows += [maker.converter(n, unit) for n, unit in loose]
+    return View("sheet", "sheet", (Section(COLUMNS, tuple(rows)),))
+
+
+def rows_of(document: doc.Document, key: str) -> list[tuple[int, dict[str, Any]]]:
+    """The rows of an array of tables with their indices, whatever else stands there left out."""
+    rows = document.data.get(key)
+    return [(i, r) for i, r in enumerate(rows) if isinstance(r, dict)] if isinstance(rows, list) else []
+
+
+def worst_of(rows: Iterable[CheckRow]) -> CheckRow | None:
+    """The row that matters most; one without data only where there is nothing else."""
+    ranked = words.by_severity(rows)
+    return next((row for row in ranked if row.status != "no data"), ranked[0] if ranked else None)
+
+
+def behind(row: CheckRow, document: doc.Document) -> Path:
+    """The cell that a check leads to: the entry whose change would mend it or give it its data."""
+    keys = {
+        "bus current": "rating",
+        "operating point": "resistance",
+        "filter current": "rated_current",
+        "filter voltage": "max_voltage",
+        "allocation": "filter",
+        "converter load": "rated_power",
+        "input low": "min_input",
+        "input high": "max_input",
+    }
+    key = keys.get(row.check, "note")
+    if row.subject == "bus":
+        return ("bus", key)
+    for table in ("filter", "converter"):
+        for index, entry in rows_of(document, table):
+            if entry.get("id") == row.subject:
+                missing = [m.split(".")[-1] for m in row.missing if m.startswith(table)]
+                return (table, index, missing[0] if missing else key)
+    return ("bus", "low")
+
+
+class _Maker:
+    """Makes rows; holds the numbers of the corner and the checks by subject."""
+
+    def __init__(self, context: Context) -> None:
+        self.context = context
+        self.session = context.session
+        result = self.session.result
+        self.numbers: Numbers | None = numbers(result, context.corner) if result else None
+        self.place: dict[str, dict[str, int]] = {
+            "filter": {f.id: k for k, f in enumerate(result.project.filters)} if result else {},
+            "converter": {c.id: k for k, c in enumerate(result.project.converters)} if result else {},
+        }
+        self.checks: dict[str, list[CheckRow]] = {}
+        for row in result.checks if result else ():
+            self.checks.setdefault(row.subject, []).append(row)
+        self.outcome = self.session.outcome is not None
+
+    def bus(self) -> Row:
+        data = self.session.document.data.get("bus")
+        name = data.get("name", "") if isinstance(data, dict) else ""
+        found = self.numbers.bus if self.numbers else {}
+        rating = self.session.result.project.bus.rating if self.session.result else None
+        line = self.context.corner[1] if self.context.corner else None
+        cells = (
+            self.name(("bus",), f"bus {edits.typed(name)}".strip(), ("bus", "name")),
+            *self.flow(found, rating, ("bus",), "bus", 0, ("bus", line) if line else None),
+            self.check("bus", ("bus",)),
+            self.typed(("bus", "rating")),
+            Cell(),
+            Cell(),
+            self.typed(("bus", "resistance")),
+            self.typed(("bus", "note"), "left"),
+        )
+        return Row(("bus",), cells, ("bus",))
+
+    def filter(self, index: int, part: dict[str, Any]) -> Row:
+        path: Path = ("filter", index)
+        ident = part.get("id")
+        k = self.place["filter"].get(ident) if isinstance(ident, str) else None
+        found = self.numbers.filters[k] if self.numbers and k is not None else {}
+        allowed = self.numbers.allowed[k] if self.numbers and k is not None else None
+        cells = (
+            self.name(path, f"{ident or '?'} {part.get('name', '')}".strip(), (*path, "name")),
+            *self.flow(found, allowed, path, "filter", k, None),
+            self.check(ident, path),
+            self.typed((*path, "rated_current")),
+            Cell(),
+            Cell(),
+            Cell(),
+            self.typed((*path, "note"), "left"),
+        )
+        return Row(path, cells, path)
+
+    def converter(self, index: int, unit: dict[str, Any]) -> Row:
+        path: Path = ("converter", index)
+        ident = unit.get("id")
+        k = self.place["converter"].get(ident) if isinstance(ident, str) else None
+        found = self.numbers.converters[k] if self.numbers and k is not None else {}
+        home = self.place["filter"].get(str(unit.get("filter", "")))
+        allowed = self.numbers.allowed[home] if self.numbers and home is not None else None
+        cells = (
+            self.name(path, f"{ident or '?'} {unit.get('name', '')}".strip(), (*path, "name")),
+            *self.flow(found, allowed, path, "converter", k, None),
+            self.check(ident, path),
+            self.typed((*path, "rated_power")),
+            self.typed((*path, "filter"), "left"),
+            self.load(ident),
+            self.typed((*path, "lead", "R")),
+            self.typed((*path, "note"), "left"),
+        )
+        return Row(path, cells, path, depth=1)
+
+    def name(self, path: Path, text: str, cell: Path) -> Cell:
+        bad = any(p[: len(path)] == path for p in self.context.bad)
+        tone = "head" if path[0] != "converter" else ""
+        return Cell(words_only(text), cell, tone=tone, mark="!" if bad else "")
+
+    def flow(
+        self,
+        found: dict[str, Number],
+        allowed: float | None,
+        path: Path,
+        kind: str,
+        index: int | None,
+        volts: Path | None,
+    ) -> tuple[Cell, ...]:
+        """The calculated cells of a row: out, in, current, share, voltage, heat."""
+        lead: Path = (*path, "output", 0, "current") if kind == "converter" else (*path, "name")
+        at = {"bus": "voltage where the filters are tied", "filter": "voltage behind it"}
+        labels = {
+            "out": ("W", "output power"),
+            "taken": ("W", "input power"),
+            "current": ("A", "input current"),
+            "voltage": ("V", at.get(kind, "voltage at its terminals")),
+            "heat": ("W", "heat"),
+        }
+        cells: dict[str, Cell] = {}
+        for key, (unit, what) in labels.items():
+            number = found.get(key)
+            info = ""
+            if number:
+                info = f"{what} {words.show(number.value, unit)}" + (f" in {number.corner}" if number.corner else "")
+                if key == "heat" and self.numbers and index is not None:
+                    info += f": {self.numbers.heat.get((kind, index), '')}"
+            text = figure(number.value, unit) if number else self.none()
+            cells[key] = Cell(text, align=RIGHT, info=info, leads=lead, calculated=True)
+        if volts:
+            cells["voltage"] = Cell(
+                cells["voltage"].text, align=RIGHT, info=cells["voltage"].info, leads=volts, calculated=True
+            )
+        current = found.get("current")
+        share = Cell("", align=RIGHT, calculated=True)
+        if current and allowed is not None:
+            ratio = current.value / allowed if allowed > 0 else (0.0 if current.value == 0 else 1e9)
+            of = {"bus": "bus rating", "filter": "allowed current"}.get(kind, "current its filter allows")
+            info = f"{words.show(current.value, 'A')} of {words.show(allowed, 'A')}, the {of}"
+            info += f", in {current.corner}" if current.corner else ""
+            tone = "fail" if ratio > 1 and kind != "converter" else ""
+            if kind != "converter":
+                lead = (*path, "rating" if kind == "bus" else "rated_current")
+            share = Cell(bar(ratio, self.context.ascii_only), None, RIGHT, tone, "", info, leads=lead, calculated=True)
+        elif not self.outcome:
+            share = Cell(PENDING, align=RIGHT, calculated=True)
+        return cells["out"], cells["taken"], cells["current"], share, cells["voltage"], cells["heat"]
+
+    def none(self) -> str:
+        return "-" if self.outcome else PENDING
+
+    def check(self, ident: Any, path: Path) -> Cell:
+        rows = self.checks.get(ident, []) if isinstance(ident, str) else []
+        row = worst_of(rows)
+        if row is None:
+            text = ("left out" if self.outcome else PENDING) if path != ("bus",) or self.outcome else PENDING
+            return Cell(text, calculated=True, leads=(*path, "name"))
+        lead = behind(row, self.session.document)
+        brief = "FAIL" if row.status == "fail" else row.status
+        text = f"{brief} {words.short(row.check)}"
+        info = words.sentence(row)
+        lacking = sum(r.status == "no data" for r in rows)
+        if lacking and row.status != "no data":
+            info += f"; {lacking} without data"
+        return Cell(words.verdict(row), None, "left", row.status, "", info, text, leads=lead, calculated=True)
+
+    def typed(self, path: Path, align: str = RIGHT) -> Cell:
+        return value_cell(self.context, path, align)
+
+    def load(self, ident: Any) -> Cell:
+        corner = self.context.corner
+        if corner is None:
+            return Cell("", info="the load of one case: choose a case with o, or see all of them with l")
+        for index, case in rows_of(self.session.document, "case"):
+            if case.get("id") == corner[0]:
+                return value_cell(self.context, ("case", index, "load", str(ident)), RIGHT)
+        return Cell("")
+
+
+def words_only(text: str) -> str:
+    """Text of the file for the screen: control characters become ``?``."""
+    return "".join(c if c.isprintable() else "?" for c in text)
+
+
+def value_cell(context: Context, path: Path, align: str = RIGHT) -> Cell:
+    """A cell for the value at ``path``: scaled if it can be read, as typed if not, its default in a paler tone."""
+    session = context.session
+    spec = edits.spec_at(path)
+    value, lent = edits.value_at(session.document, session.shelves, path)
+    if spec is None:
+        return Cell(words_only(edits.typed(value)), align=align)
+    bad = path in context.bad
+    text = words_only(edits.typed(value))
+    info = f"as typed: {text}" if text else ""
+    tone = "lent" if lent else ""
+    if value is None or value == "":
+        tone, text = "pale", default_text(spec)
+        info = "not entered" + (f"; taken as {text}" if text else "")
+    elif not bad:
+        shown = scaled(spec, value)
+        text = text if shown is None else shown
+    if lent:
+        info += "; from the shelf"
+    return Cell(text, path, align, tone, "!" if bad else "", info)
+
+
+def scaled(spec: Any, value: Any) -> str | None:
+    """A stored value in engineering units, None where it is no quantity or cannot be read."""
+    from budget.project import read, schema
+
+    try:
+        if spec is schema.LOAD:
+            kind, number = read.read_load(value)
+            if kind == "off":
+                return "off"
+            return quantity.show(number, quantity.KINDS["power" if kind == "power" else "ratio"])
+        cell = spec.fields[-1] if spec.kind == schema.CURVE and not isinstance(value, list) else spec
+        if cell.kind in quantity.KINDS:
+            return quantity.show(read.quantity_value(cell, value), quantity.KINDS[cell.kind])
+    except ValueError:
+        return None
+    return None
+
+
+def default_text(spec: Any) -> str:
+    """The default of a field in words."""
+    if isinstance(spec.default, float) and spec.kind in quantity.KINDS:
+        return quantity.show(spec.default, quantity.KINDS[spec.kind])
+    if isinstance(spec.default, str):
+        return spec.default
+    return spec.otherwise.replace("_", " ") if spec.otherwise else ""
