@@ -64,7 +64,10 @@ def _name(row: CheckRow) -> str:
 def _values(one: CheckRow, two: CheckRow) -> str:
     """'FL2 current 7.4 A -> 8.1 A', empty where the numbers shown are the same."""
     a, b = words.show(one.value, one.unit), words.show(two.value, two.unit)
-    return f"{_name(two)} {a} -> {b}" if a and b and a != b else ""
+    if a and b and a != b:
+        return f"{_name(two)} {a} -> {b}"
+    before, after = words.show(one.limit, one.unit), words.show(two.limit, two.unit)
+    return f"{_name(two)} limit {before or 'none'} -> {after or 'none'}" if before != after else ""
 
 
 def _state(one: CheckRow, two: CheckRow) -> str:

@@ -75,10 +75,27 @@ def verdict(row: CheckRow) -> str:
     return " ".join(w for w in (status, name, margin(row)) if w)
 
 
+_SHORT = {
+    "filter current": "current",
+    "bus current": "current",
+    "filter voltage": "voltage",
+    "converter load": "load",
+    "input low": "low V",
+    "input high": "high V",
+}
+
+
 def short(check: str) -> str:
     """A check's name for a narrow column."""
-    names = {"filter current": "current", "bus current": "current", "filter voltage": "voltage"}
-    return names.get(check, "load" if check == "converter load" else check)
+    return _SHORT.get(check, check)
+
+
+def brief(row: CheckRow) -> str:
+    """A row in 16 characters: 'FAIL 5% current', 'ok 24% load'."""
+    status = "FAIL" if row.status == "fail" else row.status
+    if row.margin is None or row.margin_unit != "ratio":
+        return f"{status} {short(row.check)}"
+    return f"{status} {abs(row.margin) * 100:.0f}% {short(row.check)}"
 
 
 def sentence(row: CheckRow) -> str:

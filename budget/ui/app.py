@@ -31,6 +31,7 @@ STYLES: dict[str, Style] = {
     "": Style(),
     "head": Style(bold=True),
     "heading": Style(bold=True, underline=True),
+    "panel": Style(bold=True, reverse=True),
     "pale": Style(dim=True),
     "lent": Style(italic=True),
     "bar": Style(reverse=True),

@@ -11,8 +11,8 @@ SHEET, LOADS, LISTS, ALL = "sheet", "loads", "lists", "all"
 class Command:
     """One command: ``name`` is the method of the desk that does it, ``keys`` as textual names them.
 
-    The first key is one that arrives on every terminal; ``hint`` is its word on the hint line ("" keeps it off), and
-    ``where`` the views in which it means something.
+    The first key is one that arrives on every terminal; ``hint`` is its word on the hint line ("" keeps it off), in the
+    order of ``rank``, and ``where`` the views in which it means something.
     """
 
     name: str
@@ -21,6 +21,7 @@ class Command:
     group: str
     hint: str = ""
     where: tuple[str, ...] = (ALL,)
+    rank: int = 50
 
 
 COMMANDS: tuple[Command, ...] = (
@@ -33,15 +34,17 @@ COMMANDS: tuple[Command, ...] = (
     Command("page_up", ("pageup",), "one page up", "move"),
     Command("page_down", ("pagedown",), "one page down", "move"),
     Command("find", ("g",), "go to a row by its name", "move"),
-    Command("edit", ("enter",), "edit the cell; on a calculated one, go to what it follows from", "edit", "edit"),
+    Command(
+        "edit", ("enter",), "edit the cell; on a calculated one, go to what it follows from", "edit", "edit", rank=10
+    ),
     Command("empty", ("delete", "backspace"), "empty the cell: back to its default", "edit"),
-    Command("undo", ("u", "ctrl+z"), "undo", "edit", "undo"),
+    Command("undo", ("u", "ctrl+z"), "undo", "edit", "undo", rank=60),
     Command("redo", ("U", "ctrl+y"), "redo", "edit"),
     Command("copy", ("c", "ctrl+c"), "copy the cell", "edit"),
     Command("cut", ("x", "ctrl+x"), "cut the cell", "edit"),
     Command("paste", ("v", "ctrl+v"), "paste the cell", "edit"),
     Command("fill", ("d",), "fill down: take the value of the cell above", "edit"),
-    Command("new", ("n",), "new row after this one (on a filter: a converter behind it)", "rows", "new"),
+    Command("new", ("n",), "new row after this one (on a filter: a converter behind it)", "rows", "new", rank=62),
     Command("new_filter", ("N",), "new filter", "rows", "", (SHEET,)),
     Command("duplicate", ("D",), "duplicate the row", "rows"),
     Command("remove", ("R",), "remove the row", "rows"),
@@ -52,25 +55,25 @@ COMMANDS: tuple[Command, ...] = (
     Command("later", ("]",), "move the row down", "rows"),
     Command("rename", ("e",), "rename its id everywhere", "rows"),
     Command("filter_up", ("<",), "converter behind the filter above", "rows", "", (SHEET,)),
-    Command("filter_down", (">",), "converter behind the filter below", "rows", "other filter", (SHEET,)),
+    Command("filter_down", (">",), "converter behind the filter below", "rows", "next filter", (SHEET,), rank=61),
     Command("to_filter", ("m",), "converter behind a filter from a list", "rows", "", (SHEET,)),
     Command("take_part", ("p",), "take a part from the shelf", "rows", "", (SHEET,)),
-    Command("corner", ("o",), "choose the case and line that are shown", "show", "corner"),
+    Command("corner", ("o",), "choose the case and line that are shown", "show", "corner", rank=22),
     Command("worst", ("O",), "show the worst over all cases and lines", "show"),
     Command("view_sheet", ("s", "escape", "f2"), "the sheet: bus, filters, converters", "show"),
-    Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields"),
+    Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields", rank=20),
     Command("view_rules", ("r", "f4"), "the rules: wanted margins", "show"),
-    Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads"),
-    Command("view_checks", ("k", "f6"), "all checks from worst to best", "show", "checks"),
+    Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads", rank=21),
+    Command("view_checks", ("k", "f6"), "all checks from worst to best", "show", "checks", rank=23),
     Command("view_limits", ("i", "f7"), "emission limit lines of your own", "show"),
     Command("view_shelf", ("h", "f8"), "shelf of reusable parts", "show"),
     Command("view_project", ("t", "f9"), "title, author, shelf files", "show"),
     Command("view_faults", ("b",), "cells that cannot be read, and warnings", "show"),
-    Command("save", ("w", "ctrl+s"), "save", "file", "save"),
+    Command("save", ("w", "ctrl+s"), "save", "file", "save", rank=30),
     Command("save_as", ("W",), "save under another name", "file"),
-    Command("commands", ("space",), "list of all commands", "file", "all commands"),
-    Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help"),
-    Command("quit", ("q", "ctrl+q"), "quit", "file", "quit"),
+    Command("commands", ("space",), "list of all commands", "file", "all commands", rank=63),
+    Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help", rank=31),
+    Command("quit", ("q", "ctrl+q"), "quit", "file", "quit", rank=32),
 )
 
 BY_KEY: dict[str, Command] = {key: command for command in COMMANDS for key in command.keys}
@@ -114,11 +117,8 @@ def keys_text(command: Command) -> str:
 
 def hints(view: str) -> list[tuple[str, str]]:
     """(key, word) for the hint line of a view, most useful first."""
-    return [
-        (key_text(command.keys[0]), command.hint)
-        for command in COMMANDS
-        if command.hint and (ALL in command.where or view in command.where)
-    ]
+    fitting = [c for c in COMMANDS if c.hint and (ALL in c.where or view in c.where)]
+    return [(key_text(c.keys[0]), c.hint) for c in sorted(fitting, key=lambda c: c.rank)]
 
 
 def markdown_table() -> str:

@@ -35,6 +35,7 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "faults": lists.faults,
     "help": lists.help_view,
 }
+FORMS = frozenset({"fields", "rules", "limits", "project", "loads"})  # the first column only names the others
 LONGEST = 2000  # characters of one cell; more is cut when pasted
 
 
@@ -118,7 +119,9 @@ class Desk:
     actions: dict[str, Callable[[Desk], None]] = field(default_factory=dict)
     label: str = ""  # of the last edit, told with what it changed
     before: Any = None  # the result before it
-    _made: tuple[Any, View] | None = None
+    _stamp: Any = None
+    _views: dict[tuple[str, Path], View] = field(default_factory=dict)
+    _flat_of: View | None = None
     _lines: list[tuple[Section, Row | None]] = field(default_factory=list)
 
     def __post_init__(self) -> None:
@@ -131,20 +134,32 @@ class Desk:
     @property
     def cursor(self) -> Cursor:
         where = (self.view_name, self.subject if self.view_name == "fields" else ())
-        return self.cursors.setdefault(where, Cursor())
+        if where not in self.cursors:
+            self.cursors[where] = Cursor(column=1 if self.view_name in FORMS else 0)
+        return self.cursors[where]
 
-    def context(self) -> Context:
+    def context(self, subject: Path | None = None) -> Context:
         outcome = self.session.outcome
         bad = frozenset(edits.cell_of(p.path) for p in outcome.built.errors) if outcome else frozenset()
-        return Context(self.session, self.corner, bad, self.subject, self.ascii_only)
+        return Context(self.session, self.corner, bad, subject or self.subject, self.ascii_only)
 
     def view(self) -> View:
         """The present view, made anew only when something it shows has changed."""
-        key = (self.view_name, self.subject, self.session.generation, id(self.session.outcome), self.corner)
-        if self._made is None or self._made[0] != key:
-            self._made = (key, VIEWS[self.view_name](self.context()))
-            self._lines = self._made[1].flat()
-        return self._made[1]
+        view = self.make(self.view_name, self.subject)
+        if view is not self._flat_of:
+            self._flat_of, self._lines = view, view.flat()
+        return view
+
+    def make(self, name: str, subject: Path) -> View:
+        """A view by its name, from the cache unless something it shows has changed."""
+        stamp = (self.session.generation, id(self.session.outcome), self.corner)
+        if self._stamp != stamp:
+            self._stamp = stamp
+            self._views.clear()
+        key = (name, subject if name == "fields" else ())
+        if key not in self._views:
+            self._views[key] = VIEWS[name](self.context(subject))
+        return self._views[key]
 
     def lines(self) -> list[tuple[Section, Row | None]]:
         self.view()

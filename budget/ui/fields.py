@@ -10,9 +10,9 @@ from budget.project.document import Path
 from budget.project.problems import place
 from budget.project.schema import Field
 from budget.ui.sheet import Context, rows_of, value_cell
-from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
+from budget.ui.view import LEFT, RIGHT, Cell, Column, Row, Section, View
 
-_MAIN = (Column("", 20, most=24), Column("value", 20, RIGHT, most=26), Column("meaning", 36, most=90))
+_MAIN = (Column("", 20, most=24), Column("value", 20, most=26), Column("meaning", 36, most=90))
 
 
 def fields(context: Context) -> View:
@@ -43,13 +43,13 @@ def sections(context: Context, base: Path, specs: tuple[Field, ...], head: str =
             text = "none; n adds it" if value is None or value == [] else "cannot be read"
             plain.append(_line(spec.key, Cell(text, None, RIGHT, "pale", mark, item=path), spec.help, path))
         else:
-            plain.append(_line(spec.title, value_cell(context, path), _meaning(spec), path))
+            plain.append(_line(spec.title, value_cell(context, path, _align(spec)), spec.help, path))
     first = (Column(head, _MAIN[0].width, most=_MAIN[0].most), *_MAIN[1:])
     return (Section(first, tuple(plain)), *lists)
 
 
-def _meaning(spec: Field) -> str:
-    return spec.help
+def _align(spec: Field) -> str:
+    return LEFT if spec.kind in schema.PLAIN else RIGHT
 
 
 def _line(title: str, cell: Cell, meaning: str, path: Path, item: Path | None = None) -> Row:
@@ -63,7 +63,7 @@ def _nested(context: Context, path: Path, spec: Field, value: Any) -> list[Row]:
         return [_line(spec.key, Cell(text, None, RIGHT, "pale", mark, item=path), spec.help, path)]
     rows = []
     for inner in spec.fields:
-        cell = value_cell(context, (*path, inner.key))
+        cell = value_cell(context, (*path, inner.key), _align(inner))
         rows.append(_line(f"{spec.key} {inner.title}", cell, inner.help, (*path, inner.key), path))
     return rows
 
@@ -98,7 +98,7 @@ def rules(context: Context) -> View:
 def project(context: Context) -> View:
     """Title and author, the shelf files, and what the tool is not."""
     first, *rest = sections(context, ("project",), schema.PROJECT.fields)
-    files = _line("shelf files", value_cell(context, ("shelf_files",)), schema.SHELF_FILES.help, ("shelf_files",))
+    files = _line("shelf files", value_cell(context, ("shelf_files",), LEFT), schema.SHELF_FILES.help, ("shelf_files",))
     return View("project", "project", (Section(first.columns, (*first.rows, files)), *rest))
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import textwrap
+
 from budget.project import edits, schema
 from budget.project.document import Path
 from budget.report import words
@@ -32,7 +34,7 @@ def loads(context: Context) -> View:
         columns.append(Column("full", 40))
         note = Cell("everything at 100 %; n adds a load case", tone="pale", item=("case",))
         rows = [Row(r.key, (r.cells[0], note)) for r in rows]
-    return View("loads", "load cases: what each converter delivers", (Section(tuple(columns), tuple(rows)),))
+    return View("loads", "load cases", (Section(tuple(columns), tuple(rows)),))
 
 
 def _in_case(cell: Cell, index: int) -> Cell:
@@ -121,18 +123,21 @@ def help_view(context: Context) -> View:
     def line(key: str, text: str, tone: str = "") -> None:
         rows.append(Row(("help", len(rows)), (Cell(key, tone="head"), Cell(text, tone=tone))))
 
-    for caution in words.CAUTION:
-        line("caution", caution, "thin")
+    def wrapped(key: str, text: str, tone: str = "") -> None:
+        for k, part in enumerate(textwrap.wrap(text, 60)):
+            line("" if k else key, part, tone)
+
+    wrapped("caution", " ".join(words.CAUTION), "thin")
     for group, title in commands.GROUPS.items():
         line("", "")
         line(title, "")
         for command in commands.COMMANDS:
             if command.group == group:
-                line(commands.keys_text(command), command.label)
+                wrapped(commands.keys_text(command), command.label)
     line("", "")
     line("Words", "")
     for word, meaning in GLOSSARY:
-        line(word, meaning)
+        wrapped(word, meaning)
     return View(
         "help",
         "help: Esc goes back",

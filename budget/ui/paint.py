@@ -8,7 +8,6 @@ from budget.project import edits, read, schema
 from budget.project.problems import place
 from budget.report import words
 from budget.session import Session
-from budget.ui import fields, lists
 from budget.ui.desk import Ask, Desk, Edit, Pick
 from budget.ui.layout import Slot, layout
 from budget.ui.view import RIGHT, Cell, Row, Section, View
@@ -18,6 +17,7 @@ Line = list[Span]
 
 SIDE = 130  # from this width on there is a second pane at the right
 SIDE_WIDTH = 52
+LEAST_BELOW = 6  # free lines below the sheet from which on the checks stand there
 SMALLEST = (60, 12)
 
 
@@ -25,11 +25,15 @@ def frame(desk: Desk, width: int, height: int) -> list[Line]:
     """``height`` lines of exactly ``width`` cells."""
     desk.width, desk.height = width, height
     if width < SMALLEST[0] or height < SMALLEST[1]:
-        text = f"{width}x{height} is too small: at least {SMALLEST[0]}x{SMALLEST[1]}, best 80x24 or more"
+        text = f"{width}x{height} is too small; {SMALLEST[0]}x{SMALLEST[1]} is needed"
         return [_fit([(text if y == 0 else "", "")], width, desk.ascii_only) for y in range(height)]
     body = height - 5
     main = width - SIDE_WIDTH - 1 if width >= SIDE else width
-    lines = _grid(desk, main, body)
+    below = body - len(desk.lines()) - 1
+    if main < width and desk.view_name == "sheet" and below >= LEAST_BELOW:
+        lines = [*_grid(desk, main, body - below), *_panel(desk, desk.make("checks", ()), main, below)]
+    else:
+        lines = _grid(desk, main, body)
     if main < width:
         side = _side(desk, SIDE_WIDTH, body)
         lines = [
@@ -87,12 +91,12 @@ def _size(text: str) -> int:
 
 def _title(desk: Desk) -> Line:
     session = desk.session
-    title = session.title if len(session.title) <= 34 else session.title[:31] + "..."
-    spans: Line = [(" budget ", "bar"), (f" {title}{' *' if session.dirty else ''} ", "head")]
-    if desk.view_name != "sheet":
-        spans.append((f"| {desk.view().title} ", ""))
-    spans += [("| ", "pale"), (desk.corner_title(), ""), (" | ", "pale"), *_state(session, desk)]
-    return spans
+    name = desk.view().title if desk.view_name != "sheet" else session.title
+    state = _state(session, desk)
+    tail: Line = [(" | ", "pale"), (desk.corner_title(), ""), (" | ", "pale"), *state]
+    room = desk.width - 11 - sum(_size(text) for text, _ in tail)
+    name = name if _size(name) <= room else set_cell_size(name, max(0, room - 2)) + ".."
+    return [(" budget ", "bar"), (f" {name}{' *' if session.dirty else ''}", "head"), *tail]
 
 
 def _state(session: Session, desk: Desk) -> Line:
@@ -108,7 +112,8 @@ def _state(session: Session, desk: Desk) -> Line:
     status = result.status
     spans.append((("FAIL" if status == "fail" else status) + " ", status))
     counts = words.counts(result.checks)
-    spans.append((", ".join(f"{n} {s}" for s, n in counts.items() if n), ""))
+    rest = [f"{n} {s}" for s, n in counts.items() if n and s != "ok"]
+    spans.append((", ".join(rest) or "all checks", ""))
     return spans
 
 
@@ -217,25 +222,21 @@ def _editor(edit: Edit, width: int) -> Line:
 
 
 def _side(desk: Desk, width: int, height: int) -> list[Line]:
-    """Beside the sheet the fields of its row, with the checks below them; beside any other view the checks."""
-    below = 14 if height >= 36 and desk.view_name == "sheet" else 0
+    """Beside the sheet the fields of its row, beside any other view the checks."""
     if desk.view_name == "sheet":
-        item = desk.item() or ("bus",)
-        context = desk.context()
-        base = edits.owner(item)
-        first = fields.fields(type(context)(context.session, context.corner, context.bad, base, context.ascii_only))
-        title = first.title
+        view = desk.make("fields", edits.owner(desk.item() or ("bus",)))
     else:
-        first, title = lists.checks(desk.context()), "checks, worst first"
-    lines: list[Line] = [[(_pad(f" {title}", width, "left"), "heading")]]
-    lines += _rows(first, width, height - below - 1, 0, 0, -1, -1, desk.pending and not desk.session.fresh, None)
-    lines = lines[: height - below]
-    lines += [[(" " * width, "")] for _ in range(height - below - len(lines))]
-    if below:
-        lines.append([(_pad(" checks, worst first", width, "left"), "heading")])
-        more = _rows(lists.checks(desk.context()), width, below - 1, 1, 0, -1, -1, False, None)[: below - 1]
-        lines += more + [[(" " * width, "")] for _ in range(below - 1 - len(more))]
-    return [_fit(line, width, desk.ascii_only) for line in lines]
+        view = desk.make("checks", ())
+    return _panel(desk, view, width, height)
+
+
+def _panel(desk: Desk, view: View, width: int, height: int) -> list[Line]:
+    """A view with its title, without a cursor, cut to the room there is."""
+    stale = desk.pending and not desk.session.fresh
+    lines: list[Line] = [[(_pad(f" {view.title}", width, "left"), "panel")]]
+    lines += _rows(view, width, height - 1, 0, 0, -1, -1, stale, None)
+    lines = [_fit(line, width, desk.ascii_only) for line in lines[:height]]
+    return lines + [[(" " * width, "")] for _ in range(height - len(lines))]
 
 
 # -- the list to choose from
@@ -280,7 +281,8 @@ def _info(desk: Desk) -> list[Line]:
         return [[("", "")], [("", "")]]
     if cell.path is None:
         second = "Enter goes to what it follows from" if cell.leads else ""
-        return [[(cell.info or cell.text, "")], [(second, "pale")]]
+        first, rest = _split(cell.info or cell.text, desk.width)
+        return [[(first, "")], [(rest, "")] if rest else [(second, "pale")]]
     spec = edits.spec_at(cell.path)
     help_text = spec.help if spec else ""
     where = place(desk.session.document, cell.path)
@@ -288,6 +290,14 @@ def _info(desk: Desk) -> list[Line]:
     if problem:
         return [[(f"{where}: ", "head"), (f"! {problem}", "fail")], [(_second(spec, cell), "pale")]]
     return [[(f"{where}: ", "head"), (help_text, "")], [(_second(spec, cell), "pale")]]
+
+
+def _split(text: str, width: int) -> tuple[str, str]:
+    """A text over two lines, broken at a space."""
+    if _size(text) <= width:
+        return text, ""
+    at = text.rfind(" ", 0, width)
+    return (text[:at], text[at + 1 :]) if at > 0 else (text[:width], text[width:])
 
 
 def _problem(desk: Desk, cell: Cell) -> str:
@@ -362,8 +372,9 @@ def _message(desk: Desk, width: int) -> Line:
     if isinstance(mode, Edit) and mode.error:
         return [(f"! {mode.error}", "fail")]
     text = desk.message
-    if _size(text) > width:
-        text = text[: width - 3] + "..."
+    if _size(text) > width:  # whole findings as far as they fit, then as much as fits
+        at = text.rfind(";", 0, width)
+        text = text[:at] if at > width // 2 else text[: width - 3] + "..."
     return [(text, desk.tone)]
 
 

@@ -22,14 +22,14 @@ PENDING = "~"
 BAR = 5
 
 COLUMNS = (
-    Column("bus, filter, converter", 17, most=30, wide=24),
+    Column("name", 16, most=30, wide=24),
     Column("out W", 6, RIGHT),
     Column("in W", 6, RIGHT),
     Column("in A", 6, RIGHT),
     Column("of allowed", 11, RIGHT),
     Column("at V", 6, RIGHT),
     Column("heat W", 6, RIGHT),
-    Column("worst check", 15, most=34, wide=26),
+    Column("worst check", 16, most=34, wide=26),
     Column("rated", 7, RIGHT),
     Column("filter", 7),
     Column("load", 7, RIGHT),
@@ -255,8 +255,7 @@ class _Maker:
             text = ("left out" if self.outcome else PENDING) if path != ("bus",) or self.outcome else PENDING
             return Cell(text, calculated=True, leads=(*path, "name"))
         lead = behind(row, self.session.document)
-        brief = "FAIL" if row.status == "fail" else row.status
-        text = f"{brief} {words.short(row.check)}"
+        text = words.brief(row)
         info = words.sentence(row)
         lacking = sum(r.status == "no data" for r in rows)
         if lacking and row.status != "no data":
