@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import io
 import os
+import shlex
 import sys
 from collections.abc import Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from budget import __version__
 
@@ -46,42 +48,57 @@ def run(arguments: Sequence[str]) -> int:
         return _run(list(arguments))
     except KeyboardInterrupt:
         return 130
-    except BrokenPipeError:  # the reader of a pipe had enough
-        with contextlib.suppress(OSError):
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return OK
 
 
 def _run(arguments: list[str]) -> int:
-    if arguments and arguments[0] in COMMANDS:
-        options = _parser().parse_args(arguments)
-        return _check(options) if options.command == "check" else _new(options)
-    options = _sheet_parser().parse_args(arguments)
+    command = arguments[0] if arguments else ""
+    if command == "check":
+        return _check(_check_parser().parse_intermixed_args(arguments[1:]))
+    if command == "new":
+        return _new(_new_parser().parse_args(arguments[1:]))
+    parser = _sheet_parser()
+    options = parser.parse_args(arguments)
+    if len(options.files) > 1:
+        commands = " and ".join(COMMANDS)
+        parser.error(f"the sheet opens one file, and '{options.files[0]}' is no command; the commands are {commands}")
+    if options.version:
+        return OK if _print(f"budget {__version__}\n") else UNUSABLE
     return _sheet(options)
 
 
+class _Parser(argparse.ArgumentParser):
+    """argparse, except that it never writes raw control characters and that its help may go into a closed pipe."""
+
+    def error(self, message: str) -> NoReturn:
+        from budget.report.words import clean
+
+        super().error(clean(message))
+
+    def print_help(self, file: Any = None) -> None:
+        _print(self.format_help())
+
+
 def _sheet_parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
+    parser = _Parser(
         prog="budget",
         usage="budget [FILE] | budget check FILE... | budget new FILE",
         description="Lay out a DC bus, its EMI filters and the converters behind them, and see what the choice costs.",
         epilog=_EXAMPLES,
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
-    parser.add_argument("file", metavar="FILE", nargs="?", help="the project to open; without it, a copy of the demo")
+    parser.add_argument("files", metavar="FILE", nargs="*", help="the project to open; without it, a copy of the demo")
     parser.add_argument("--ascii", action="store_true", help="draw with ASCII signs only (default in a C locale)")
-    parser.add_argument("--version", action="version", version=f"budget {__version__}")
+    parser.add_argument("--version", action="store_true", help="print the version and leave")
     return parser
 
 
-def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(prog="budget")
-    commands = parser.add_subparsers(dest="command", required=True)
-    check = commands.add_parser(
-        "check",
+def _check_parser() -> argparse.ArgumentParser:
+    check = _Parser(
+        prog="budget check",
         description="Calculate projects and print every check, worst first.",
         epilog=_CHECK_EXAMPLES,
         formatter_class=argparse.RawDescriptionHelpFormatter,
+        allow_abbrev=False,
     )
     check.add_argument("files", metavar="FILE", nargs="+", help="project files")
     check.add_argument("--format", choices=FORMATS, default="text", help="how to print (default: text)")
@@ -90,48 +107,94 @@ def _parser() -> argparse.ArgumentParser:
     check.add_argument(
         "--line", action="append", choices=("low", "nominal", "high"), help="only this line; may be given again"
     )
-    new = commands.add_parser(
-        "new",
+    return check
+
+
+def _new_parser() -> argparse.ArgumentParser:
+    new = _Parser(
+        prog="budget new",
         description="Write a commented project to start from; an existing file is never replaced.",
         epilog="example:\n  budget new bus.toml",
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     new.add_argument("file", metavar="FILE", help="the file to write")
-    return parser
+    return new
 
 
 def _say(text: str) -> None:
-    print(text, file=sys.stderr)
+    """Tell the user something on standard error; file names and texts from files may hold anything."""
+    from budget.report.words import clean
+
+    with contextlib.suppress(OSError):
+        print("\n".join(clean(line) for line in text.split("\n")), file=sys.stderr, flush=True)
+
+
+def _print(text: str) -> bool:
+    """Write to standard output; False, said on standard error, where it cannot be written.
+
+    A reader of a pipe that has had enough is no fault. Characters that the encoding lacks are written as escapes.
+    """
+    if sys.stdout is None:
+        _say("budget: the output could not be written: standard output is closed.")
+        return False
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except OSError as error:
+        with contextlib.suppress(OSError):  # what is left in the buffer must not raise again at exit
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        if not isinstance(error, BrokenPipeError):
+            _say(f"budget: the output could not be written: {(error.strerror or str(error)).lower()}.")
+            return False
+    return True
 
 
 def _check(options: argparse.Namespace) -> int:
     from budget.project.problems import ProjectError
-    from budget.report import tables, text
 
     found: list[tuple[str, Result, list[str]]] = []
-    unusable = False
     for name in options.files:
         try:
             result, warnings = check_file(Path(name), options.case, options.line)
         except ProjectError as error:
             _say(f"budget: {error}")
-            unusable = True
             continue
         found.append((name, result, warnings))
-    if options.format == "json":
-        if found:
-            print(tables.dumps([tables.as_json(result, warnings) for _, result, warnings in found]))
-    elif options.format == "csv":
-        print(tables.as_csv([(name, result) for name, result, _ in found]), end="")
-    elif options.format == "markdown":
-        print("\n".join(text.as_markdown(*entry) for entry in found), end="")
-    else:
-        colour = sys.stdout.isatty() and not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb"
-        print("\n".join(text.as_text(*entry, colour=colour) for entry in found), end="")
-    if unusable:
+    if not _print(_report(options.format, found, several=len(options.files) > 1)):
+        return UNUSABLE
+    if len(found) < len(options.files):
         return UNUSABLE
     bad = ("fail", "thin", "no data") if options.strict else ("fail",)
     return FAILED if any(row.status in bad for _, result, _ in found for row in result.checks) else OK
+
+
+def _report(form: str, found: list[tuple[str, Result, list[str]]], *, several: bool) -> str:
+    """The report on the files that could be used; JSON is a list as soon as several were asked for."""
+    from budget.report import tables, text
+
+    if form == "json" and several:
+        return tables.dumps([{"file": name, **tables.as_json(result, told)} for name, result, told in found]) + "\n"
+    if not found:
+        return ""
+    if form == "json":
+        return tables.dumps(tables.as_json(*found[0][1:])) + "\n"
+    if form == "csv":
+        for name, _, warnings in found:  # a table has no place for them
+            for warning in warnings:
+                _say(f"budget: {name}: {warning}")
+        return tables.as_csv([(name, result) for name, result, _ in found])
+    if form == "markdown":
+        return "\n".join(text.as_markdown(*entry) for entry in found)
+    colour = _colour()
+    return "\n".join(text.as_text(*entry, colour=colour) for entry in found)
+
+
+def _colour() -> bool:
+    """Whether standard output is a terminal that shows colours, and NO_COLOR does not forbid them."""
+    at_terminal = sys.stdout is not None and sys.stdout.isatty()
+    return at_terminal and not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb"
 
 
 def check_file(path: Path, cases: list[str] | None, lines: list[str] | None) -> tuple[Result, list[str]]:
@@ -175,6 +238,7 @@ def _new(options: argparse.Namespace) -> int:
     from budget.project import store
     from budget.project.problems import ProjectError
     from budget.project.starter import starter
+    from budget.report import words
 
     path = Path(options.file)
     if os.path.lexists(path):
@@ -185,19 +249,19 @@ def _new(options: argparse.Namespace) -> int:
     except ProjectError as error:
         _say(f"budget: {error}")
         return UNUSABLE
-    print(f"{path} is written; 'budget {path}' opens it.")
-    return OK
+    name = f"./{path}" if str(path) in COMMANDS or str(path).startswith("-") else str(path)
+    return OK if _print(words.clean(f"{path} is written; 'budget {shlex.quote(name)}' opens it.") + "\n") else UNUSABLE
 
 
 def _sheet(options: argparse.Namespace) -> int:
     from budget.project.problems import ProjectError
     from budget.session import open_demo, open_file
 
-    if not (sys.stdin.isatty() and sys.stdout.isatty()):
+    if not all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout)):
         _say("budget: the sheet needs a terminal; 'budget check FILE' prints the results without one.")
         return UNUSABLE
     try:
-        session = open_file(Path(options.file)) if options.file else open_demo()
+        session = open_file(Path(options.files[0])) if options.files else open_demo()
     except ProjectError as error:
         _say(f"budget: {error}")
         return UNUSABLE

@@ -7,7 +7,7 @@ found here under the key the user typed; defaults have already been filled in by
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 LINES = ("low", "nominal", "high")
 
@@ -175,6 +175,8 @@ class LimitLine:
     setup: str
     points: tuple[tuple[float, float], ...]
     bandwidth: tuple[tuple[float, float, float], ...] = ()
+    basis: str = "own"  # "read" in the standard, from "memory", or the user's "own"
+    source: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -185,5 +187,5 @@ class Project:
     cases: tuple[Case, ...] = ()  # never empty once built: one named "full" stands in
     rules: Rules = Rules()
     limits: tuple[LimitLine, ...] = ()
+    checked: tuple[LimitLine, ...] = ()  # the limit sets that the rules name, relaxed for the nominal voltage
     title: str = ""
-    warnings: tuple[str, ...] = field(default=())

@@ -25,6 +25,7 @@ _FAILS = {
     "allocation": "now not allocated",
     "operating point": "the bus cannot carry it now",
 }
+_EACH = ("allocation", "filter current")  # every converter has a row of the first, every filter one of the second
 _OKAYS = {"allocation": "now allocated", "operating point": "the bus carries it now"}
 
 
@@ -49,11 +50,8 @@ def describe(old: Result | None, new: Result | None, limit: int = 3) -> str:
     order = {"filter current": 0, "bus current": 1}
     moved.sort(key=lambda entry: (order.get(entry[2].check, 2), -entry[0]))
     told += [_values(one, two) for _, one, two in moved]
-    for key, row in after.items():
-        if key not in before and row.check == "allocation":
-            told.append(f"{row.subject} is new")
-    gone = [subject for check, subject in before if check == "allocation" and (check, subject) not in after]
-    told += [f"{subject} is gone" for subject in gone]
+    told += [f"{subject} is new" for check, subject in after if check in _EACH and (check, subject) not in before]
+    told += [f"{subject} is gone" for check, subject in before if check in _EACH and (check, subject) not in after]
     return "; ".join(told[:limit]) if told else "no result changed"
 
 
@@ -62,12 +60,15 @@ def _name(row: CheckRow) -> str:
 
 
 def _values(one: CheckRow, two: CheckRow) -> str:
-    """'FL2 current 7.4 A -> 8.1 A', empty where the numbers shown are the same."""
+    """'FL2 current 7.4 A -> 8.1 A', else what became of its limit; empty where the numbers shown are the same."""
     a, b = words.show(one.value, one.unit), words.show(two.value, two.unit)
     if a and b and a != b:
         return f"{_name(two)} {a} -> {b}"
-    before, after = words.show(one.limit, one.unit), words.show(two.limit, two.unit)
-    return f"{_name(two)} limit {before or 'none'} -> {after or 'none'}" if before != after else ""
+    for what, old, new in (("limit", one.limit, two.limit), ("wanted", one.wanted, two.wanted)):
+        before, after = words.show(old, one.unit), words.show(new, two.unit)
+        if before != after:
+            return f"{_name(two)} {what} {before or 'none'} -> {after or 'none'}"
+    return ""
 
 
 def _state(one: CheckRow, two: CheckRow) -> str:

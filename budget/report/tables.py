@@ -33,29 +33,35 @@ def as_json(result: Result, warnings: Sequence[str]) -> dict[str, Any]:
         "inrush": [],
         "stability": [],
         "energy": [
-            {"case": e.case, "duration": e.duration, "energy_wh": e.energy_wh, "charge_ah": e.charge_ah}
+            {
+                "case": e.case,
+                "duration": e.duration,
+                "energy_wh": _number(e.energy_wh),
+                "charge_ah": _number(e.charge_ah),
+            }
             for e in result.energy
         ],
         "warnings": list(warnings),
     }
 
 
-def dumps(documents: Sequence[dict[str, Any]]) -> str:
-    """JSON text: one object for one file, a list for several; a NaN would be a fault of ours and raises ValueError."""
-    return json.dumps(documents[0] if len(documents) == 1 else documents, indent=1, allow_nan=False)
+def dumps(documents: dict[str, Any] | list[dict[str, Any]]) -> str:
+    """JSON text, ASCII throughout; a NaN would be a fault of ours and raises ValueError."""
+    return json.dumps(documents, indent=1, allow_nan=False)
 
 
 def check_row(row: CheckRow) -> dict[str, Any]:
+    """One check as the contract names its parts; numbers that there are not are None."""
     return {
         "check": row.check,
         "subject": row.subject,
         "case": row.case,
         "line": row.line,
-        "value": row.value,
-        "limit": row.limit,
-        "wanted": row.wanted,
+        "value": _number(row.value),
+        "limit": _number(row.limit),
+        "wanted": _number(row.wanted),
         "unit": row.unit,
-        "margin": row.margin,
+        "margin": _number(row.margin),
         "margin_unit": row.margin_unit,
         "status": row.status,
         "note": words.note(row),
@@ -71,9 +77,13 @@ def operating(result: Result) -> list[dict[str, Any]]:
             entry: dict[str, Any] = {"case": case.id, "line": LINES[k], "solved": bool(op.solved[c, k])}
             if entry["solved"]:
                 volts, amps = float(op.bus_voltage[c, k]), float(op.bus_current[c, k])
-                entry["bus"] = {"voltage": volts, "current": amps, "power": volts * amps}
+                entry["bus"] = {
+                    "voltage": _number(volts),
+                    "current": _number(amps),
+                    "power": _number(volts * amps),
+                }
                 entry["filters"] = [
-                    {"id": f.id, "current": i, "output_voltage": v, "loss": p}
+                    {"id": f.id, "current": _number(i), "output_voltage": _number(v), "loss": _number(p)}
                     for f, i, v, p in zip(
                         project.filters,
                         op.filter_current[c, k].tolist(),
@@ -83,7 +93,14 @@ def operating(result: Result) -> list[dict[str, Any]]:
                     )
                 ]
                 entry["converters"] = [
-                    {"id": u.id, "output_power": po, "input_power": pi, "current": i, "voltage": _number(v), "loss": p}
+                    {
+                        "id": u.id,
+                        "output_power": _number(po),
+                        "input_power": _number(pi),
+                        "current": _number(i),
+                        "voltage": _number(v),
+                        "loss": _number(p),
+                    }
                     for u, po, pi, i, v, p in zip(
                         project.converters,
                         op.output_power[c].tolist(),
@@ -98,8 +115,9 @@ def operating(result: Result) -> list[dict[str, Any]]:
     return entries
 
 
-def _number(value: float) -> float | None:
-    return value if math.isfinite(value) else None
+def _number(value: float | None) -> float | None:
+    """JSON has neither nan (a voltage that is nowhere) nor inf (values past the largest float)."""
+    return value if value is not None and math.isfinite(value) else None
 
 
 CHECK_HEAD = ("status", "check", "subject", "value", "limit", "wanted", "margin", "corner", "note")
@@ -144,11 +162,11 @@ def flow_table(result: Result) -> list[tuple[str, ...]]:
     share = most(op.bus_current) / project.bus.rating if project.bus.rating else None
     rows: list[tuple[str, ...]] = [
         (
-            f"bus {project.bus.name}".strip(),
+            f"bus {words.clean(project.bus.name)}".strip(),
             "",
             words.show(most(op.bus_voltage * op.bus_current), "W"),
             words.show(most(op.bus_current), "A"),
-            f"{share:.0%}".replace("%", " %") if share is not None else "",
+            words.share(share) if share is not None else "",
             words.show(least(op.bus_voltage), "V"),
             words.show(most(op.bus_loss), "W"),
         )
@@ -158,7 +176,7 @@ def flow_table(result: Result) -> list[tuple[str, ...]]:
         unit = project.converters[n]
         placed = op.home[n] >= 0
         return (
-            f"  {unit.id} {unit.name}".rstrip(),
+            f"  {unit.id} {words.clean(unit.name)}".rstrip(),
             words.show(float(np.max(op.output_power[:, n])), "W"),
             words.show(float(np.max(op.input_power[:, n])), "W"),
             words.show(most(op.current[:, :, n]), "A"),
@@ -172,11 +190,11 @@ def flow_table(result: Result) -> list[tuple[str, ...]]:
         limit = float(allowed[f])
         rows.append(
             (
-                f"{part.id} {part.name}".rstrip(),
+                f"{part.id} {words.clean(part.name)}".rstrip(),
                 "",
                 words.show(most(op.filter_current[:, :, f] * op.filter_voltage[:, :, f]), "W"),
                 words.show(amps, "A"),
-                f"{amps / limit:.0%}".replace("%", " %") if limit > 0 and math.isfinite(limit) else "",
+                words.share(amps / limit) if limit > 0 and math.isfinite(limit) else "",
                 words.show(least(op.filter_voltage[:, :, f]), "V"),
                 words.show(most(op.filter_loss[:, :, f]), "W"),
             )
@@ -193,24 +211,41 @@ ENERGY_HEAD = ("case", "duration", "energy", "charge")
 
 
 def energy_table(result: Result) -> list[tuple[str, ...]]:
+    """What each case with a duration takes from the source."""
     return [
         (
             e.case,
-            f"{e.duration:.4g} s",
-            f"{e.energy_wh:.4g} Wh" if e.energy_wh is not None else "no operating point",
-            f"{e.charge_ah:.4g} Ah" if e.charge_ah is not None else "",
+            words.duration(e.duration),
+            words.amount(e.energy_wh, "Wh") if e.energy_wh is not None else "no operating point",
+            words.amount(e.charge_ah, "Ah") if e.charge_ah is not None else "",
         )
         for e in result.energy
     ]
+
+
+CSV_HEAD = (
+    "check",
+    "subject",
+    "case",
+    "line",
+    "value",
+    "limit",
+    "wanted",
+    "unit",
+    "margin",
+    "margin_unit",
+    "status",
+    "note",
+)
 
 
 def as_csv(named: Sequence[tuple[str, Result]]) -> str:
     """Every check of every file, one a line, with plain SI numbers."""
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
-    head = ("check", "subject", "case", "line", "value", "limit", "wanted", "unit", "margin", "margin_unit", "status")
-    writer.writerow(("file", *head, "note"))
+    writer.writerow(("file", *CSV_HEAD))
     for name, result in named:
         for row in result.checks:
-            writer.writerow((name, *(getattr(row, key) for key in head), words.note(row)))
+            cells = check_row(row)
+            writer.writerow((words.clean(name), *(cells[key] for key in CSV_HEAD)))
     return out.getvalue()

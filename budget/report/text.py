@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import unicodedata
 from collections.abc import Sequence
 
 from budget.engine.evaluate import Result
@@ -38,14 +39,14 @@ def as_text(name: str, result: Result, warnings: Sequence[str], *, colour: bool 
         if rows:
             lines += [title, *_columns(head, rows, colour), ""]
     if warnings:
-        lines += ["Warnings", *(f"  {w}" for w in warnings), ""]
+        lines += ["Warnings", *(f"  {words.clean(w)}" for w in warnings), ""]
     lines += words.CAUTION
     return "\n".join(lines) + "\n"
 
 
 def _headline(name: str, result: Result, colour: bool) -> str:
     status = _tone(result.status.upper(), result.status) if colour else result.status.upper()
-    title = result.project.title or name
+    title = words.clean(result.project.title or name)
     return f"{title}: {status} ({words.summary(result.checks)})"
 
 
@@ -61,22 +62,31 @@ def _tone(text: str, status: str) -> str:
 
 def _columns(head: tuple[str, ...], rows: list[tuple[str, ...]], colour: bool) -> list[str]:
     used = [i for i in range(len(head)) if any(row[i] for row in rows)]
-    widths = {i: max(len(head[i]), *(len(row[i]) for row in rows)) for i in used}
+    widths = {i: max(len(head[i]), *(_width(row[i]) for row in rows)) for i in used}
 
     def line(row: tuple[str, ...], tint: bool) -> str:
         cells = []
         for i in used:
-            cell = row[i].rjust(widths[i]) if head[i] in _RIGHT else row[i].ljust(widths[i])
+            room = " " * (widths[i] - _width(row[i]))
+            cell = room + row[i] if head[i] in _RIGHT else row[i] + room
             cells.append(_tone(cell, row[i]) if tint and head[i] == "status" else cell)
         return ("  " + "  ".join(cells)).rstrip()
 
     return [line(head, False), *(line(row, colour) for row in rows)]
 
 
+def _width(text: str) -> int:
+    """How many columns a terminal gives a text; rich would know, and takes longer to load than to calculate a bus."""
+    if text.isascii():
+        return len(text)
+    marks = sum(unicodedata.combining(c) != 0 for c in text)
+    return len(text) - marks + sum(unicodedata.east_asian_width(c) in "WF" for c in text)
+
+
 def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
     """The report of one file as markdown."""
     lines = [f"# {_escape(result.project.title or name)}", ""]
-    lines += [f"**{result.status}**: {words.summary(result.checks)}; {_scope(result)}.", ""]
+    lines += [f"**{result.status}**: {words.summary(result.checks)}; {_escape(_scope(result))}.", ""]
     sections = (
         ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
         ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
@@ -96,6 +106,8 @@ def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
 
 
 def _escape(text: str) -> str:
-    for sign in "\\|`*_<>[]":
+    """The user's text as markdown that shows it as it is, in a table as well; the backslash goes first."""
+    text = words.clean(text)
+    for sign in "\\|`*_<>[]&~#":
         text = text.replace(sign, "\\" + sign)
     return text

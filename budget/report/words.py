@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
@@ -27,15 +28,48 @@ REMARKS = {
 _KINDS = {"A": "current", "V": "voltage", "W": "power"}
 
 
+def clean(text: str) -> str:
+    """Text of the user's as one line without control characters: what a terminal would obey is shown as ``?``."""
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() else " " if c.isspace() else "?" for c in text)
+
+
 def show(value: float | None, unit: str) -> str:
-    """A value of a check row as text, in its unit."""
-    return quantity.show(value, quantity.KINDS[_KINDS[unit]]) if unit in _KINDS and value is not None else ""
+    """A value of a check row as text, in its unit; empty where there is none."""
+    if unit not in _KINDS or value is None:
+        return ""
+    return quantity.show(value, quantity.KINDS[_KINDS[unit]]) if math.isfinite(value) else "too large"
 
 
 def percent(ratio: float) -> str:
     """A margin as a percentage: two significant digits are enough near the limit, whole numbers elsewhere."""
-    number = f"{abs(ratio) * 100:.2g}" if abs(ratio) < 0.1 else f"{abs(ratio) * 100:.0f}"
-    return f"{number} %"
+    number = abs(ratio) * 100
+    if number >= 1e6:
+        return "over a million %"
+    if 0 < number < 0.01:
+        return "under 0.01 %"
+    return f"{number:.2g} %" if number < 9.95 else f"{number:.0f} %"
+
+
+def share(ratio: float) -> str:
+    """How much of a limit is used, in whole percent."""
+    return f"{ratio * 100:.0f} %" if ratio < 1e4 else "over a million %"
+
+
+def duration(seconds: float) -> str:
+    """A time as people say it: '20 ms', '6 min', '2.5 h'."""
+    if seconds < 60:
+        return quantity.show(seconds, quantity.KINDS["time"])
+    return amount(seconds / 60, "min") if seconds < 3600 else amount(seconds / 3600, "h")
+
+
+def amount(value: float, unit: str) -> str:
+    """A number in a unit that has no kind of its own, to four digits and without an exponent while that is short."""
+    if not math.isfinite(value):
+        return "too large"
+    text = quantity.show_in(value, quantity.KINDS["time"])
+    return f"{text} {unit}"
 
 
 def margin(row: CheckRow) -> str:
