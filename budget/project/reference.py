@@ -43,19 +43,22 @@ def _rows(fields: tuple[Field, ...], before: str) -> Iterator[str]:
     for field in fields:
         if field is schema.NOTE:
             continue
-        cells = (f"`{before}{field.key}`", _takes(field), _default(field), _limits(field), field.help)
-        yield f"| {' | '.join(cells)} |"
+        yield _row(f"{before}{field.key}", field)
         if field.kind == schema.LOADS:
-            yield from _rows((schema.LOAD,), f"{before}{field.key}: ")
+            yield _row(f"{before}{field.key}.ID", schema.LOAD)
         elif field.kind == schema.TABLE:
             yield from _rows(field.fields, f"{before}{field.key}.")
         elif field.kind != schema.LADDER and field.fields:
             yield from _rows(field.fields, f"{before}{field.key}: ")
 
 
+def _row(name: str, field: Field) -> str:
+    return f"| `{name}` | {_takes(field)} | {_default(field)} | {_limits(field)} | {field.help} |"
+
+
 def _takes(field: Field) -> str:
     if field is schema.LOAD:
-        return "share, W, or `off`"
+        return "ratio or W or `off`"
     if field.kind == schema.CHOICE:
         return " or ".join(f"`{choice}`" for choice in field.choices)
     columns = ", ".join(column.key for column in field.fields)
