@@ -7,6 +7,7 @@ go.
 
 from __future__ import annotations
 
+import os
 from dataclasses import dataclass, field
 from pathlib import Path as FilePath
 from typing import TYPE_CHECKING, Any
@@ -14,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 from budget.project import edits, store
 from budget.project.build import Built, Cache, Shelf, build
 from budget.project.document import Document, Path, Tree, drop, from_data, get, put
-from budget.project.problems import Problem, ProjectError, place
+from budget.project.problems import Problem, ProjectError, place, printable
 
 if TYPE_CHECKING:
     from budget.engine.evaluate import Result
@@ -154,10 +155,15 @@ class Session:
 
     def save_as(self, path: FilePath, *, over: bool = False) -> tuple[str, ...]:
         """Write to another file, which becomes the session's own; its shelf files come along."""
-        if not over and path.exists():
-            raise store.ChangedOnDiskError(f"{path} exists already; nothing was written.")
+        names = [s.name for s in self.shelves]
+        if str(FilePath(path.name)) in names:
+            raise ProjectError(
+                f"{printable(path.name, 60)} is a shelf file of this project; another name was expected."
+            )
+        if not over and os.path.lexists(path):
+            raise store.ChangedOnDiskError(f"{printable(str(path), 200)} exists already; nothing was written.")
         if self.path is not None and self.path.parent.resolve() != path.parent.resolve():
-            store.copy_shelves([s.name for s in self.shelves], self.path.parent, path.parent)
+            store.copy_shelves(names, self.path.parent, path.parent)
         saved = store.save(self.document, path, None, over=over)
         self.path, self.fingerprint, self.saved = path, saved.fingerprint, self.document
         self._read_shelves()
@@ -187,7 +193,7 @@ class Session:
         """Type ``text`` into a cell; raises ProjectError with a sentence where the cell cannot take it."""
         document = edits.enter(self.document, self.shelves, path, text)
         label = place(self.document, path)
-        return self.apply(f"{label} = {text.strip() or 'empty'}", document, spot)
+        return self.apply(f"{label} = {printable(text.strip(), 60) or 'empty'}", document, spot)
 
 
 def open_file(path: FilePath) -> Session:

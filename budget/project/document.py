@@ -72,19 +72,24 @@ def _put(node: Any, path: Path, value: Any) -> Any:
 
 def drop(document: Document, path: Path) -> Document:
     """A document without the key at ``path``; a nested table left empty goes too. Rows are removed by ``remove``."""
-    if get(document, path[:-1]) is None or path[-1] not in get(document, path[:-1]):
+    table = get(document, path[:-1])
+    if not isinstance(table, dict) or path[-1] not in table:
         return document
-    parent = {k: v for k, v in get(document, path[:-1]).items() if k != path[-1]}
-    if not parent and len(path) > 1 and isinstance(path[-2], str) and len(path) > 2:
+    parent = {k: v for k, v in table.items() if k != path[-1]}
+    if not parent and len(path) > 2 and isinstance(path[-2], str):
         return drop(document, path[:-1])
     return put(document, path[:-1], parent) if len(path) > 1 else Document(parent, document.text, document.origin)
 
 
 def insert(document: Document, path: Path, value: Any, origin: int | None = None) -> Document:
-    """A document with ``value`` put into the list ``path[:-1]`` before index ``path[-1]``."""
+    """A document with ``value`` put into the list ``path[:-1]`` before index ``path[-1]``.
+
+    Raises KeyError where something else than a list stands there.
+    """
     index = path[-1]
-    assert isinstance(index, int)
-    old = get(document, path[:-1]) or []
+    old = get(document, path[:-1], [])
+    if not isinstance(old, list) or not isinstance(index, int):
+        raise KeyError(path)
     changed = put(document, path[:-1], [*old[:index], value, *old[index:]])
     return _with_origin(changed, path, lambda o: (*o[:index], origin, *o[index:]), len(old))
 
@@ -92,8 +97,9 @@ def insert(document: Document, path: Path, value: Any, origin: int | None = None
 def remove(document: Document, path: Path) -> Document:
     """A document without the list item at ``path``; a list left empty goes too."""
     index = path[-1]
-    assert isinstance(index, int)
-    old = get(document, path[:-1]) or []
+    old = get(document, path[:-1])
+    if not isinstance(old, list) or not isinstance(index, int) or not 0 <= index < len(old):
+        return document
     left = [*old[:index], *old[index + 1 :]]
     changed = put(document, path[:-1], left) if left else drop(document, path[:-1])
     return _with_origin(changed, path, lambda o: (*o[:index], *o[index + 1 :]), len(old))
@@ -101,15 +107,14 @@ def remove(document: Document, path: Path) -> Document:
 
 def move(document: Document, path: Path, to: int) -> Document:
     """A document with the list item at ``path`` moved to index ``to`` of the same list."""
-    value, index = get(document, path), path[-1]
-    assert isinstance(index, int)
-    stem = document.origin.get(str(path[0]), ())[index] if len(path) == 2 else None
-    rows = len(get(document, path[:-1]))
-    if not 0 <= to < rows:
+    index, rows = path[-1], get(document, path[:-1])
+    if not isinstance(rows, list) or not isinstance(index, int) or not 0 <= index < len(rows):
         return document
-    if rows == 1:
+    if not 0 <= to < len(rows) or to == index:
         return document
-    return insert(remove(document, path), (*path[:-1], to), value, stem)
+    stems = document.origin.get(str(path[0]), ()) if len(path) == 2 else ()
+    stem = stems[index] if index < len(stems) else None
+    return insert(remove(document, path), (*path[:-1], to), rows[index], stem)
 
 
 def _with_origin(document: Document, path: Path, change: Any, before: int) -> Document:

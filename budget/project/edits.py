@@ -13,13 +13,15 @@ from typing import Any
 
 from budget import quantity
 from budget.project import document as doc
-from budget.project import read, schema, starter
+from budget.project import read, schema, starter, toml_dump
 from budget.project.build import Shelf
 from budget.project.document import Document, Path, Tree
 from budget.project.problems import ProjectError, found
 from budget.project.schema import Field
 
 PLACES = ("series", "shunt")
+_LISTS = (schema.TABLES, schema.LADDER, schema.ROWS, schema.CURVE)
+_STRANGE = "this cell stands in something that is not a table; mend that first."
 
 
 def spec_at(path: Path) -> Field | None:
@@ -30,15 +32,13 @@ def spec_at(path: Path) -> Field | None:
         if spec is not None and spec.kind == schema.LOADS:
             return schema.LOAD if isinstance(key, str) else None
         if isinstance(key, int):
-            if spec is None:
+            if spec is None or spec.kind not in _LISTS:
                 return None
-            if spec.kind in (schema.ROWS, schema.CURVE) and fields is not spec.fields:
-                fields = spec.fields  # the row; the next index is the column
+            if spec.kind in (schema.ROWS, schema.CURVE) and fields is spec.fields:  # a column of the row
+                spec = fields[key] if 0 <= key < len(fields) else None
+                fields = ()
                 continue
-            if spec.kind in (schema.ROWS, schema.CURVE):
-                spec = fields[key] if key < len(fields) else None
-                continue
-            fields = spec.fields
+            fields = spec.fields  # of the item
             continue
         spec = next((f for f in fields if f.key == key), None)
         if spec is None:
@@ -49,7 +49,7 @@ def spec_at(path: Path) -> Field | None:
 
 def _table_of(path: Path) -> tuple[tuple[Field, ...], Path]:
     if len(path) >= 3 and path[0] == "shelf":
-        return schema.shelf_table(str(path[1])).fields, path[3:]
+        return (schema.shelf_table(str(path[1])).fields, path[3:]) if path[1] in schema.SHELVES else ((), ())
     if path and path[0] == "shelf_files":
         return (schema.SHELF_FILES,), path
     table = schema.TABLES_BY_KEY.get(str(path[0])) if path else None
@@ -97,7 +97,7 @@ def part_of(document: Document, shelves: Iterable[Shelf], path: Path) -> Tree:
         shelf = data.get("shelf")
         named = shelf.get(base[0]) if isinstance(shelf, dict) else None
         if isinstance(named, dict) and isinstance(named.get(name), dict):
-            return dict(named[name])
+            return {k: v for k, v in named[name].items() if k not in ("id", "part", "filter")}
     return {}
 
 
@@ -140,14 +140,17 @@ def typed(value: Any) -> str:
         return "true" if value else "false"
     if isinstance(value, list):
         return ", ".join(typed(v) for v in value)
-    return str(value)
+    try:
+        return str(value)
+    except ValueError:  # Python refuses to write out a number of thousands of digits
+        return hex(value)
 
 
 def stored(spec: Field, text: str) -> Any:
     """Typed text as the value to store; raises ProjectError with a sentence where the field cannot take it."""
     text = text.strip()
     if spec is schema.LOAD:
-        return _checked(text, lambda raw: read.read_load(raw))
+        return _checked(text, read.read_load)
     if spec.kind in (schema.TEXT, schema.PART, schema.FILTER):
         if any(not c.isprintable() for c in text) or len(text) > 2000:
             raise ProjectError("a text of printable characters on one line was expected.")
@@ -162,6 +165,8 @@ def stored(spec: Field, text: str) -> Any:
             raise ProjectError(f"{found(text)} was found; {read.expectation(spec)} was expected.")
         return text
     if spec.kind == schema.TEXTS:
+        if not text.isprintable():
+            raise ProjectError("names of printable characters, with commas between, were expected.")
         return [part.strip() for part in text.split(",") if part.strip()]
     cell = spec.fields[-1] if spec.kind == schema.CURVE else spec
     if cell.kind not in quantity.KINDS:
@@ -172,9 +177,9 @@ def stored(spec: Field, text: str) -> Any:
 def _checked(text: str, reader: Any) -> Any:
     """The number or text to store, after ``reader`` has accepted it; a number only where that loses nothing typed."""
     raw: Any = text
-    if re.fullmatch(r"-?(0|[1-9]\d{0,14})", text):
+    if re.fullmatch(r"0|-?[1-9]\d{0,14}", text, re.ASCII):
         raw = int(text)
-    elif re.fullmatch(r"-?\d{1,15}\.\d{1,15}", text) and repr(float(text)) == text:
+    elif re.fullmatch(r"-?\d{1,15}\.\d{1,15}", text, re.ASCII) and repr(float(text)) == text:
         raw = float(text)
     try:
         reader(raw)
@@ -191,7 +196,9 @@ def enter(document: Document, shelves: Iterable[Shelf], path: Path, text: str) -
     spec = spec_at(path)
     if spec is None:
         raise ProjectError("this cell is calculated and cannot be typed into.")
-    if not text.strip() and spec.kind not in (schema.IDENT, schema.CHOICE):
+    if isinstance(path[-1], int) and spec.kind in _LISTS:
+        raise ProjectError("this is a whole row; its own cells can be typed into.")
+    if not text.strip():
         return clear(document, path)
     value = stored(spec, text)
     if spec.kind == schema.FILTER and value not in ("", *ids(document, "filter")):
@@ -199,19 +206,30 @@ def enter(document: Document, shelves: Iterable[Shelf], path: Path, text: str) -
         raise ProjectError(f"{found(value)} does not exist; the filters are: {names}.")
     if spec.kind == schema.PART and value not in shelf_names(document, shelves, str(path[0])):
         raise ProjectError(f"{found(value)} is not on the shelf.")
-    if spec.kind == schema.IDENT and len(path) == 3:
+    if spec.kind == schema.IDENT:
         return rename(document, path, value)
-    document = own(document, shelves, path)
+    owned = own(document, shelves, path)
     if path[-1] == "place":
-        element = doc.get(document, path[:-1])
-        inner = element.get(_place(element), {}) if isinstance(element, dict) else {}
-        rest = {k: v for k, v in (element or {}).items() if k not in PLACES}
-        return doc.put(document, path[:-1], {**rest, value: inner})
-    document = _with_needed(document, path)
+        element = doc.get(owned, path[:-1])
+        if not isinstance(element, dict):
+            raise ProjectError(_STRANGE)
+        if value in element and _place(element) == value:
+            return document
+        rest = {k: v for k, v in element.items() if k not in PLACES}
+        return doc.put(owned, path[:-1], {**rest, value: element.get(_place(element), {})})
+    if _stands(owned, stored_path(owned, path), value):
+        return document
     try:
-        return doc.put(document, stored_path(document, path), value)
+        owned = _with_needed(owned, path)
+        return doc.put(owned, stored_path(owned, path), value)
     except KeyError as error:
-        raise ProjectError("this cell stands in something that is not a table; mend that first.") from error
+        raise ProjectError(_STRANGE) from error
+
+
+def _stands(document: Document, path: Path, value: Any) -> bool:
+    """Whether exactly this value is stored there already."""
+    nothing = object()
+    return toml_dump.same(doc.get(document, path, nothing), value)
 
 
 def own(document: Document, shelves: Iterable[Shelf], path: Path) -> Document:
@@ -249,11 +267,19 @@ def clear(document: Document, path: Path) -> Document:
         raise ProjectError(f"{spec.title} cannot be left empty; {read.expectation(spec)} was expected.")
     if spec.kind == schema.FILTER:
         at = stored_path(document, path)
-        return doc.put(document, at, "") if doc.get(document, at) else document
+        return doc.put(document, at, "") if doc.get(document, at, "") != "" else document
     nested = spec.kind != schema.LOADS and len(path) > len(owner(path)) + 1
     if spec.required and (nested or not _lent(document, path)):
         raise ProjectError(f"{spec.title} cannot be left empty; {read.expectation(spec)} was expected.")
-    return doc.drop(document, stored_path(document, path))
+    at = stored_path(document, path)
+    dropped = doc.drop(document, at)
+    # An element of a ladder and a shelf part stay what they are when their last field has gone.
+    whole = at[:-1] if len(at) > len(path) else owner(path) if path[0] == "shelf" else ()
+    return (
+        doc.put(dropped, whole, {})
+        if whole and dropped is not document and doc.get(dropped, whole) is None
+        else dropped
+    )
 
 
 def _lent(document: Document, path: Path) -> bool:
@@ -269,11 +295,23 @@ def ids(document: Document, key: str) -> tuple[str, ...]:
     return tuple(r[column] for r in rows if isinstance(r, dict) and isinstance(r.get(column), str))
 
 
+def _taken(document: Document, key: str) -> tuple[str, ...]:
+    """The ids that a new row of a table cannot have."""
+    if key in schema.SHELVES:
+        return (*ids(document, "filter"), *ids(document, "converter"))
+    return (*ids(document, key), *(schema.LIMIT_SETS if key == "limit" else ()))
+
+
+def _rows(document: Document, key: str) -> list[tuple[int, Tree]]:
+    """The rows of a table with their numbers; whatever else stands there is none."""
+    rows = document.data.get(key)
+    return [(i, r) for i, r in enumerate(rows) if isinstance(r, dict)] if isinstance(rows, list) else []
+
+
 def free_id(document: Document, key: str, like: str) -> str:
-    """An id not taken, numbered on from ``like``: FL1 -> FL4."""
-    taken = {*ids(document, "filter"), *ids(document, "converter")} if key in schema.SHELVES else {*ids(document, key)}
-    match = re.fullmatch(r"(.*?)(\d*)", like)
-    stem = (match.group(1) if match else like) or "row"
+    """An id not taken, the stem of ``like`` with the first number that is free: FL1 -> FL4."""
+    taken = _taken(document, key)
+    stem = like.rstrip("0123456789")[:30] or "row"
     number = 1
     while f"{stem}{number}" in taken:
         number += 1
@@ -290,21 +328,24 @@ def rename(document: Document, path: Path, new: str) -> Document:
         raise ProjectError(fault)
     if new == old:
         return document
-    taken = (*ids(document, "filter"), *ids(document, "converter")) if key in schema.SHELVES else ids(document, key)
-    if new in taken:
+    if new in _taken(document, key):
         raise ProjectError(f"{found(new)} is taken; a new name was expected.")
-    document = doc.put(document, (key, index, column), new)
-    if not isinstance(old, str):
+    first = next((i for i, row in _rows(document, key) if row.get(column) == old), None)
+    try:
+        document = doc.put(document, (key, index, column), new)
+    except KeyError as error:
+        raise ProjectError(_STRANGE) from error
+    if not isinstance(old, str) or index != first:  # of two rows with one id, others mean the first
         return document
     if key == "filter":
-        for i, row in enumerate(document.data.get("converter", [])):
-            if isinstance(row, dict) and row.get("filter") == old:
+        for i, row in _rows(document, "converter"):
+            if row.get("filter") == old:
                 document = doc.put(document, ("converter", i, "filter"), new)
     elif key == "converter":
-        for i, row in enumerate(document.data.get("case", [])):
-            loads = row.get("load") if isinstance(row, dict) else None
+        for i, row in _rows(document, "case"):
+            loads = row.get("load")
             if isinstance(loads, dict) and old in loads:
-                renamed = {(new if k == old else k): v for k, v in loads.items()}
+                renamed = {(new if k == old else k): v for k, v in loads.items() if k != new}
                 document = doc.put(document, ("case", i, "load"), renamed)
     elif key == "limit":
         names = doc.get(document, ("rules", "emissions"))
@@ -327,10 +368,12 @@ def insert_row(document: Document, path: Path, row: Tree) -> tuple[Document, Pat
     column = "name" if key == "limit" else "id"
     if len(path) == 2 and key in schema.TABLES_BY_KEY:
         ident = row.get(column)
-        taken = (*ids(document, "filter"), *ids(document, "converter")) if key in schema.SHELVES else ids(document, key)
-        if not isinstance(ident, str) or ident in taken:
+        if not isinstance(ident, str) or ident in _taken(document, key):
             row = {**row, column: free_id(document, key, ident if isinstance(ident, str) else key)}
-    return doc.insert(document, path, copy.deepcopy(row)), path
+    try:
+        return doc.insert(document, path, copy.deepcopy(row)), path
+    except KeyError as error:
+        raise ProjectError("no row can be put in here: what stands there is not a list; mend that first.") from error
 
 
 def remove_row(document: Document, path: Path) -> Document:
@@ -341,12 +384,12 @@ def remove_row(document: Document, path: Path) -> Document:
     if len(path) != 2 or not isinstance(ident, str) or ident in ids(document, key):
         return document
     if key == "filter":
-        for i, row in enumerate(document.data.get("converter", [])):
-            if isinstance(row, dict) and row.get("filter") == ident:
+        for i, row in _rows(document, "converter"):
+            if row.get("filter") == ident:
                 document = doc.put(document, ("converter", i, "filter"), "")
     elif key == "converter":
-        for i, row in enumerate(document.data.get("case", [])):
-            loads = row.get("load") if isinstance(row, dict) else None
+        for i, row in _rows(document, "case"):
+            loads = row.get("load")
             if isinstance(loads, dict) and ident in loads:
                 document = doc.drop(document, ("case", i, "load", ident))
     elif key == "limit":
@@ -361,12 +404,18 @@ def new_item(document: Document, shelves: Iterable[Shelf], path: Path) -> tuple[
 
     ``path`` is the list itself (then the item starts it, or joins its end) or an item (then it goes behind that).
     """
-    base = owner(path)
-    rest = path[len(base) :]
-    at: Path = (*base, rest[0])
-    spec = spec_at(at)
-    if spec is None or spec.kind not in (schema.TABLES, schema.LADDER, schema.ROWS, schema.CURVE, schema.TABLE):
+    spec = spec_at(path[: len(owner(path)) + 1])
+    if spec is None or spec.kind not in (*_LISTS, schema.TABLE):
         raise ProjectError("there is no list here to add to.")
+    try:
+        return _with_item(document, shelves, path, spec)
+    except KeyError as error:
+        raise ProjectError(_STRANGE) from error
+
+
+def _with_item(document: Document, shelves: Iterable[Shelf], path: Path, spec: Field) -> tuple[Document, Path]:
+    base = owner(path)
+    at, rest = path[: len(base) + 1], path[len(base) :]
     document = own(document, shelves, (*at, 0))
     old = doc.get(document, at)
     if spec.kind == schema.TABLE:
@@ -378,11 +427,35 @@ def new_item(document: Document, shelves: Iterable[Shelf], path: Path) -> tuple[
         return doc.put(document, at, rows), (*at, 0)
     if not isinstance(old, list) or not old:
         return doc.put(document, at, copy.deepcopy(starter.LISTS[spec.key])), (*at, 0)
-    index = rest[1] + 1 if len(rest) > 1 and isinstance(rest[1], int) else len(old)
-    model = old[index - 1] if spec.kind in (schema.ROWS, schema.CURVE) else starter.LISTS[spec.key][0]
-    return doc.insert(document, (*at, index), copy.deepcopy(model)), (*at, index)
+    index = len(old)
+    if len(rest) > 1 and isinstance(rest[1], int) and 0 <= rest[1] < len(old):
+        index = rest[1] + 1
+    plain = spec.kind in (schema.ROWS, schema.CURVE)
+    model = _between(spec, old, index) if plain else copy.deepcopy(starter.LISTS[spec.key][0])
+    return doc.insert(document, (*at, index), model), (*at, index)
+
+
+def _between(spec: Field, rows: list[Any], index: int) -> Any:
+    """A row to put in before ``index``: the one above it, with a first column between its neighbours or beyond them.
+
+    Rows that must rise still do; where a neighbour cannot be read, it is a copy of the row above.
+    """
+    above = copy.deepcopy(rows[index - 1])
+    column = spec.fields[0]
+    try:
+        low = read.quantity_value(column, rows[index - 1][0])
+        high = read.quantity_value(column, rows[index][0]) if index < len(rows) else 0.0
+    except (ValueError, TypeError, LookupError):
+        return above
+    if column.kind == "ratio":
+        middle = (low + high) / 2 if high else low * 1.1
+    else:
+        middle = (low * high) ** 0.5 if high else low * 2
+    return [read.show_limit(middle, column.kind), *above[1:]] if isinstance(above, list) else above
 
 
 def to_filter(document: Document, index: int, ident: str) -> Document:
     """A document with converter number ``index`` moved behind filter ``ident`` ("": behind none)."""
+    if doc.get(document, ("converter", index, "filter"), "") == ident:
+        return document
     return doc.put(document, ("converter", index, "filter"), ident)

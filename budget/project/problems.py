@@ -24,7 +24,7 @@ class Problem:
     place: str = ""
 
     def sentence(self) -> str:
-        parts = [p for p in (self.source, self.place) if p]
+        parts = [p for p in (printable(self.source, 60), self.place) if p]
         return ": ".join([*parts, self.text])
 
 
@@ -48,6 +48,8 @@ def found(value: Any) -> str:
         return "a table"
     if isinstance(value, list):
         return "a list" if value else "an empty list"
+    if isinstance(value, int) and abs(value) >= 10**30:
+        return "a number of more than 30 digits"  # Python refuses to write out thousands of them
     return printable(str(value))
 
 

@@ -1,7 +1,8 @@
 """Values of the file -> SI values, field by field, as the schema describes them.
 
 A reader never stops at the first mistake: it notes each with its path, relative to the row it reads, and goes on with
-the field's default. ``Reading.broken`` says that the row lacks something it cannot be calculated without.
+the field's default. A nested field is unreadable as a whole where a cell that it needs is. ``Reading.broken`` says that
+the row lacks something it cannot be calculated without.
 """
 
 from __future__ import annotations
@@ -69,7 +70,7 @@ def quantity_value(spec: Field, raw: Any) -> float:
     else:
         raise ValueError(f"{found(raw)} was found; {expectation(spec)} was expected.")
     check_limits(spec, value, raw)
-    return value
+    return value + 0.0  # a zero has no sign
 
 
 def check_limits(spec: Field, value: float, raw: Any) -> None:
@@ -82,7 +83,7 @@ def check_limits(spec: Field, value: float, raw: Any) -> None:
 
 def show_limit(value: float, kind: str) -> str:
     """A limit or default of the schema as text."""
-    return quantity.show(value, quantity.KINDS[kind])
+    return quantity.show(value, quantity.KINDS[kind], 6)
 
 
 def read_table(fields: Iterable[Field], raw: dict[str, Any], out: Reading, at: Path = ()) -> dict[str, Any]:
@@ -108,12 +109,11 @@ def read_table(fields: Iterable[Field], raw: dict[str, Any], out: Reading, at: P
 
 
 def read_field(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[Any, bool]:
-    """The value of one field and whether it could be read."""
+    """The value of one field and whether it could be read: a reader returns None where it could not."""
     reader = _READERS.get(spec.kind)
     if reader is not None:
-        before = len(out.problems)
         value = reader(spec, raw, out, at)
-        return value, not any(p.error for p in out.problems[before:])
+        return value, value is not None
     try:
         return quantity_value(spec, raw), True
     except ValueError as error:
@@ -121,16 +121,14 @@ def read_field(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[Any, bool
         return None, False
 
 
-def _text(spec: Field, raw: Any, out: Reading, at: Path) -> str:
-    if not isinstance(raw, str):
+def _text(spec: Field, raw: Any, out: Reading, at: Path) -> str | None:
+    if not isinstance(raw, str) or (spec.kind == schema.CHOICE and raw not in spec.choices):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
-        return ""
-    if spec.kind == schema.IDENT:
-        fault = ident_fault(raw)
-        if fault:
-            out.fault(at, fault)
-    elif spec.kind == schema.CHOICE and raw not in spec.choices:
-        out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
+        return None
+    fault = ident_fault(raw) if spec.kind == schema.IDENT else ""
+    if fault:
+        out.fault(at, fault)
+        return None
     return raw
 
 
@@ -143,10 +141,10 @@ def ident_fault(text: str) -> str:
     return ""
 
 
-def _texts(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[str, ...]:
+def _texts(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[str, ...] | None:
     if not isinstance(raw, list) or not all(isinstance(item, str) for item in raw):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
-        return ()
+        return None
     return tuple(raw)
 
 
@@ -154,48 +152,56 @@ def _table(spec: Field, raw: Any, out: Reading, at: Path) -> dict[str, Any] | No
     if not isinstance(raw, dict):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
         return None
-    return read_table(spec.fields, raw, out, at)
+    inner = Reading(problems=out.problems)
+    values = read_table(spec.fields, raw, inner, at)
+    return None if inner.broken else values
 
 
-def _list(spec: Field, raw: Any, out: Reading, at: Path) -> list[Any]:
+def _list(spec: Field, raw: Any, out: Reading, at: Path) -> list[Any] | None:
     if not isinstance(raw, list):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
-        return []
+        return None
     if len(raw) > MAX_ROWS:
         out.fault(at, f"{len(raw)} rows were found; at most {MAX_ROWS} were expected.")
-        return []
+        return None
     return raw
 
 
-def _tables(spec: Field, raw: Any, out: Reading, at: Path) -> list[dict[str, Any]]:
+def _tables(spec: Field, raw: Any, out: Reading, at: Path) -> list[dict[str, Any]] | None:
     items = _list(spec, raw, out, at)
-    if isinstance(raw, list) and not raw and spec.required:
+    if items is None:
+        return None
+    if not items and spec.required:
         out.fault(at, f"an empty list was found; {expectation(spec)} was expected.")
-    rows = []
-    for index, item in enumerate(items):
-        value = _table(spec, item, out, (*at, index))
-        if value is not None:
-            rows.append(value)
-    return rows
+        return None
+    rows = [_table(spec, item, out, (*at, index)) for index, item in enumerate(items)]
+    good = [row for row in rows if row is not None]
+    return good if len(good) == len(rows) else None
 
 
-def _ladder(spec: Field, raw: Any, out: Reading, at: Path) -> list[dict[str, Any]]:
+def _ladder(spec: Field, raw: Any, out: Reading, at: Path) -> list[dict[str, Any]] | None:
     elements = []
     parts = tuple(f for f in schema.BRANCH if f.key != "place")
-    for index, item in enumerate(_list(spec, raw, out, at)):
+    items = _list(spec, raw, out, at)
+    good = items is not None
+    for index, item in enumerate(items or ()):
         where = (*at, index)
         places = [p for p in ("series", "shunt") if isinstance(item, dict) and p in item]
         if len(places) != 1 or not isinstance(item[places[0]], dict):
             out.fault(where, "an element is { series = {...} } or { shunt = {...} }, one of the two.")
+            good = False
             continue
         place = places[0]
+        before = len(out.problems)
         for key in item:
             if key not in (place, "note"):
                 out.fault((*where, key), "is an unknown key; it is kept, and not used.", error=False)
         values = read_table(parts, item[place], out, (*where, place))
         _check_branch(place, values, out, (*where, place))
+        # Whatever is wrong with an element, the ladder would be another one without it.
+        good = good and not any(p.error and p.path[-1] != "note" for p in out.problems[before:])
         elements.append({"place": place, **values})
-    return elements
+    return elements if good else None
 
 
 def _check_branch(place: str, values: dict[str, Any], out: Reading, at: Path) -> None:
@@ -209,10 +215,13 @@ def _check_branch(place: str, values: dict[str, Any], out: Reading, at: Path) ->
         out.fault((*at, "saturation"), "is for series elements; none was expected in a shunt.")
 
 
-def _rows(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[float, ...], ...]:
+def _rows(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[float, ...], ...] | None:
     rows = []
     columns = spec.fields
-    for index, item in enumerate(_list(spec, raw, out, at)):
+    items = _list(spec, raw, out, at)
+    if items is None:
+        return None
+    for index, item in enumerate(items):
         if not isinstance(item, list) or len(item) != len(columns):
             names = ", ".join(f.key for f in columns)
             count = f"{len(item)} values" if isinstance(item, list) else found(item)
@@ -226,33 +235,35 @@ def _rows(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[float, .
                 out.fault((*at, index, column), str(error))
         if len(row) == len(columns):
             rows.append(tuple(row))
-    return tuple(rows)
+    return tuple(rows) if len(rows) == len(items) else None
 
 
-def _curve(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[float, ...], ...]:
+def _curve(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[float, ...], ...] | None:
     if isinstance(raw, list):
         if not raw:
             out.fault(at, f"an empty list was found; {expectation(spec)} was expected.")
+            return None
         rows = _rows(spec, raw, out, at)
-        rising(rows, out, at, "share")
-        return rows
+        return rows if rows and rising(rows, out, at, "share") else None
     try:
         return ((1.0, quantity_value(spec.fields[-1], raw)),)
     except ValueError as error:
         out.fault(at, str(error))
-        return ()
+        return None
 
 
-def rising(rows: tuple[tuple[float, ...], ...], out: Reading, at: Path, what: str, *, equal: bool = False) -> None:
-    """Note rows whose first column does not rise (``equal``: a step, two rows at one value, is allowed)."""
+def rising(rows: tuple[tuple[float, ...], ...], out: Reading, at: Path, what: str, *, equal: bool = False) -> bool:
+    """Whether the first column rises; each row where not is noted (``equal``: two rows at one value are a step)."""
+    good = True
     for index, (one, two) in enumerate(itertools.pairwise(rows)):
         if two[0] < one[0] or (two[0] == one[0] and not equal):
+            good = False
             out.fault((*at, index + 1, 0), f"the rows must rise in {what}; this one is not above the row before it.")
+    return good
 
 
 def read_load(raw: Any) -> tuple[str, float]:
     """A load of a case as (kind, value): share, power or off; raises ValueError with a sentence."""
-    spec = schema.LOAD
     if isinstance(raw, str):
         if raw.strip().lower() == "off":
             return "off", 0.0
@@ -264,20 +275,21 @@ def read_load(raw: Any) -> tuple[str, float]:
         raise ValueError(f"{found(raw)} was found; a share (60 %), an output power (12 W) or 'off' was expected.")
     if number < 0:
         raise ValueError(f"{found(raw)} is out of range; a share (60 %), an output power (12 W) or 'off' was expected.")
-    check_limits(spec, number, raw)
-    return kind, number
+    return kind, number + 0.0
 
 
-def _loads(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[str, tuple[str, float]], ...]:
+def _loads(spec: Field, raw: Any, out: Reading, at: Path) -> tuple[tuple[str, tuple[str, float]], ...] | None:
+    """The loads that can be read; a converter whose load cannot is as one that is not named."""
     if not isinstance(raw, dict):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
-        return ()
+        return None
     loads = []
     for ident, cell in raw.items():
         try:
             loads.append((ident, read_load(cell)))
         except ValueError as error:
-            out.fault((*at, ident), str(error))
+            if ident != "note":  # which every table may hold
+                out.fault((*at, ident), str(error))
     return tuple(loads)
 
 

@@ -62,7 +62,7 @@ def hint(field: Field) -> str:
     if field.choices:
         words.append("One of " + ", ".join(field.choices) + ".")
     if limits:
-        words.append(limits.capitalize() + ".")
+        words.append(limits[0].upper() + limits[1:] + ".")
     if field.otherwise:
         words.append(f"Default: {field.otherwise}.")
     elif isinstance(field.default, float):

@@ -91,7 +91,7 @@ def changed(path: FilePath, known: Fingerprint) -> bool:
     """Whether the file differs from the state ``known``; reads it only where its times or size differ."""
     try:
         now = os.stat(path)
-    except OSError:
+    except (OSError, ValueError):
         return True
     if (now.st_mtime_ns, now.st_size, now.st_ino) == (known.mtime_ns, known.size, known.inode):
         return False
@@ -111,39 +111,43 @@ def save(document: Document, path: FilePath, known: Fingerprint | None, *, over:
     """
     if not over:
         if known is None and os.path.lexists(path):
-            raise ChangedOnDiskError(f"{path} exists already; nothing was written.")
-        if known is not None and not path.exists():
-            raise ChangedOnDiskError(f"{path} has been removed or renamed since it was read; nothing was written.")
+            raise ChangedOnDiskError(f"{_shown(path)} exists already; nothing was written.")
+        if known is not None and not os.path.exists(path):
+            raise ChangedOnDiskError(
+                f"{_shown(path)} has been removed or renamed since it was read; nothing was written."
+            )
         if known is not None and changed(path, known):
-            raise ChangedOnDiskError(f"{path} was changed by someone else since it was read; nothing was written.")
+            raise ChangedOnDiskError(
+                f"{_shown(path)} was changed by someone else since it was read; nothing was written."
+            )
     rendered = render(document)
     return Saved(write_text(path, rendered.text), rendered.notes)
 
 
 def render(document: Document) -> toml_text.Rendered:
     """The document as text, proven to read back as the same values; raises ProjectError if it would not."""
-    if document.text:
-        rendered = toml_text.render(document.text, document.data, document.origin)
-    else:
-        rendered = toml_text.Rendered(toml_text.dump(document.data), ())
     try:
-        back = tomllib.loads(rendered.text.removeprefix("\ufeff"))
-    except tomllib.TOMLDecodeError as error:
+        if document.text:
+            rendered = toml_text.render(document.text, document.data, document.origin)
+        else:
+            rendered = toml_text.Rendered(toml_text.dump(document.data), ())
+        same = toml_text.same(tomllib.loads(rendered.text.removeprefix("\ufeff")), document.data)
+    except (ValueError, RecursionError) as error:  # a number of thousands of digits, brackets nested too deep
         raise ProjectError(f"the text to be saved would not read back ({error}); nothing was written.") from error
-    if not toml_text.same(back, document.data):
+    if not same:
         raise ProjectError("the text to be saved would read back with other values; nothing was written.")
     return rendered
 
 
 def write_text(path: FilePath, text: str) -> Fingerprint:
     """Replace a file by ``text`` in one step; its mode, its owner where allowed, and a link to it are kept."""
-    target = FilePath(os.path.realpath(path))
     data = text.encode("utf-8")
     temporary = ""
     try:
+        target = FilePath(os.path.realpath(path))
         old = os.stat(target) if target.exists() else None
         if old is not None and not stat.S_ISREG(old.st_mode):
-            raise ProjectError(f"{path} is not an ordinary file; nothing was written.")
+            raise ProjectError(f"{_shown(path)} is not an ordinary file; nothing was written.")
         handle, temporary = tempfile.mkstemp(prefix=f".{target.name}.", suffix=".new", dir=target.parent)
         with os.fdopen(handle, "wb") as out:
             out.write(data)
@@ -161,8 +165,8 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
         temporary = ""
         _sync_folder(target.parent)
         written = os.stat(target)
-    except OSError as error:
-        raise ProjectError(f"{path} could not be written: {_reason(error)}. Nothing was changed.") from error
+    except (OSError, ValueError) as error:
+        raise ProjectError(f"{_shown(path)} could not be written: {_reason(error)}. Nothing was changed.") from error
     finally:
         if temporary:
             with contextlib.suppress(OSError):
@@ -173,18 +177,25 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
 def copy_shelves(names: list[str], source: FilePath, target: FilePath) -> None:
     """Bring the shelf files of a project along when it is saved into another folder.
 
-    Raises ProjectError where a different file of that name stands there already.
+    ``names`` are those of ``Shelf.name``. Raises ProjectError where a different file of such a name stands there
+    already, before anything has been written.
     """
+    wanted: list[tuple[FilePath, str]] = []
     for name in names:
         old, new = source / name, target / name
-        if not old.is_file():
+        if not os.path.exists(old):
             continue
-        if new.exists():
-            if new.read_bytes() != old.read_bytes():
-                raise ProjectError(f"another {name} stands in {target} already; nothing was written.")
-            continue
-        new.parent.mkdir(parents=True, exist_ok=True)
-        write_text(new, _decode(_read_bytes(old)[0], name))
+        raw = _read_bytes(old)[0]
+        if not os.path.lexists(new):
+            wanted.append((new, _decode(raw, name)))
+        elif _read_bytes(new)[0] != raw:
+            raise ProjectError(f"another {_shown(name)} stands in {_shown(target)} already; nothing was written.")
+    for new, text in wanted:
+        try:
+            new.parent.mkdir(parents=True, exist_ok=True)
+        except OSError as error:
+            raise ProjectError(f"{_shown(new)} could not be written: {_reason(error)}.") from error
+        write_text(new, text)
 
 
 class NoFileError(ProjectError):
@@ -195,21 +206,20 @@ def _read_bytes(path: FilePath) -> tuple[bytes, Fingerprint]:
     try:
         with open(path, "rb", opener=_open_without_waiting) as handle:
             info = os.fstat(handle.fileno())
-            if stat.S_ISDIR(info.st_mode):
-                raise ProjectError(f"{path} is a folder; a project file was expected.")
             if not stat.S_ISREG(info.st_mode):
-                raise ProjectError(f"{path} is not an ordinary file; a project file was expected.")
+                raise ProjectError(f"{_shown(path)} is not an ordinary file; a project file was expected.")
             if info.st_size > MAX_BYTES:
                 raise ProjectError(_too_large(path, info.st_size))
             raw = handle.read(MAX_BYTES + 1)
     except FileNotFoundError as error:
+        name = _shown(path)
         raise NoFileError(
-            f"{path} does not exist; an existing project file was expected ('budget new {path}' writes one)."
+            f"{name} does not exist; an existing project file was expected ('budget new {name}' writes one)."
         ) from error
     except IsADirectoryError as error:
-        raise ProjectError(f"{path} is a folder; a project file was expected.") from error
+        raise ProjectError(f"{_shown(path)} is a folder; a project file was expected.") from error
     except (OSError, ValueError) as error:
-        raise ProjectError(f"{printable(str(path), 80)} could not be read: {_reason(error)}.") from error
+        raise ProjectError(f"{_shown(path)} could not be read: {_reason(error)}.") from error
     if len(raw) > MAX_BYTES:
         raise ProjectError(_too_large(path, len(raw)))
     return raw, Fingerprint(info.st_mtime_ns, info.st_size, info.st_ino, hashlib.sha256(raw).hexdigest())
@@ -219,8 +229,12 @@ def _open_without_waiting(name: str, flags: int) -> int:
     return os.open(name, flags | os.O_NONBLOCK | os.O_CLOEXEC)  # a pipe without a writer must not hang the program
 
 
+def _shown(path: FilePath | str) -> str:
+    return printable(str(path), 200)
+
+
 def _too_large(path: FilePath, size: int) -> str:
-    return f"{path} has {size / 1e6:.1f} MB; a project file has at most {MAX_BYTES / 1e6:.0f} MB."
+    return f"{_shown(path)} has {size / 1e6:.1f} MB; a project file has at most {MAX_BYTES / 1e6:.0f} MB."
 
 
 def _reason(error: BaseException) -> str:
@@ -233,7 +247,7 @@ def _decode(raw: bytes, name: str) -> str:
     except UnicodeDecodeError as error:
         line = raw[: error.start].count(b"\n") + 1
         raise ProjectError(
-            f"{name}: line {line}: a byte that is not UTF-8 was found; UTF-8 text was expected."
+            f"{_shown(name)}: line {line}: a byte that is not UTF-8 was found; UTF-8 text was expected."
         ) from error
 
 
@@ -243,11 +257,11 @@ def _parse_toml(text: str, name: str) -> dict[str, object]:
         return tomllib.loads(body)
     except tomllib.TOMLDecodeError as error:
         faults = [str(error), *_further_faults(body, str(error))]
-        lines = "\n".join(f"{name}: {printable(fault, 200)}." for fault in faults[:MAX_FAULTS])
-        raise ProjectError(f"{lines}\n{name}: valid TOML was expected.") from error
+        lines = "\n".join(f"{_shown(name)}: {printable(fault, 200)}." for fault in faults[:MAX_FAULTS])
+        raise ProjectError(f"{lines}\n{_shown(name)}: valid TOML was expected.") from error
     except (RecursionError, ValueError) as error:
         raise ProjectError(
-            f"{name}: brackets nested too deep or a number too long; a project file was expected."
+            f"{_shown(name)}: brackets nested too deep or a number too long; a project file was expected."
         ) from error
 
 
@@ -283,22 +297,23 @@ def _shelves(data: dict[str, object], folder: FilePath, own: str, problems: list
     root = FilePath(os.path.realpath(folder))
     shelves: dict[FilePath, Shelf] = {}
 
-    def take(names: object, base: FilePath, chain: tuple[FilePath, ...], source: str) -> None:
+    def take(names: object, base: str, chain: tuple[FilePath, ...], source: str) -> None:
         if not isinstance(names, list):
             return
         for name in names:
             if not isinstance(name, str):
                 continue
-            fault = _take_one(name, base, chain)
-            if fault:
-                where = f"{source}: shelf_files" if source else "shelf_files"
-                problems.append(Problem(("shelf_files",), fault, place=where))
+            for fault in take_one(name, base, chain).splitlines():
+                problems.append(Problem(("shelf_files",), fault, source=source, place="shelf_files"))
 
-    def _take_one(name: str, base: FilePath, chain: tuple[FilePath, ...]) -> str:
+    def take_one(name: str, base: str, chain: tuple[FilePath, ...]) -> str:
+        shown = os.path.normpath(os.path.join(base, name))
         try:
-            path = FilePath(os.path.realpath(base / name))
-        except ValueError:
+            path = FilePath(os.path.realpath(root / base / name))
+        except (OSError, ValueError):
             return f"{found(name)} is not a file name."
+        if os.path.isabs(name) or shown.split(os.sep)[0] == "..":
+            return f"{found(name)} lies outside the project's folder; a path from this file down was expected."
         if not path.is_relative_to(root):
             return f"{found(name)} lies outside the project's folder; only files below it may be read."
         if path in chain:
@@ -308,18 +323,20 @@ def _shelves(data: dict[str, object], folder: FilePath, own: str, problems: list
         if len(shelves) >= MAX_SHELVES:
             return f"{found(name)} is one too many; at most {MAX_SHELVES} shelf files are read."
         try:
-            inner = _parse_toml(_decode(_read_bytes(path)[0], name), name)
+            inner = _parse_toml(_decode(_read_bytes(path)[0], shown), shown)
+        except NoFileError:
+            return f"{found(name)} does not exist; a file of shelf parts was expected."
         except ProjectError as error:
             return str(error)
-        shelves[path] = Shelf(name, inner)
+        shelves[path] = Shelf(shown, inner)
         for key in inner:
             if key not in ("format", "shelf", "shelf_files", "note"):
                 text = "is an unknown key in a shelf file; it is not used."
-                problems.append(Problem(("shelf_files",), text, False, name, key))
-        take(inner.get("shelf_files"), path.parent, (*chain, path), name)
+                problems.append(Problem(("shelf_files",), text, False, shown, printable(key)))
+        take(inner.get("shelf_files"), os.path.dirname(shown), (*chain, path), shown)
         return ""
 
-    take(data.get("shelf_files"), root, (FilePath(os.path.realpath(root / own)),), "")
+    take(data.get("shelf_files"), "", (FilePath(os.path.realpath(root / own)),), "")
     return tuple(shelves.values())
 
 
