@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+import os
 import sys
+
+# The matrices here are small: several threads on one of them wait for each other longer than they calculate.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 
 def main() -> None:

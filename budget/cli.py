@@ -257,7 +257,7 @@ def _sheet(options: argparse.Namespace) -> int:
     from budget.project.problems import ProjectError
     from budget.session import open_demo, open_file
 
-    if not all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout)):
+    if not all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr)):
         _say("budget: the sheet needs a terminal; 'budget check FILE' prints the results without one.")
         return UNUSABLE
     try:
@@ -266,6 +266,7 @@ def _sheet(options: argparse.Namespace) -> int:
         _say(f"budget: {error}")
         return UNUSABLE
     os.environ.setdefault("ESCDELAY", "300")  # before textual: split escape sequences over SSH are keys, not Escape
+    os.environ.setdefault("TEXTUAL_FPS", "240")  # else a result that follows an edit waits up to 17 ms for its paint
     from budget.ui.app import show
 
     return show(session, ascii_only=options.ascii or _ascii_locale())

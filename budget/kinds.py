@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from decimal import ROUND_HALF_EVEN, Context, Decimal
+from functools import lru_cache
 
 from budget.units import PREFIXES
 
@@ -60,6 +61,7 @@ def show(si: float | None, kind: Kind, digits: int = 4) -> str:
     return f"{number} {unit}".strip(" ")
 
 
+@lru_cache(maxsize=16384)
 def show_parts(si: float | None, kind: Kind, digits: int = 4) -> tuple[str, str]:
     """The number and the unit of ``show``, for cells that align them apart."""
     if si is None:

@@ -8,7 +8,9 @@ go.
 from __future__ import annotations
 
 import os
-from dataclasses import dataclass, field
+from collections import deque
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field, replace
 from pathlib import Path as FilePath
 from typing import TYPE_CHECKING, Any
 
@@ -34,32 +36,53 @@ class Step:
 
 @dataclass(frozen=True, slots=True)
 class Snapshot:
-    """What a worker needs to calculate one generation."""
+    """What a worker needs to calculate one generation; of ``previous`` results it uses again what did not change."""
 
     generation: int
     document: Document
     shelves: tuple[Shelf, ...]
     problems: tuple[Problem, ...]
     cache: Cache
+    previous: Result | None = None
 
 
 @dataclass(frozen=True, slots=True)
 class Outcome:
-    """What a worker gives back; ``result`` is ``None`` where there is nothing to calculate."""
+    """What a worker gives back; ``result`` is ``None`` where there is nothing to calculate.
+
+    Results come in stages, the fast ones first; ``complete`` says that nothing more will follow.
+    """
 
     generation: int
     built: Built
     result: Result | None
+    complete: bool = True
+
+
+def stages(
+    snapshot: Snapshot, cancelled: Callable[[], bool] | None = None, progress: Callable[[float], None] | None = None
+) -> Iterator[Outcome]:
+    """Read the document of a snapshot and evaluate it, stage by stage.
+
+    Runs in any thread, one at a time (the cache is shared); the consumer may stop between two stages. A long stage asks
+    ``cancelled``, and ends the stages if that says so; it tells ``progress`` the share done.
+    """
+    from budget.engine import evaluate  # numpy is loaded here, after the first paint
+
+    built = build(snapshot.document, snapshot.shelves, snapshot.cache)
+    built = replace(built, problems=(*snapshot.problems, *built.problems))
+    if built.project is None:
+        yield Outcome(snapshot.generation, built, None)
+        return
+    result = evaluate.evaluate_dc(built.project)
+    yield Outcome(snapshot.generation, built, result, complete=False)
+    result = evaluate.with_emissions(result, snapshot.previous)
+    yield Outcome(snapshot.generation, built, result)
 
 
 def calculate(snapshot: Snapshot) -> Outcome:
-    """Read the document of a snapshot and evaluate it. Runs in any thread, one at a time (the cache is shared)."""
-    from budget.engine.evaluate import evaluate  # numpy is loaded here, after the first paint
-
-    built = build(snapshot.document, snapshot.shelves, snapshot.cache)
-    built = Built(built.project, (*snapshot.problems, *built.problems), built.left_out)
-    result = evaluate(built.project) if built.project is not None else None
-    return Outcome(snapshot.generation, built, result)
+    """All stages at once."""
+    return deque(stages(snapshot), maxlen=1)[0]
 
 
 @dataclass(slots=True)
@@ -74,6 +97,7 @@ class Session:
     undone: list[Step] = field(default_factory=list)
     generation: int = 1
     outcome: Outcome | None = None
+    full: Result | None = None  # the last complete result; a later one may be in work
     cache: Cache = field(default_factory=Cache)
 
     @property
@@ -85,6 +109,11 @@ class Session:
     def fresh(self) -> bool:
         """Whether the results belong to the present document."""
         return self.outcome is not None and self.outcome.generation == self.generation
+
+    @property
+    def complete(self) -> bool:
+        """Whether all stages of the present document's results are there."""
+        return self.fresh and self.outcome is not None and self.outcome.complete
 
     @property
     def result(self) -> Result | None:
@@ -100,13 +129,15 @@ class Session:
         return self.path.name if self.path else "unsaved project"
 
     def snapshot(self) -> Snapshot:
-        return Snapshot(self.generation, self.document, self.shelves, self.file_problems, self.cache)
+        return Snapshot(self.generation, self.document, self.shelves, self.file_problems, self.cache, self.full)
 
     def accept(self, outcome: Outcome) -> bool:
         """Take a result if it belongs to the present document; an older one is let go."""
         if outcome.generation != self.generation:
             return False
         self.outcome = outcome
+        if outcome.complete:
+            self.full = outcome.result
         return True
 
     def apply(self, label: str, document: Document, spot: Any) -> bool:
@@ -191,9 +222,12 @@ class Session:
 
     def enter(self, path: Path, text: str, spot: Any) -> bool:
         """Type ``text`` into a cell; raises ProjectError with a sentence where the cell cannot take it."""
+        _, lent = edits.value_at(self.document, self.shelves, path)
         document = edits.enter(self.document, self.shelves, path, text)
-        label = place(self.document, path)
-        return self.apply(f"{label} = {printable(text.strip(), 60) or 'empty'}", document, spot)
+        label = f"{place(self.document, path)} = {printable(text.strip(), 60) or 'empty'}"
+        if lent and len(path) > len(edits.owner(path)) + 1:
+            label += " (its own from now on, no longer the shelf's)"
+        return self.apply(label, document, spot)
 
 
 def open_file(path: FilePath) -> Session:

@@ -9,6 +9,17 @@ A row carries codes instead of sentences; the reports word them. ``missing`` nam
 - "never runs": every case switches the converter off;
 - "beyond data": a case loads the converter above its last efficiency point, whose efficiency was held.
 
+Rows of emissions have remarks of their own, some with ids after a colon ("without a noise description: CV5, CV7"):
+
+- "no room for the edges": the duty of these converters leaves none in that corner, which is a failure without a number;
+- "without a noise description": these run, and nothing says what differential noise they make;
+- "no noise source": no converter behind a filter has one, so there is nothing to add up;
+- "no line in the band": whatever makes noise makes none that the receiver would see;
+- "table held beyond its ends": these filters are used beyond the ends of their attenuation table;
+- "limit from memory": the points of the limit set were not read in the standard;
+- "no receiver bandwidth": the limit line has no bandwidth rows, and lines are taken one by one;
+- "too many lines": more than can be added up.
+
 Where the limit was not entered the row still gives the worst value and its corner, with the status "no data".
 A limit of zero (a rating derated to nothing) has no ratio: the margin is None, and any value above it fails. A value
 within 1e-12 of a limit is at it, with a margin of 0, so that 1.1 V times 3 A does not overload a 3.3 W converter.
@@ -22,6 +33,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from budget.engine.emission import NO_ROOM, Emission, Emissions
+from budget.engine.lines import Lines
 from budget.engine.model import LINES, Project
 from budget.engine.operating import ROUNDING, Operating, derating
 
@@ -30,6 +43,35 @@ NO_POINT = "no operating point"
 LEFT_OUT = "unsolved corners left out"
 NEVER_RUNS = "never runs"
 BEYOND_DATA = "beyond data"
+SILENT = "without a noise description"
+NO_SOURCE = "no noise source"
+NO_LINE = "no line in the band"
+TABLE_HELD = "table held beyond its ends"
+FROM_MEMORY = "limit from memory"
+NO_BANDWIDTH = "no receiver bandwidth"
+TOO_MANY = "too many lines"
+
+ORDER = (  # of the rows, by the first words of their checks
+    "allocation",
+    "operating point",
+    "bus current",
+    "filter current",
+    "filter voltage",
+    "converter load",
+    "input low",
+    "input high",
+    "inrush peak",
+    "inrush i2t",
+    "bus inrush",
+    "breaker i2t",
+    "overshoot",
+    "start",
+    "emission",
+    "stability",
+    "impedance",
+)
+_RANK = {check: k for k, check in enumerate(ORDER)}
+_DB = 1e-9  # dB; a level this close to a limit is at it
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,7 +85,7 @@ class CheckRow:
     value: float | None
     limit: float | None
     wanted: float | None
-    unit: str  # "A", "V", "W", ""
+    unit: str  # "A", "V", "W", "dBuV", "dBuA", ""
     margin: float | None
     margin_unit: str  # "ratio", "dB", or "" if there is none
     status: str  # "fail", "thin", "ok", "no data"
@@ -55,6 +97,75 @@ def worst_status(rows: Iterable[CheckRow]) -> str:
     """The worst of "fail", "thin" and "ok"; rows without data do not count."""
     found = {row.status for row in rows}
     return "fail" if "fail" in found else "thin" if "thin" in found else "ok"
+
+
+def in_order(rows: Iterable[CheckRow]) -> tuple[CheckRow, ...]:
+    """The rows by check in the fixed order of ``ORDER``; rows of one check stay as they stand."""
+    return tuple(sorted(rows, key=lambda row: _RANK["emission" if row.check.startswith("emission ") else row.check]))
+
+
+def emission_checks(project: Project, found: Emissions) -> tuple[CheckRow, ...]:
+    """One row for each limit set, at the corner with the smallest margin by the rules' ``combine``."""
+    return tuple(_emission(project, found, spectrum) for spectrum in found.spectra)
+
+
+def _emission(project: Project, found: Emissions, spectrum: Lines) -> CheckRow:
+    limit = spectrum.limit
+    rows = [row for row in found.rows if row.limit == limit.name]
+    solved = [row for row in rows if row.solved]
+    remarks = []
+    if found.silent and found.noisy:
+        remarks.append(f"{SILENT}: {', '.join(found.silent)}")
+    if spectrum.held:
+        remarks.append(f"{TABLE_HELD}: {', '.join(spectrum.held)}")
+    if not limit.bandwidth:
+        remarks.append(NO_BANDWIDTH)
+    if limit.basis == "memory":
+        remarks.append(FROM_MEMORY)
+
+    def row(worst: Emission | None, status: str, first: str = "") -> CheckRow:
+        told = (*((first,) if first else ()), *remarks)
+        case, line = (worst.case, worst.line) if worst else (None, None)
+        if worst is None or worst.margin is None or worst.limit_level is None:
+            return CheckRow(
+                f"emission {limit.name}", "bus", case, line, None, None, None, limit.unit, None, "", status, (), told
+            )
+        wanted = worst.limit_level - project.rules.emission_margin
+        margin = 0.0 if abs(worst.margin) <= _DB else worst.margin
+        return CheckRow(
+            f"emission {limit.name}",
+            "bus",
+            case,
+            line,
+            worst.level,
+            worst.limit_level,
+            wanted,
+            limit.unit,
+            margin,
+            "dB",
+            status,
+            (),
+            told,
+        )
+
+    if spectrum.too_many:
+        return row(None, "no data", TOO_MANY)
+    if not found.noisy:
+        return row(None, "no data", NO_SOURCE)
+    if not solved:
+        return row(None, "no data", NO_POINT)
+    if len(solved) < len(rows):
+        remarks.insert(0, LEFT_OUT)
+    failed = next((r for r in solved if r.failures), None)
+    if failed is not None:
+        return row(failed, "fail", f"{NO_ROOM}: {', '.join(ident for _, ident in failed.failures)}")
+    seen = [r for r in solved if r.margin is not None]
+    if not seen:
+        return row(None, "ok", NO_LINE)
+    worst = min(seen, key=lambda r: r.margin if r.margin is not None else 0.0)
+    assert worst.margin is not None
+    status = "fail" if worst.margin < -_DB else "thin" if worst.margin < project.rules.emission_margin - _DB else "ok"
+    return row(worst, status)
 
 
 def dc_checks(project: Project, operating: Operating, lines: tuple[int, ...] = (0, 1, 2)) -> tuple[CheckRow, ...]:

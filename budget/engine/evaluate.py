@@ -2,11 +2,16 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 
-from budget.engine.checks import BEYOND_DATA, CheckRow, dc_checks, worst_status
+from budget.engine.checks import BEYOND_DATA, CheckRow, dc_checks, emission_checks, in_order, worst_status
+from budget.engine.emission import Emissions, emissions
+from budget.engine.holdup import HoldUp, hold_up
 from budget.engine.model import LINES, Project
 from budget.engine.operating import Operating, operating_points
+from budget.engine.stability import Stability, stability, stability_checks
+from budget.engine.transient import Inrush, inrush
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,9 +35,61 @@ class Result:
     status: str  # the worst of "fail", "thin", "ok"
     warnings: tuple[tuple[str, ...], ...] = ()
     lines: tuple[int, ...] = (0, 1, 2)  # the lines that count, as indices of LINES
+    emissions: Emissions | None = None  # None: not computed yet, as for the next two
+    stability: Stability | None = None
+    inrush: Inrush | None = None
+    hold_up: tuple[HoldUp, ...] = ()
 
 
-def evaluate(project: Project, lines: tuple[int, ...] = (0, 1, 2)) -> Result:
+def evaluate(project: Project, lines: tuple[int, ...] = (0, 1, 2), previous: Result | None = None) -> Result:
+    """Everything at once: the DC part, then emissions, stability, switch-on and surge.
+
+    ``lines`` are the lines that count, as indices of ``LINES``; ``previous`` is a result to reuse what did not change.
+    """
+    return with_emissions(evaluate_dc(project, lines), previous)
+
+
+def with_emissions(result: Result, previous: Result | None = None) -> Result:
+    """The result with emissions, beats and their check rows.
+
+    Of ``previous``, the result of any project, the spectra are used again where networks and clocks are the same.
+    """
+    project = result.project
+    found = emissions(project, result.operating, result.lines, previous.emissions if previous else None)
+    kept = (row for row in result.checks if not row.check.startswith("emission "))
+    checks = in_order((*kept, *emission_checks(project, found)))
+    return replace(result, checks=checks, status=worst_status(checks), emissions=found)
+
+
+def with_stability(result: Result) -> Result:
+    """The result with the stability of every corner and its check rows."""
+    project = result.project
+    found = stability(project, result.operating)
+    kept = (row for row in result.checks if row.check not in ("stability", "impedance"))
+    checks = in_order((*kept, *stability_checks(project, found, result.lines)))
+    return replace(result, checks=checks, status=worst_status(checks), stability=found)
+
+
+def with_inrush(
+    result: Result,
+    cancelled: Callable[[], bool] | None = None,
+    progress: Callable[[float], None] | None = None,
+) -> Result:
+    """The result with switch-on and surge of every case and their check rows.
+
+    Raises ``transient.CancelledError`` when ``cancelled`` says so; ``progress`` is told the share done.
+    """
+    from budget.engine.transient import inrush_checks
+
+    project = result.project
+    found = inrush(project, result.operating, cancelled=cancelled, progress=progress)
+    rows = inrush_checks(project, found)
+    names = {row.check for row in rows}
+    checks = in_order((*(row for row in result.checks if row.check not in names), *rows))
+    return replace(result, checks=checks, status=worst_status(checks), inrush=found)
+
+
+def evaluate_dc(project: Project, lines: tuple[int, ...] = (0, 1, 2)) -> Result:
     """Compute the operating points, the checks that rest on them, and the energy of each case.
 
     ``lines`` are the lines that count in the checks, as indices of ``LINES``.
@@ -47,6 +104,7 @@ def evaluate(project: Project, lines: tuple[int, ...] = (0, 1, 2)) -> Result:
         status=worst_status(checks),
         warnings=_warnings(project, operating),
         lines=lines,
+        hold_up=hold_up(project, operating),
     )
 
 

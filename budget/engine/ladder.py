@@ -8,6 +8,8 @@ each angular frequency ``w`` [rad/s], shape (K,).
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -16,44 +18,100 @@ from budget.engine.model import Branch, Ladder, Lead
 Complex = NDArray[np.complex128]
 Floats = NDArray[np.float64]
 
-_TINY = 1e-300  # siemens or ohm; keeps a lossless resonance that is met exactly finite
+SMALLEST = 1e-60  # siemens or ohm: a lossless resonance met exactly stays finite, and so does a product of several
 
 
 def impedance(branch: Branch, w: Floats) -> Complex:
     """R + (jwL || Rp || 1/jwCp) + 1/jwC of one element [ohm], shape (K,); absent parts drop out."""
-    s = 1j * w
-    total = np.full(w.shape, complex(branch.R))
-    across = np.zeros(w.shape, dtype=np.complex128)
-    if branch.L:
-        across += 1.0 / (s * branch.L)
-    if branch.Rp:
-        across += 1.0 / branch.Rp
-    if branch.Cp:
-        across += s * branch.Cp
-    if branch.L or branch.Rp or branch.Cp:
-        total += 1.0 / np.where(np.abs(across) < _TINY, _TINY, across)
-    if branch.C:
-        total += 1.0 / (s * branch.C)
-    return total
+    z: Complex = impedances((branch,), w)[0]
+    return z
 
 
 def admittance(branch: Branch, w: Floats) -> Complex:
     """The inverse of ``impedance`` [S], shape (K,)."""
-    z = impedance(branch, w)
-    return 1.0 / np.where(np.abs(z) < _TINY, _TINY, z)
+    return inverse(impedance(branch, w))
+
+
+def impedances(branches: Sequence[Branch], w: Floats) -> Complex:
+    """``impedance`` of several elements at once [ohm], shape (B, K)."""
+    found = np.empty((len(branches), w.size), dtype=np.complex128)
+    tanks = [k for k, b in enumerate(branches) if b.Rp or b.Cp]
+    plain = [k for k, b in enumerate(branches) if not (b.Rp or b.Cp)]
+    if plain:
+        z = np.empty((len(plain), w.size), dtype=np.complex128)
+        z.real = np.array([branches[k].R for k in plain])[:, None]
+        z.imag = np.multiply.outer(np.array([branches[k].L for k in plain]), w)
+        found[plain] = z
+    if tanks:
+        some = [branches[k] for k in tanks]
+        conductance = np.array([1.0 / b.Rp if b.Rp else 0.0 for b in some])[:, None]
+        susceptance = np.multiply.outer(np.array([b.Cp or 0.0 for b in some]), w)
+        susceptance -= np.multiply.outer(np.array([1.0 / b.L if b.L else 0.0 for b in some]), 1.0 / w)
+        square = conductance * conductance + susceptance * susceptance
+        open_circuit = square < SMALLEST * SMALLEST
+        square[open_circuit] = 1.0
+        z = np.empty(square.shape, dtype=np.complex128)
+        z.real = np.array([b.R for b in some])[:, None] + conductance / square
+        z.imag = -susceptance / square
+        z[open_circuit] = 1.0 / SMALLEST
+        found[tanks] = z
+    blocked = [k for k, b in enumerate(branches) if b.C]
+    if blocked:
+        elastance = np.array([1.0 / (branches[k].C or 1.0) for k in blocked])
+        found.imag[blocked] -= np.multiply.outer(elastance, 1.0 / w)
+    return found
+
+
+def elements(branches: Sequence[Branch], w: Floats) -> list[Complex]:
+    """Impedance [ohm] of each series branch, admittance [S] of each shunt, each (K,).
+
+    The same as ``impedance`` and ``admittance``; capacitors with ESR and ESL, which are many, go through real numbers.
+    """
+    found: list[Complex] = [np.zeros(0, dtype=np.complex128)] * len(branches)
+    simple = [k for k, b in enumerate(branches) if b.place == "shunt" and b.C and not (b.Rp or b.Cp)]
+    if simple:
+        some = [branches[k] for k in simple]
+        resistance = np.array([b.R for b in some])[:, None]
+        reactance = np.multiply.outer(np.array([b.L for b in some]), w)
+        reactance -= np.multiply.outer(np.array([1.0 / b.C if b.C else 0.0 for b in some]), 1.0 / w)
+        square = reactance * reactance
+        square += resistance * resistance
+        short = None if square.all() else square == 0.0
+        if short is not None:
+            square[short] = 1.0
+        y = np.empty(square.shape, dtype=np.complex128)
+        np.divide(resistance, square, out=y.real)
+        np.divide(reactance, square, out=y.imag)
+        np.negative(y.imag, out=y.imag)
+        if short is not None:
+            y[short] = 1.0 / SMALLEST
+        for k, row in zip(simple, y, strict=True):
+            found[k] = row
+    rest = sorted(set(range(len(branches))) - set(simple))
+    if rest:
+        for k, row in zip(rest, impedances([branches[k] for k in rest], w), strict=True):
+            found[k] = row if branches[k].place == "series" else inverse(row)
+    return found
+
+
+def inverse(z: Complex) -> Complex:
+    """1/z of each entry, shape (K,), in ohm or S; what is zero counts as the smallest impedance there is, 1e-60."""
+    if not z.all():
+        z = np.where(z == 0.0, SMALLEST, z)
+    return 1.0 / z
 
 
 def seen(ladder: Ladder, w: Floats, behind: Complex) -> Complex:
     """Admittance [S] seen from the bus side of a ladder with ``behind`` [S] at its other end, shape (K,)."""
     y = behind
     for branch in reversed(ladder):
-        y = y / (1.0 + impedance(branch, w) * y) if branch.place == "series" else y + admittance(branch, w)
+        y = y * inverse(1.0 + impedance(branch, w) * y) if branch.place == "series" else y + admittance(branch, w)
     return y
 
 
 def seen_through(lead: Lead, w: Floats, behind: Complex) -> Complex:
     """Admittance [S] seen through a lead, shape (K,)."""
-    return behind / (1.0 + (lead.R + 1j * w * lead.L) * behind)
+    return behind * inverse(1.0 + (lead.R + 1j * w * lead.L) * behind)
 
 
 def carry(ladder: Ladder, w: Floats, v: Complex, i: Complex) -> tuple[Complex, Complex]:

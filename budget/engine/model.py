@@ -141,6 +141,8 @@ class Converter:
     lead: Lead = Lead()
     input: Ladder = ()
     control_bandwidth: float | None = None
+    hold_up: float | None = None
+    hold_up_to: float | None = None
     frequency: float | None = None
     frequency_tolerance: float = 0.0
     clock: str = ""
@@ -176,7 +178,7 @@ class LimitLine:
     points: tuple[tuple[float, float], ...]
     bandwidth: tuple[tuple[float, float, float], ...] = ()
     basis: str = "own"  # "read" in the standard, from "memory", or the user's "own"
-    source: str = ""
+    source: str = ""  # where the points are from: standard and figure
 
 
 @dataclass(frozen=True, slots=True)

@@ -119,6 +119,9 @@ class _Build:
         if bus is None:
             return Built(None, tuple(self.problems), tuple(self.left_out))
         known = {f.id for _, f in filters if f}
+        # What is behind a filter that cannot be calculated is left out with it, not called "not allocated".
+        lost = set(_idents(self.data.get("filter"))) - known
+        converters = [(n, c) for n, c in converters if not self.lose(c, lost)]
         own = _first_of_each((li for _, li in limits if li and li.name not in schema.LIMIT_SETS), "name")
         project = model.Project(
             bus=bus,
@@ -134,6 +137,13 @@ class _Build:
             title=title,
         )
         return Built(project, tuple(self.problems), tuple(self.left_out))
+
+    def lose(self, converter: model.Converter | None, lost: set[str]) -> bool:
+        """Whether a converter goes with its filter; it is named as left out then."""
+        if converter is None or converter.filter not in lost:
+            return False
+        self.left_out.append(converter.id)
+        return True
 
     def root(self) -> bool:
         """Note what is wrong at the top; whether the file is of a format that can be read."""

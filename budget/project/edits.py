@@ -8,7 +8,9 @@ from __future__ import annotations
 
 import copy
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
+from functools import lru_cache
+from types import MappingProxyType
 from typing import Any
 
 from budget import quantity
@@ -24,6 +26,7 @@ _LISTS = (schema.TABLES, schema.LADDER, schema.ROWS, schema.CURVE)
 _STRANGE = "this cell stands in something that is not a table; mend that first."
 
 
+@lru_cache(maxsize=8192)
 def spec_at(path: Path) -> Field | None:
     """The schema's field for a cell, ``None`` for a path that is no cell."""
     fields, rest = _table_of(path)
@@ -101,6 +104,15 @@ def part_of(document: Document, shelves: Iterable[Shelf], path: Path) -> Tree:
     return {}
 
 
+def shelf_part(document: Document, shelves: Iterable[Shelf], path: Path) -> Tree:
+    """The fields of the shelf part at ``path``, ("shelf", table, name), in this file or a shelf file."""
+    for data in (document.data, *(s.data for s in shelves)):
+        found = doc.get(Document(data), path) if path[:1] == ("shelf",) else None
+        if isinstance(found, dict):
+            return found
+    return {}
+
+
 def shelf_names(document: Document, shelves: Iterable[Shelf], key: str) -> tuple[str, ...]:
     """Names of all shelf parts for ``key``, filter or converter."""
     names: dict[str, None] = {}
@@ -116,8 +128,8 @@ def value_at(document: Document, shelves: Iterable[Shelf], path: Path) -> tuple[
     base = owner(path)
     rest = path[len(base) :]
     row = doc.get(document, base)
-    if rest and isinstance(row, dict) and rest[0] not in row:
-        part = part_of(document, shelves, path)
+    if rest and (row is None or (isinstance(row, dict) and rest[0] not in row)):
+        part = part_of(document, shelves, path) if row is not None else shelf_part(document, shelves, base)
         if rest[0] in part:
             lent = Document({"row": part})
             fake: Path = ("row", *rest)
@@ -200,6 +212,8 @@ def enter(document: Document, shelves: Iterable[Shelf], path: Path, text: str) -
         raise ProjectError("this is a whole row; its own cells can be typed into.")
     if not text.strip():
         return clear(document, path)
+    if path[0] == "shelf" and doc.get(document, owner(path)) is None:
+        raise ProjectError("this part is kept in another file; D on the shelf copies it into this one.")
     value = stored(spec, text)
     if spec.kind == schema.FILTER and value not in ("", *ids(document, "filter")):
         names = ", ".join(ids(document, "filter")) or "none"
@@ -362,8 +376,22 @@ def new_row(document: Document, key: str, at: int, **values: Any) -> tuple[Docum
     return insert_row(document, (key, at), row)
 
 
-def insert_row(document: Document, path: Path, row: Tree) -> tuple[Document, Path]:
-    """A document with ``row`` put in at ``path``; its id is numbered on where it is taken."""
+def loads_of(document: Document, path: Path) -> dict[str, Any]:
+    """What each case asks of the converter at ``path``, by the id of the case."""
+    ident = doc.get(document, (*path, "id"))
+    cases = document.data.get("case")
+    rows = [case for case in cases if isinstance(case, dict)] if isinstance(cases, list) else []
+    loads = {str(case.get("id")): case.get("load") for case in rows}
+    return {case: load[ident] for case, load in loads.items() if isinstance(load, dict) and ident in load}
+
+
+def insert_row(
+    document: Document, path: Path, row: Tree, loads: Mapping[str, Any] = MappingProxyType({})
+) -> tuple[Document, Path]:
+    """A document with ``row`` put in at ``path``; its id is numbered on where it is taken.
+
+    ``loads`` (by the id of a case) is what the cases shall ask of it, for a converter.
+    """
     key = str(path[0])
     column = "name" if key == "limit" else "id"
     if len(path) == 2 and key in schema.TABLES_BY_KEY:
@@ -371,7 +399,11 @@ def insert_row(document: Document, path: Path, row: Tree) -> tuple[Document, Pat
         if not isinstance(ident, str) or ident in _taken(document, key):
             row = {**row, column: free_id(document, key, ident if isinstance(ident, str) else key)}
     try:
-        return doc.insert(document, path, copy.deepcopy(row)), path
+        document = doc.insert(document, path, copy.deepcopy(row))
+        for index, case in enumerate(document.data.get("case", []) if loads else ()):
+            if isinstance(case, dict) and case.get("id") in loads:
+                document = doc.put(document, ("case", index, "load", row[column]), loads[str(case["id"])])
+        return document, path
     except KeyError as error:
         raise ProjectError("no row can be put in here: what stands there is not a list; mend that first.") from error
 

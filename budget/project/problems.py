@@ -77,5 +77,14 @@ def place(document: Document, path: Path) -> str:
         rest = path[2:]
     else:
         words.append(printable(str(path[0])))
-    words += [f"item {key + 1}" if isinstance(key, int) else printable(str(key)) for key in rest]
-    return ", ".join(words)
+    return ", ".join([*words, *_inner(str(path[1] if path[0] == "shelf" and len(path) > 1 else path[0]), rest)])
+
+
+def _inner(table: str, rest: Path) -> list[str]:
+    """The way inside a row; the second index of a list of numbers is a column, and has a name."""
+    field = TABLES_BY_KEY[table].field(str(rest[0])) if table in TABLES_BY_KEY and rest else None
+    words = [f"item {key + 1}" if isinstance(key, int) else printable(str(key)) for key in rest]
+    if field is not None and len(rest) == 3 and isinstance(rest[1], int) and isinstance(rest[2], int):
+        words[1] = f"row {rest[1] + 1}"
+        words[2] = field.fields[rest[2]].key if rest[2] < len(field.fields) else words[2]
+    return words

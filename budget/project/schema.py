@@ -253,6 +253,8 @@ CONVERTER_TABLE = Table(
         ),
         Field("input", LADDER, "Its own input ladder, from its terminals inward to the switch.", fields=BRANCH),
         _positive("control_bandwidth", "frequency", "Bandwidth of its voltage control."),
+        _positive("hold_up", "time", "How long it shall run on without the bus; with hold_up_to."),
+        _positive("hold_up_to", "voltage", "Terminal voltage it may fall to in that time."),
         _positive("frequency", "frequency", "Of its input ripple (twice the switch's in push-pull and bridge)."),
         Field(
             "frequency_tolerance", "ratio", "How far its clock may be off.", default=0.0, low=0.0, high=1.0, below=True

@@ -12,10 +12,11 @@ from typing import Any
 import numpy as np
 
 from budget.engine.checks import CheckRow
+from budget.engine.emission import Contributor
 from budget.engine.evaluate import Result
 from budget.engine.model import LINES
-from budget.engine.operating import allowed_current
 from budget.report import words
+from budget.report.numbers import Number, numbers
 
 FORMAT = 1
 
@@ -28,8 +29,8 @@ def as_json(result: Result, warnings: Sequence[str]) -> dict[str, Any]:
         "status": result.status,
         "checks": [check_row(row) for row in result.checks],
         "operating": operating(result),
-        "emissions": [],
-        "beats": [],
+        "emissions": emissions(result),
+        "beats": beats(result),
         "inrush": [],
         "stability": [],
         "energy": [
@@ -115,6 +116,38 @@ def operating(result: Result) -> list[dict[str, Any]]:
     return entries
 
 
+def emissions(result: Result) -> list[dict[str, Any]]:
+    """One entry per limit set, case and line; no numbers where there is no operating point or nothing is seen."""
+    return [
+        {
+            "limit": row.limit,
+            "case": row.case,
+            "line": row.line,
+            "combine": row.combine,
+            "margin": _number(row.margin),
+            "frequency": _number(row.frequency),
+            "level": _number(row.level),
+            "limit_level": _number(row.limit_level),
+            "margin_arithmetic": _number(row.margin_arithmetic),
+            "margin_rss": _number(row.margin_rss),
+            "basis": row.basis,
+            "contributors": [
+                {"clock": c.clock, "converters": list(c.converters), "harmonic": c.harmonic, "level": _number(c.level)}
+                for c in row.contributors
+            ],
+        }
+        for row in (result.emissions.rows if result.emissions else ())
+    ]
+
+
+def beats(result: Result) -> list[dict[str, Any]]:
+    """Where harmonics of unrelated clocks may meet."""
+    return [
+        {"clocks": list(beat.clocks), "orders": list(beat.orders), "from": _number(beat.low), "to": _number(beat.high)}
+        for beat in (result.emissions.beats if result.emissions else ())
+    ]
+
+
 def _number(value: float | None) -> float | None:
     """JSON has neither nan (a voltage that is nowhere) nor inf (values past the largest float)."""
     return value if value is not None and math.isfinite(value) else None
@@ -146,65 +179,71 @@ FLOW_HEAD = ("", "output", "input", "current", "of allowed", "terminals", "heat"
 
 def flow_table(result: Result) -> list[tuple[str, ...]]:
     """Bus, filters and converters with the largest current, power and heat and the lowest voltage of any corner."""
-    op, project = result.operating, result.project
-    lines = list(result.lines)
-    solved = op.solved[:, lines]
-    if not solved.any():
+    project = result.project
+    found = numbers(result, None)
+    if not found.bus:
         return []
 
-    def most(values: Any) -> float:
-        return float(np.max(values[:, lines][solved]))
+    def row(name: str, values: dict[str, Number], allowed: float | None) -> tuple[str, ...]:
+        def show(key: str, unit: str) -> str:
+            return words.show(values[key].value, unit) if key in values else ""
 
-    def least(values: Any) -> float:
-        return float(np.min(values[:, lines][solved]))
+        share = ""
+        if allowed and "current" in values:
+            share = f"{values['current'].value / allowed:.0%}".replace("%", " %")
+        flows = (show("out", "W"), show("taken", "W"), show("current", "A"))
+        return (name.rstrip(), *flows, share, show("voltage", "V"), show("heat", "W"))
 
-    allowed = allowed_current(project)
-    share = most(op.bus_current) / project.bus.rating if project.bus.rating else None
-    rows: list[tuple[str, ...]] = [
-        (
-            f"bus {words.clean(project.bus.name)}".strip(),
-            "",
-            words.show(most(op.bus_voltage * op.bus_current), "W"),
-            words.show(most(op.bus_current), "A"),
-            words.share(share) if share is not None else "",
-            words.show(least(op.bus_voltage), "V"),
-            words.show(most(op.bus_loss), "W"),
-        )
-    ]
+    def units(members: list[int]) -> list[tuple[str, ...]]:
+        names = ((n, project.converters[n]) for n in members)
+        return [row(f"  {u.id} {words.clean(u.name)}", found.converters[n], None) for n, u in names]
 
-    def converter(n: int) -> tuple[str, ...]:
-        unit = project.converters[n]
-        placed = op.home[n] >= 0
-        return (
-            f"  {unit.id} {words.clean(unit.name)}".rstrip(),
-            words.show(float(np.max(op.output_power[:, n])), "W"),
-            words.show(float(np.max(op.input_power[:, n])), "W"),
-            words.show(most(op.current[:, :, n]), "A"),
-            "",
-            words.show(least(op.voltage[:, :, n]), "V") if placed else "",
-            words.show(float(np.max(op.loss[:, n])), "W"),
-        )
-
+    home = result.operating.home
+    rows = [row(f"bus {words.clean(project.bus.name)}", found.bus, project.bus.rating)]
     for f, part in enumerate(project.filters):
-        amps = most(op.filter_current[:, :, f])
-        limit = float(allowed[f])
+        rows.append(row(f"{part.id} {words.clean(part.name)}", found.filters[f], found.allowed[f]))
+        rows += units(np.nonzero(home == f)[0].tolist())
+    loose = np.nonzero(home < 0)[0].tolist()
+    if loose:
+        rows += [("not allocated", *[""] * 6), *units(loose)]
+    return rows
+
+
+EMISSION_HEAD = ("limit set", "margin", "at", "level", "limit", "corner", "largest contributors", "basis")
+_SHOWN = 3  # contributors of a row; the JSON has all
+
+
+def emission_table(result: Result) -> list[tuple[str, ...]]:
+    """Each limit set at the corner with the smallest margin, with what contributes most there."""
+    if result.emissions is None:
+        return []
+    rows: list[tuple[str, ...]] = []
+    for check in result.checks:
+        if not check.check.startswith("emission ") or check.margin is None:
+            continue
+        row = next(
+            r
+            for r in result.emissions.rows
+            if (f"emission {r.limit}", r.case, r.line) == (check.check, check.case, check.line)
+        )
         rows.append(
             (
-                f"{part.id} {words.clean(part.name)}".rstrip(),
-                "",
-                words.show(most(op.filter_current[:, :, f] * op.filter_voltage[:, :, f]), "W"),
-                words.show(amps, "A"),
-                words.share(amps / limit) if limit > 0 and math.isfinite(limit) else "",
-                words.show(least(op.filter_voltage[:, :, f]), "V"),
-                words.show(most(op.filter_loss[:, :, f]), "W"),
+                words.clean(row.limit),
+                words.margin(check),
+                words.frequency(row.frequency),
+                words.show(row.level, row.unit),
+                words.show(row.limit_level, row.unit),
+                words.corner(check),
+                ", ".join(_contributor(c, row.unit) for c in row.contributors[:_SHOWN]),
+                words.BASIS.get(row.basis, row.basis),
             )
         )
-        rows += [converter(n) for n in np.nonzero(op.home == f)[0].tolist()]
-    loose = np.nonzero(op.home < 0)[0].tolist()
-    if loose:
-        rows.append(("not allocated", *[""] * 6))
-        rows += [converter(n) for n in loose]
     return rows
+
+
+def _contributor(part: Contributor, unit: str) -> str:
+    order = f" x{part.harmonic}" if part.harmonic else ""
+    return f"{words.clean(part.clock)}{order} {words.show(part.level, unit)}"
 
 
 ENERGY_HEAD = ("case", "duration", "energy", "charge")

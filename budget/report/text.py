@@ -24,6 +24,8 @@ _RIGHT = {
     "heat",
     "energy",
     "charge",
+    "at",
+    "level",
 }
 
 
@@ -33,6 +35,7 @@ def as_text(name: str, result: Result, warnings: Sequence[str], *, colour: bool 
     sections = (
         ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
         ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
+        ("Emissions, worst corner of each limit set", tables.EMISSION_HEAD, tables.emission_table(result)),
         ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
     )
     for title, head, rows in sections:
@@ -90,6 +93,7 @@ def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
     sections = (
         ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
         ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
+        ("Emissions, worst corner of each limit set", tables.EMISSION_HEAD, tables.emission_table(result)),
         ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
     )
     for title, head, rows in sections:

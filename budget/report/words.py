@@ -24,7 +24,17 @@ REMARKS = {
     "unsolved corners left out": "corners without an operating point left out",
     "never runs": "off in every case",
     "beyond data": "efficiency beyond its last point",
+    "no room for the edges": "the duty leaves no room for the edges",
+    "without a noise description": "without a noise description",
+    "no noise source": "no converter behind a filter has a noise description",
+    "no line in the band": "no line in the band",
+    "table held beyond its ends": "attenuation held beyond the ends of the table",
+    "limit from memory": "limit from memory; enter the points from your own copy",
+    "no receiver bandwidth": "the limit line has no receiver bandwidth, so lines are taken one by one",
+    "too many lines": "more lines in the band than can be added up",
 }
+LEVELS = ("dBuV", "dBuA")
+BASIS = {"read": "read in the standard", "memory": "from memory", "own": "entered here"}
 _KINDS = {"A": "current", "V": "voltage", "W": "power"}
 
 
@@ -37,9 +47,16 @@ def clean(text: str) -> str:
 
 def show(value: float | None, unit: str) -> str:
     """A value of a check row as text, in its unit; empty where there is none."""
+    if unit in LEVELS and value is not None:
+        return f"{value:.1f} {unit}" if math.isfinite(value) else "too large"
     if unit not in _KINDS or value is None:
         return ""
     return quantity.show(value, quantity.KINDS[_KINDS[unit]]) if math.isfinite(value) else "too large"
+
+
+def frequency(value: float | None) -> str:
+    """A frequency as text; empty where there is none."""
+    return "" if value is None else quantity.show(value, quantity.KINDS["frequency"])
 
 
 def percent(ratio: float) -> str:
@@ -96,7 +113,9 @@ def note(row: CheckRow) -> str:
     words = []
     if row.missing:
         words.append("not entered: " + ", ".join(name.replace(".", " ") for name in row.missing))
-    words += [REMARKS.get(code, code) for code in row.remarks]
+    for remark in row.remarks:
+        code, colon, ids = remark.partition(": ")
+        words.append(REMARKS.get(code, code) + colon + clean(ids))
     return "; ".join(words)
 
 
@@ -121,15 +140,15 @@ _SHORT = {
 
 def short(check: str) -> str:
     """A check's name for a narrow column."""
-    return _SHORT.get(check, check)
+    return "emission" if check.startswith("emission ") else _SHORT.get(check, check)
 
 
 def brief(row: CheckRow) -> str:
-    """A row in 16 characters: 'FAIL 5% current', 'ok 24% load'."""
-    status = "FAIL" if row.status == "fail" else row.status
-    if row.margin is None or row.margin_unit != "ratio":
-        return f"{status} {short(row.check)}"
-    return f"{status} {abs(row.margin) * 100:.0f}% {short(row.check)}"
+    """A row in 16 characters: 'FAIL current', 'ok 24% left'."""
+    if row.status == "ok" and row.margin is not None and row.margin_unit == "ratio":
+        return f"ok {row.margin * 100:.0f}% left"
+    name = "no solution" if row.check == "operating point" else short(row.check)
+    return f"{'FAIL' if row.status == 'fail' else row.status} {name}"
 
 
 def sentence(row: CheckRow) -> str:

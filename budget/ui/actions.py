@@ -4,18 +4,21 @@ from __future__ import annotations
 
 import copy
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path as FilePath
 from typing import Any
 
+from budget import quantity
 from budget.engine.model import LINES
 from budget.project import document as doc
 from budget.project import edits, schema, starter
 from budget.project.document import Path
 from budget.project.problems import ProjectError, place
-from budget.project.store import ChangedOnDiskError
+from budget.project.store import ChangedOnDiskError, write_text
 from budget.ui import lists
-from budget.ui.desk import Desk, command_items
-from budget.ui.sheet import rows_of
+from budget.ui.desk import Desk, Work, command_items
+from budget.ui.sheet import BOTH, CM, DM, rows_of
+from budget.ui.spectrum import csv_lines, shown_result
 from budget.ui.view import Cell, Row
 
 Action = Callable[[Desk], None]
@@ -39,6 +42,7 @@ def edit(desk: Desk) -> None:
     row, cell = desk.here()
     if cell.path is None:
         if cell.leads is not None:
+            desk.back.append(desk.spot())
             desk.go_to(cell.leads)
         elif row is not None and desk.view_name != "help":
             desk.say("this cell cannot be typed into")
@@ -148,7 +152,8 @@ def new(desk: Desk) -> None:
     if desk.view_name == "shelf":
         _new_part(desk, row)
         return
-    if desk.view_name in ("fields", "rules", "limits") and row is not None and len(row.key) > len(edits.owner(row.key)):
+    in_list = row is not None and len(row.key) > len(edits.owner(row.key)) and not _plain(row.key)
+    if desk.view_name in ("fields", "rules", "limits") and row is not None and in_list:
         changed, path = edits.new_item(document, session.shelves, _list_path(row, cell))
         desk.change(_label(desk, path, "added"), changed, spot)
         _stand_on(desk, path)
@@ -160,7 +165,8 @@ def new(desk: Desk) -> None:
         desk.cursor.column = at + 1
         return
     if desk.view_name == "limits":
-        changed, path = edits.new_row(document, "limit", len(rows_of(document, "limit")))
+        at = int(item[1]) + 1 if item and len(item) > 1 else len(rows_of(document, "limit"))
+        changed, path = edits.new_row(document, "limit", at)
         desk.change("new limit line", changed, spot)
         _stand_on(desk, (*path, "name"))
         return
@@ -178,6 +184,12 @@ def new(desk: Desk) -> None:
     desk.change(f"new converter {doc.get(changed, (*path, 'id'))}", changed, spot)
     _stand_on(desk, path)
     desk.cursor.column = 0
+
+
+def _plain(path: Path) -> bool:
+    """Whether a row is one field with one value, and so no list that could have one more item."""
+    spec = edits.spec_at(path)
+    return spec is not None and spec.kind not in schema.NESTED and len(path) == len(edits.owner(path)) + 1
 
 
 def _list_path(row: Row, cell: Cell) -> Path:
@@ -203,6 +215,23 @@ def _new_part(desk: Desk, row: Row | None) -> None:
         _stand_on(desk, ("shelf", key, name, "this file"))
 
     desk.pick("a part for", [("a filter", "filter"), ("a converter", "converter")], choose, int(kind == "converter"))
+
+
+def _copy_part(desk: Desk, path: Path) -> None:
+    """A part of this file or of a shelf file, copied into this file under a new name."""
+    session, key, old = desk.session, str(path[1]), str(path[2])
+    part = edits.shelf_part(session.document, session.shelves, path)
+
+    def make(name: str) -> None:
+        name = name.strip()
+        if not name or not name.isprintable() or len(name) > 40:
+            raise ProjectError("a short name for the part was expected.")
+        if name in edits.shelf_names(session.document, session.shelves, key):
+            raise ProjectError(f"'{name}' is on the shelf already.")
+        desk.change(f"new shelf part {name}", doc.put(session.document, ("shelf", key, name), copy.deepcopy(part)))
+        _stand_on(desk, ("shelf", key, name, "this file"))
+
+    desk.prompt(f"name of the copy of {old}, in this file", f"{old}-2", make)
 
 
 def new_filter(desk: Desk) -> None:
@@ -234,13 +263,22 @@ def _whole(desk: Desk, item: Path) -> Any:
     return copy.deepcopy(value)
 
 
+def _loads(desk: Desk, item: Path) -> dict[str, Any]:
+    """What the cases ask of a converter: it goes along when its row is copied."""
+    return edits.loads_of(desk.session.document, item) if len(item) == 2 and item[0] == "converter" else {}
+
+
 def duplicate(desk: Desk) -> None:
+    row, _ = desk.here()
+    if desk.view_name == "shelf" and row is not None and len(row.key) == 4:
+        _copy_part(desk, row.key[:3])
+        return
     item, spot = _item(desk), desk.spot()
     value = _whole(desk, item)
     if isinstance(item[-1], str):
         raise ProjectError("only rows of a list can be duplicated.")
     place = (*item[:-1], item[-1] + 1)
-    changed, path = edits.insert_row(_owned(desk, item), place, value)
+    changed, path = edits.insert_row(_owned(desk, item), place, value, _loads(desk, item))
     desk.change(f"duplicated {_named(value)}", changed, spot)
     _after_insert(desk, path)
 
@@ -270,6 +308,8 @@ def remove(desk: Desk) -> None:
     desk.change(f"removed {_named(value) if isinstance(item[-1], int) else item[-1]}", changed, spot)
     if item[0] == "case":
         desk.cursor.column = max(1, desk.cursor.column - 1)
+    else:
+        desk.cursor.key = ()  # the row that has its number now may stand elsewhere; the line stays
 
 
 def _users(desk: Desk, item: Path) -> list[str]:
@@ -281,7 +321,7 @@ def copy_row(desk: Desk) -> None:
     item = _item(desk)
     if isinstance(item[-1], str):
         raise ProjectError("only rows of a list can be copied.")
-    desk.row_clip = (_shape(item), _whole(desk, item))
+    desk.row_clip = (_shape(item), _whole(desk, item), _loads(desk, item))
     desk.say(f"row copied: {_named(desk.row_clip[1])}; V puts it after a row")
 
 
@@ -299,7 +339,7 @@ def cut_row(desk: Desk) -> None:
 def paste_row(desk: Desk) -> None:
     if desk.row_clip is None:
         raise ProjectError("no row was copied; C copies one.")
-    shape, value = desk.row_clip
+    shape, value, loads = desk.row_clip
     session, spot = desk.session, desk.spot()
     item = desk.item()
     row, _ = desk.here()
@@ -327,7 +367,7 @@ def paste_row(desk: Desk) -> None:
         base = target[: len(edits.owner(target)) + 1]
         at = int(target[len(base)]) + 1 if len(target) > len(base) else 0
         path = (*base, at)
-    changed, path = edits.insert_row(document, path, value)
+    changed, path = edits.insert_row(document, path, value, loads)
     desk.change(f"pasted {_named(value)}", changed, spot)
     _after_insert(desk, path)
 
@@ -353,8 +393,13 @@ def _reorder(step: int) -> Action:
     return go
 
 
+def _subject(desk: Desk) -> Path | None:
+    """What a command about a whole row acts on: among the fields of a row, that row."""
+    return desk.item() or (desk.subject if desk.view_name == "fields" else None)
+
+
 def rename(desk: Desk) -> None:
-    item = desk.item()
+    item = _subject(desk)
     if item is not None and item[0] == "shelf" and len(item) == 3:
         part = item
         desk.prompt(
@@ -403,7 +448,7 @@ def _rename_part(desk: Desk, item: Path, name: str) -> None:
 
 
 def _converter(desk: Desk) -> Path:
-    item = desk.item()
+    item = _subject(desk)
     if item is None or item[0] != "converter":
         raise ProjectError("this is for converters; the cursor is not on one.")
     return item[:2]
@@ -445,8 +490,8 @@ def to_filter(desk: Desk) -> None:
 
 
 def take_part(desk: Desk) -> None:
-    item = _item(desk)
-    if item[0] not in schema.SHELVES:
+    item = _subject(desk)
+    if item is None or item[0] not in schema.SHELVES:
         raise ProjectError("parts are for filters and converters.")
     path: Path = (*item[:2], "part")
     names = [*edits.shelf_names(desk.session.document, desk.session.shelves, str(item[0])), ""]
@@ -455,6 +500,19 @@ def take_part(desk: Desk) -> None:
 
 
 # -- showing
+
+
+def view_sheet(desk: Desk) -> None:
+    desk.back.clear()
+    desk.view_name = "sheet"
+
+
+def go_back(desk: Desk) -> None:
+    """To where a cell led from, else to the sheet."""
+    if desk.back:
+        desk.stand_at(desk.back.pop())
+    else:
+        desk.view_name = "sheet"
 
 
 def find(desk: Desk) -> None:
@@ -605,9 +663,109 @@ def quit_program(desk: Desk) -> None:
     )
 
 
+# -- emissions
+
+
+def view_response(desk: Desk) -> None:
+    view_fields(desk)
+    desk.view_name = "response"
+
+
+def next_mode(desk: Desk) -> None:
+    if desk.view_name == "response":
+        desk.options = replace(desk.options, common=not desk.options.common)
+        return
+    order = (BOTH, DM, CM)
+    desk.options = replace(desk.options, mode=order[(order.index(desk.options.mode) + 1) % 3])
+
+
+def next_limit(desk: Desk) -> None:
+    result = shown_result(desk.context())
+    count = len(result.emissions.spectra) if result and result.emissions else 0
+    if count < 2:
+        raise ProjectError("there is no other limit set; the rules (r) name them under emissions.")
+    desk.options = replace(desk.options, limit=(desk.options.limit + 1) % count)
+
+
+def toggle_bare(desk: Desk) -> None:
+    desk.options = replace(desk.options, bare=not desk.options.bare)
+
+
+def export(desk: Desk) -> None:
+    """Write the lines of the spectrum as CSV beside the project."""
+    text = csv_lines(desk.context())
+    if text.count("\n") < 2:
+        raise ProjectError("there are no lines to write.")
+    path = desk.session.path or FilePath("project.toml")
+
+    def accept(name: str) -> None:
+        target = FilePath(name.strip()).expanduser()
+        if not name.strip() or target.is_dir():
+            raise ProjectError("a file name was expected.")
+        if target.exists():
+            raise ProjectError(f"{target} exists already; another name was expected.")
+        write_text(target, text)
+        desk.say(f"written: {target}")
+
+    desk.prompt("write the lines as CSV to", str(free_name(path.with_suffix(".csv"), "lines")), accept)
+
+
+def scan_clock(desk: Desk) -> None:
+    """Ask for a clock and a range, and find the worst margin over it in the background."""
+    result = shown_result(desk.context())
+    if result is None or result.emissions is None or not result.emissions.spectra:
+        raise ProjectError("there are no emissions yet; name a limit set in the rules (r), emissions.")
+    names = [clock.name for clock in result.emissions.spectra[0].clocks if clock.frequency]
+
+    def choose(name: str) -> None:
+        clock = next(c for c in result.emissions.spectra[0].clocks if c.name == name)  # type: ignore[union-attr]
+        assert clock.frequency is not None
+        kind = quantity.KINDS["frequency"]
+        low, high = quantity.show(clock.frequency * 0.75, kind), quantity.show(clock.frequency * 1.25, kind)
+        desk.prompt(f"move {name} over, from - to", f"{low} to {high}", lambda text: start(name, text))
+
+    def start(name: str, text: str) -> None:
+        low, high = frequency_range(text)
+        shown = shown_result(desk.context()) or result
+        assert shown is not None
+
+        def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:
+            from budget.engine.plan import scan
+
+            return scan(shown.project, shown.operating, name, low, high, 61, cancelled, progress)
+
+        def done(found: Any) -> None:
+            if found is not None:
+                desk.options = replace(desk.options, scan=found)
+                desk.view_name = "plan"
+
+        desk.start_job(Work(f"moving {name}", run, done))
+
+    desk.pick("which clock?", [(name, name) for name in names], choose)
+
+
+def frequency_range(text: str) -> tuple[float, float]:
+    """'250 kHz to 400 kHz' in Hz; raises ProjectError with a sentence."""
+    parts = text.split(" to ")
+    if len(parts) != 2:
+        raise ProjectError("two frequencies were expected, such as 250 kHz to 400 kHz.")
+    kind = quantity.KINDS["frequency"]
+    try:
+        low, high = (quantity.parse(part.strip(), kind).si for part in parts)
+    except quantity.QuantityError as error:
+        raise ProjectError(str(error)) from error
+    if low > high:
+        low, high = high, low
+    if not 1.0 <= low < high <= 1e9:
+        raise ProjectError("a range within 1 Hz to 1 GHz was expected.")
+    return low, high
+
+
 ACTIONS: dict[str, Action] = {
     **{name: _move(name) for name in ("up", "down", "left", "right", "first", "last", "page_up", "page_down")},
-    **{f"view_{name}": _show(name) for name in ("sheet", "rules", "loads", "checks", "limits", "shelf", "project")},
+    **{f"view_{name}": _show(name) for name in ("rules", "loads", "checks", "limits", "shelf", "project")},
+    "view_sheet": view_sheet,
+    "go_back": go_back,
     "view_faults": _show("faults"),
     "help": _show("help"),
     "edit": edit,
@@ -636,6 +794,14 @@ ACTIONS: dict[str, Action] = {
     "corner": corner,
     "worst": worst,
     "view_fields": view_fields,
+    "view_spectrum": _show("spectrum"),
+    "view_plan": _show("plan"),
+    "view_response": view_response,
+    "next_mode": next_mode,
+    "next_limit": next_limit,
+    "toggle_bare": toggle_bare,
+    "export": export,
+    "scan_clock": scan_clock,
     "commands": show_commands,
     "save": save,
     "save_as": save_as,

@@ -20,8 +20,8 @@ from textual.message import Message
 from textual.strip import Strip
 from textual.widget import Widget
 
-from budget.session import Outcome, Session, Snapshot, calculate
-from budget.ui.desk import Desk
+from budget.session import Outcome, Session, Snapshot, stages
+from budget.ui.desk import Desk, Job, Work
 from budget.ui.paint import Line, frame
 
 LATE = 0.05  # seconds after which results that have not come look stale
@@ -41,6 +41,7 @@ STYLES: dict[str, Style] = {
     "thin": Style(color="yellow"),
     "ok": Style(color="green"),
     "no data": Style(dim=True),
+    **{f"trace{k}": Style(color=name) for k, name in enumerate(("cyan", "magenta", "green", "yellow", "blue", "red"))},
 }
 
 
@@ -59,6 +60,26 @@ class Trouble(Message):
         super().__init__()
         self.generation = generation
         self.text = text
+
+
+class Progress(Message):
+    """How far a longer calculation has come."""
+
+    def __init__(self, number: int, fraction: float) -> None:
+        super().__init__()
+        self.number = number
+        self.fraction = fraction
+
+
+class Finished(Message):
+    """A longer calculation is done, or has failed with ``error``."""
+
+    def __init__(self, number: int, work: Work, found: object, error: str = "") -> None:
+        super().__init__()
+        self.number = number
+        self.work = work
+        self.found = found
+        self.error = error
 
 
 class Worker:
@@ -83,11 +104,16 @@ class Worker:
                     self._wake.wait()
                 snapshot, self._wanted = self._wanted, None
             try:
-                message: Message = Calculated(calculate(snapshot))
+                for outcome in stages(snapshot):
+                    self._send(Calculated(outcome))
+                    if self._wanted is not None:
+                        break  # a newer one waits; what is left of this one is of no use
             except Exception as error:  # the sheet must stay open whatever the calculation does
-                message = Trouble(snapshot.generation, f"{type(error).__name__}: {error}")
-            with contextlib.suppress(Exception):  # the program may be closing
-                self._post(message)
+                self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+
+    def _send(self, message: Message) -> None:
+        with contextlib.suppress(Exception):  # the program may be closing
+            self._post(message)
 
 
 class Screenful(Widget, can_focus=True):
@@ -178,6 +204,7 @@ class BudgetApp(App[int], inherit_bindings=False):
         self.animation_level = "none"
         self.worker: Worker | None = None
         self.told_changed = False
+        self.job_number = 0
 
     def compose(self) -> ComposeResult:
         yield self.board
@@ -187,6 +214,7 @@ class BudgetApp(App[int], inherit_bindings=False):
         self.desk.leave = lambda: self.exit(0)
         self.desk.clip = self.copy_to_clipboard
         self.desk.calculate = self.start_calculation
+        self.desk.start_job = self.start_job
         self.set_interval(WATCH, self.look_at_file)
         self.call_after_refresh(self.begin)  # numpy and pint are loaded by the worker, behind the first paint
 
@@ -203,7 +231,7 @@ class BudgetApp(App[int], inherit_bindings=False):
 
     def late(self, generation: int) -> None:
         session = self.desk.session
-        if session.generation == generation and not session.fresh and not self.desk.pending:
+        if session.generation == generation and not session.complete and not self.desk.pending:
             self.desk.pending = True
             self.board.sync()
 
@@ -215,6 +243,43 @@ class BudgetApp(App[int], inherit_bindings=False):
         if event.generation == self.desk.session.generation:
             self.desk.say(f"the calculation failed, a fault of this program ({event.text}); undo the edit", "fail")
             self.board.sync()
+
+    def start_job(self, work: Work) -> None:
+        """Run a longer calculation in a thread of its own; a newer one takes its place."""
+        self.job_number += 1
+        number = self.job_number
+        self.desk.job = Job(work.label)
+
+        def cancelled() -> bool:
+            return self.job_number != number
+
+        def progress(fraction: float) -> None:
+            self.post_message(Progress(number, fraction))
+
+        def run() -> None:
+            try:
+                message = Finished(number, work, work.run(cancelled, progress))
+            except Exception as error:  # the sheet must stay open whatever the calculation does
+                message = Finished(number, work, None, f"{type(error).__name__}: {error}")
+            with contextlib.suppress(Exception):
+                self.post_message(message)
+
+        threading.Thread(target=run, name="job", daemon=True).start()
+
+    def on_progress(self, event: Progress) -> None:
+        if event.number == self.job_number and self.desk.job is not None:
+            self.desk.job.fraction = event.fraction
+            self.board.sync()
+
+    def on_finished(self, event: Finished) -> None:
+        if event.number != self.job_number:
+            return
+        self.desk.job = None
+        if event.error:
+            self.desk.say(f"{event.work.label} failed, a fault of this program ({event.error})", "fail")
+        else:
+            event.work.done(event.found)
+        self.board.sync()
 
     def look_at_file(self) -> None:
         """Notice a file that someone else has changed."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-SHEET, LOADS, LISTS, ALL = "sheet", "loads", "lists", "all"
+SHEET, FIELDS, SPECTRUM, PLAN, RESPONSE, ALL = "sheet", "fields", "spectrum", "plan", "response", "all"
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,26 +54,39 @@ COMMANDS: tuple[Command, ...] = (
     Command("earlier", ("[",), "move the row up", "rows"),
     Command("later", ("]",), "move the row down", "rows"),
     Command("rename", ("e",), "rename its id everywhere", "rows"),
-    Command("filter_up", ("<",), "converter behind the filter above", "rows", "", (SHEET,)),
-    Command("filter_down", (">",), "converter behind the filter below", "rows", "next filter", (SHEET,), rank=61),
-    Command("to_filter", ("m",), "converter behind a filter from a list", "rows", "", (SHEET,)),
-    Command("take_part", ("p",), "take a part from the shelf", "rows", "", (SHEET,)),
+    Command("filter_up", ("<",), "converter behind the filter above", "rows", "", (SHEET, FIELDS)),
+    Command(
+        "filter_down", (">",), "converter behind the filter below", "rows", "next filter", (SHEET, FIELDS), rank=61
+    ),
+    Command("to_filter", ("m",), "converter behind a filter from a list", "rows", "", (SHEET, FIELDS)),
+    Command("take_part", ("p",), "take a part from the shelf", "rows", "", (SHEET, FIELDS)),
     Command("corner", ("o",), "choose the case and line that are shown", "show", "corner", rank=22),
     Command("worst", ("O",), "show the worst over all cases and lines", "show"),
-    Command("view_sheet", ("s", "escape", "f2"), "the sheet: bus, filters, converters", "show"),
+    Command("view_sheet", ("s", "f2"), "the sheet: bus, filters, converters", "show"),
+    Command("go_back", ("escape",), "back to where you came from, else to the sheet", "show"),
     Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields", rank=20),
     Command("view_rules", ("r", "f4"), "the rules: wanted margins", "show"),
     Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads", rank=21),
     Command("view_checks", ("k", "f6"), "all checks from worst to best", "show", "checks", rank=23),
+    Command("view_spectrum", ("a",), "emissions: every line against the limit", "show", "emissions", rank=24),
+    Command("view_plan", ("y",), "frequency plan: clocks that meet, beats", "show"),
+    Command("view_response", ("z",), "the filter over frequency: loss, impedance, damping", "show", "filter", rank=25),
+    Command("next_mode", ("A",), "differential, common mode, both", "show", "DM/CM", (SPECTRUM, RESPONSE), rank=5),
+    Command("next_limit", ("j",), "next limit set", "show", "next limit", (SPECTRUM, PLAN), rank=6),
+    Command("toggle_bare", ("B",), "the unfiltered level beside it", "show", "unfiltered", (SPECTRUM,), rank=7),
+    Command("export", ("E",), "write the lines as CSV", "show", "CSV", (SPECTRUM,), rank=8),
+    Command(
+        "scan_clock", ("M",), "move one clock over a range, find the best place", "show", "move clock", (PLAN,), rank=5
+    ),
     Command("view_limits", ("i", "f7"), "emission limit lines of your own", "show"),
     Command("view_shelf", ("h", "f8"), "shelf of reusable parts", "show"),
     Command("view_project", ("t", "f9"), "title, author, shelf files", "show"),
     Command("view_faults", ("b",), "cells that cannot be read, and warnings", "show"),
-    Command("save", ("w", "ctrl+s"), "save", "file", "save", rank=30),
+    Command("save", ("w", "ctrl+s"), "save", "file", "save", rank=11),
     Command("save_as", ("W",), "save under another name", "file"),
     Command("commands", ("space",), "list of all commands", "file", "all commands", rank=63),
-    Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help", rank=31),
-    Command("quit", ("q", "ctrl+q"), "quit", "file", "quit", rank=32),
+    Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help", rank=12),
+    Command("quit", ("q", "ctrl+q"), "quit", "file", "quit", rank=13),
 )
 
 BY_KEY: dict[str, Command] = {key: command for command in COMMANDS for key in command.keys}

@@ -13,14 +13,15 @@ from typing import Any
 
 from budget.engine.model import LINES
 from budget.project import edits
+from budget.project.build import Built
 from budget.project.document import Document, Path
 from budget.project.problems import ProjectError
 from budget.report import change
+from budget.report.numbers import Corner
 from budget.session import Outcome, Session
-from budget.ui import commands, fields, layout, lists, sheet
+from budget.ui import commands, fields, layout, lists, plan, response, sheet, spectrum
 from budget.ui.commands import COMMANDS, SHEET
-from budget.ui.numbers import Corner
-from budget.ui.sheet import Context
+from budget.ui.sheet import Cells, Context, Options
 from budget.ui.view import Cell, Row, Section, View
 
 VIEWS: dict[str, Callable[[Context], View]] = {
@@ -33,9 +34,13 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "shelf": fields.shelf,
     "project": fields.project,
     "faults": lists.faults,
+    "spectrum": spectrum.spectrum,
+    "plan": plan.plan,
+    "response": response.response,
     "help": lists.help_view,
 }
 FORMS = frozenset({"fields", "rules", "limits", "project", "loads"})  # the first column only names the others
+OF_ONE = frozenset({"fields", "response"})  # views of one row, the subject
 LONGEST = 2000  # characters of one cell; more is cut when pasted
 
 
@@ -97,12 +102,28 @@ class Ask:
     options: dict[str, tuple[str, Callable[[], None]]]
 
 
+@dataclass(frozen=True, slots=True)
+class Work:
+    """A longer calculation for another thread: ``run(cancelled, progress)``, and what to do with what it gives."""
+
+    label: str
+    run: Callable[[Callable[[], bool], Callable[[float], None]], Any]
+    done: Callable[[Any], None]
+
+
+@dataclass(slots=True)
+class Job:
+    label: str
+    fraction: float = 0.0
+
+
 @dataclass(slots=True)
 class Desk:
     session: Session
     ascii_only: bool = False
     width: int = 80
     height: int = 24
+    grid_height: int = 19  # lines the grid has on the screen
     view_name: str = SHEET
     subject: Path = ("bus",)
     cursors: dict[tuple[str, Path], Cursor] = field(default_factory=dict)
@@ -112,13 +133,21 @@ class Desk:
     corner: Corner | None = None
     pending: bool = True  # results are late enough to look stale
     cell_clip: str = ""
-    row_clip: tuple[str, Any] | None = None
+    row_clip: tuple[str, Any, dict[str, Any]] | None = None  # its shape, the row, and a converter's loads by case
+    back: list[Spot] = field(default_factory=list)  # where cells led from
     calculate: Callable[[], None] = lambda: None
     leave: Callable[[], None] = lambda: None
     clip: Callable[[str], None] = lambda _: None
     actions: dict[str, Callable[[Desk], None]] = field(default_factory=dict)
     label: str = ""  # of the last edit, told with what it changed
+    told: str = ""  # what was told of it so far; later stages of the results may tell more
+    options: Options = field(default_factory=Options)
+    job: Job | None = None  # a longer calculation that was asked for, and its progress
+    start_job: Callable[[Work], None] = lambda _: None
     before: Any = None  # the result before it
+    built_before: Built | None = None
+    cells: Cells = field(default_factory=dict)
+    memo: dict[str, tuple[tuple[Any, ...], Any]] = field(default_factory=dict)
     _stamp: Any = None
     _views: dict[tuple[str, Path], View] = field(default_factory=dict)
     _flat_of: View | None = None
@@ -133,7 +162,7 @@ class Desk:
 
     @property
     def cursor(self) -> Cursor:
-        where = (self.view_name, self.subject if self.view_name == "fields" else ())
+        where = (self.view_name, self.subject if self.view_name in OF_ONE else ())
         if where not in self.cursors:
             self.cursors[where] = Cursor(column=1 if self.view_name in FORMS else 0)
         return self.cursors[where]
@@ -141,7 +170,16 @@ class Desk:
     def context(self, subject: Path | None = None) -> Context:
         outcome = self.session.outcome
         bad = frozenset(edits.cell_of(p.path) for p in outcome.built.errors) if outcome else frozenset()
-        return Context(self.session, self.corner, bad, subject or self.subject, self.ascii_only)
+        return Context(
+            self.session,
+            self.corner,
+            bad,
+            subject or self.subject,
+            self.ascii_only,
+            self.options,
+            self.cells,
+            self.memo,
+        )
 
     def view(self) -> View:
         """The present view, made anew only when something it shows has changed."""
@@ -152,11 +190,11 @@ class Desk:
 
     def make(self, name: str, subject: Path) -> View:
         """A view by its name, from the cache unless something it shows has changed."""
-        stamp = (self.session.generation, id(self.session.outcome), self.corner)
+        stamp = (self.session.generation, id(self.session.outcome), self.corner, self.options)
         if self._stamp != stamp:
             self._stamp = stamp
             self._views.clear()
-        key = (name, subject if name == "fields" else ())
+        key = (name, subject if name in OF_ONE else ())
         if key not in self._views:
             self._views[key] = VIEWS[name](self.context(subject))
         return self._views[key]
@@ -196,9 +234,6 @@ class Desk:
         row, cell = self.here()
         return cell.item or (row.item if row else None)
 
-    def body_height(self) -> int:
-        return max(1, self.height - 5)
-
     def spot(self) -> Spot:
         cursor = self.cursor
         self.row_index()
@@ -216,6 +251,9 @@ class Desk:
 
     def key(self, name: str, character: str | None = None) -> None:
         """One key, as textual names it, with the character it types if it types one."""
+        if name.startswith("alt+") and len(name) == 5:  # Escape and a letter right behind it arrive as one
+            self.key("escape")
+            name, character = name[4:], name[4:]
         if isinstance(self.mode, Edit):
             self._edit_key(self.mode, name, character)
         elif isinstance(self.mode, Pick):
@@ -246,11 +284,27 @@ class Desk:
             return False
         self.pending = False
         if self.label:
-            told = change.describe(self.before, outcome.result)
-            self.say(f"{self.label}: {told}" if told else self.label)
-            self.label = ""
-        self.before = outcome.result
+            told = "; ".join(
+                part for part in (self._left_out(outcome), change.describe(self.before, outcome.result)) if part
+            )
+            if self.message in ("", f"{self.label}: calculating", self.told):  # what was said since, "saved", stays
+                self.told = f"{self.label}: {told}" if told else self.label
+                self.say(self.told)
+        if outcome.complete:
+            self.label = self.told = ""
+            self.before = outcome.result
+            self.built_before = outcome.built
         return True
+
+    def _left_out(self, outcome: Outcome) -> str:
+        """What the calculation had to leave out since the edit, and cells that cannot be read since."""
+        old, new = self.built_before, outcome.built
+        gone = [ident for ident in new.left_out if old is None or ident not in old.left_out]
+        more = len(new.errors) - (len(old.errors) if old else 0)
+        told = [f"{', '.join(gone)} left out: a cell cannot be read"] if gone else []
+        if more > 0 and not gone:
+            told.append(f"{more} more bad cell{'s' if more > 1 else ''}, see b")
+        return "; ".join(told)
 
     def change(self, label: str, document: Document, spot: Spot | None = None) -> bool:
         """Make an edit: one step of history, and a new calculation."""
@@ -274,6 +328,9 @@ class Desk:
         command = commands.BY_KEY.get(name) or commands.BY_KEY.get(character or "")
         if command is None:
             self.say(f"no command on the key {character or name}; ? shows all keys" if character else "")
+            return
+        if commands.ALL not in command.where and self.view_name not in command.where:
+            self.say(f"{commands.key_text(command.keys[0])} is for the view: {', '.join(command.where)}")
             return
         if command.group != "move":
             self.say("")
@@ -305,6 +362,8 @@ class Desk:
         spot = self.spot()
         if self.session.enter(path, text, spot):
             self.changed(self.session.done[-1].label)
+        else:
+            self.say("nothing changed")
 
     def prompt(self, label: str, text: str, accept: Callable[[str], None]) -> None:
         self.mode = Edit(text, len(text), accept, label)
@@ -410,7 +469,7 @@ class Desk:
         last = len(row.cells) - 1 if row else 0
         n = rows.index(at) if at in rows else 0
         column = min(cursor.column, last)
-        page = max(1, self.body_height() - 2)
+        page = max(1, self.grid_height - 2)
         steps = {"up": -1, "down": 1, "page_up": -page, "page_down": page}
         if where in steps:
             self._stand(rows[max(0, min(len(rows) - 1, n + steps[where]))])
@@ -427,6 +486,7 @@ class Desk:
     def scroll(self, width: int, height: int) -> None:
         """Bring the cursor into sight of ``height`` lines of the grid; headings above its row stay in sight with it."""
         lines, cursor = self.lines(), self.cursor
+        self.grid_height = height
         at = self.row_index()
         one = len(self.view().sections) == 1  # a single heading is pinned and takes a line of its own
         top = cursor.top
@@ -481,13 +541,15 @@ class Desk:
     def hint_pairs(self) -> list[tuple[str, str]]:
         """(key, word) of what can be done now."""
         if isinstance(self.mode, Edit):
+            if self.mode.refused:
+                return [("Esc", "go back")]
             return [("Enter", "accept"), ("Esc", "cancel"), ("Home/End", "move"), ("Ctrl+U", "clear")]
         if isinstance(self.mode, Pick):
             return [("Up/Down", "choose"), ("Enter", "take"), ("type", "to narrow"), ("Esc", "cancel")]
         if isinstance(self.mode, Ask):
             return [(commands.key_text(k), label) for k, (label, _) in self.mode.options.items()] + [("Esc", "go back")]
         pairs = commands.hints(self.view_name)
-        return pairs if self.view_name == SHEET else [("Esc", "sheet"), *pairs]
+        return pairs if self.view_name == SHEET else [("Esc", "back"), *pairs]
 
 
 def _nothing(_: str) -> None:

@@ -26,9 +26,10 @@ def fields(context: Context) -> View:
 
 
 def sections(context: Context, base: Path, specs: tuple[Field, ...], head: str = "") -> tuple[Section, ...]:
-    """The plain fields of a table as one section, then one section for each list it has."""
+    """The fields in the order of the schema: runs of plain ones, and a section for each list."""
     plain: list[Row] = []
-    lists: list[Section] = []
+    parts: list[Section] = []
+    first = (Column(head, _MAIN[0].width, most=_MAIN[0].most), *_MAIN[1:])
     for spec in specs:
         path = (*base, spec.key)
         value, lent = edits.value_at(context.session.document, context.session.shelves, path)
@@ -37,15 +38,18 @@ def sections(context: Context, base: Path, specs: tuple[Field, ...], head: str =
         if spec.kind == schema.TABLE:
             plain += _nested(context, path, spec, value)
         elif spec.kind in schema.NESTED and isinstance(value, list) and value:
-            lists.append(_list(context, path, spec, value, lent))
+            if plain:
+                parts.append(Section(first, tuple(plain)))
+                plain = []
+            parts.append(_list(context, path, spec, value, lent))
+            first = (Column("", _MAIN[0].width, most=_MAIN[0].most), *_MAIN[1:])
         elif spec.kind in schema.NESTED and not (spec.kind == schema.CURVE and value is not None):
             mark = "!" if path in context.bad else ""
             text = "none; n adds it" if value is None or value == [] else "cannot be read"
             plain.append(_line(spec.key, Cell(text, None, RIGHT, "pale", mark, item=path), spec.help, path))
         else:
             plain.append(_line(spec.title, value_cell(context, path, _align(spec)), spec.help, path))
-    first = (Column(head, _MAIN[0].width, most=_MAIN[0].most), *_MAIN[1:])
-    return (Section(first, tuple(plain)), *lists)
+    return (*parts, Section(first, tuple(plain))) if plain else tuple(parts)
 
 
 def _align(spec: Field) -> str:
@@ -75,7 +79,10 @@ def _list(context: Context, path: Path, spec: Field, value: list[Any], lent: boo
     """A list as a table, one item a row."""
     title = spec.key + (" (from the shelf)" if lent else "")
     columns = [Column(title, 12, most=22)]
-    columns += [Column(f.key, _WIDTHS.get(f.kind, 8), "left" if f.kind in _WIDTHS else RIGHT) for f in spec.fields]
+    columns += [
+        Column(f.key, _WIDTHS.get(f.kind, max(8, len(f.key))), "left" if f.kind in _WIDTHS else RIGHT)
+        for f in spec.fields
+    ]
     rows = []
     by_column = spec.kind in (schema.ROWS, schema.CURVE)
     for index, item in enumerate(value):
@@ -128,10 +135,10 @@ def shelf(context: Context) -> View:
                 users = [r.get("id", "?") for _, r in rows_of(document, key) if r.get("part") == part]
                 here = name == "this file"
                 path: Path = ("shelf", key, part)
-                info = "Enter shows its fields" if here else f"kept in {name}; change it there"
+                info = "Enter shows its fields" + ("" if here else f"; kept in {name}, D copies it into this file")
                 note = entry.get("note", "") if isinstance(entry, dict) else ""
                 cells = (
-                    Cell(part, tone="head", info=info, leads=path if here else None),
+                    Cell(part, tone="head", info=info, leads=path),
                     Cell(key),
                     Cell(name),
                     Cell(", ".join(map(str, users)) or "not used", tone="" if users else "pale"),

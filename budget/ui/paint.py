@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from rich.cells import cell_len, set_cell_size
 
 from budget.project import edits, read, schema
 from budget.project.problems import place
 from budget.report import words
 from budget.session import Session
+from budget.ui import plot
 from budget.ui.desk import Ask, Desk, Edit, Pick
 from budget.ui.layout import Slot, layout
+from budget.ui.sheet import words_only
 from budget.ui.view import RIGHT, Cell, Row, Section, View
 
 Span = tuple[str, str]  # text, tone
@@ -25,23 +29,27 @@ def frame(desk: Desk, width: int, height: int) -> list[Line]:
     """``height`` lines of exactly ``width`` cells."""
     desk.width, desk.height = width, height
     if width < SMALLEST[0] or height < SMALLEST[1]:
-        text = f"{width}x{height} is too small; {SMALLEST[0]}x{SMALLEST[1]} is needed"
+        text = f"needs {SMALLEST[0]}x{SMALLEST[1]}; this is {width}x{height}"
         return [_fit([(text if y == 0 else "", "")], width, desk.ascii_only) for y in range(height)]
     body = height - 5
     main = width - SIDE_WIDTH - 1 if width >= SIDE else width
     below = body - len(desk.lines()) - 1
-    if main < width and desk.view_name == "sheet" and below >= LEAST_BELOW:
+    if desk.view().plot is not None:
+        lines = _picture(desk, width, body)
+        main = width
+    elif main < width and desk.view_name == "sheet" and below >= LEAST_BELOW:
         lines = [*_grid(desk, main, body - below), *_panel(desk, desk.make("checks", ()), main, below)]
     else:
         lines = _grid(desk, main, body)
+    if isinstance(desk.mode, Pick):
+        box = _pick(desk.mode, main, body)[:body]
+        lines[: len(box)] = box
     if main < width:
         side = _side(desk, SIDE_WIDTH, body)
         lines = [
             [*line, ("|" if desk.ascii_only else "\u2502", "pale"), *extra]
             for line, extra in zip(lines, side, strict=True)
         ]
-    if isinstance(desk.mode, Pick):
-        lines = _overlay(lines, _pick(desk.mode, min(main, 76), body), desk.ascii_only)
     rows = [_title(desk), *lines, *_info(desk), _message(desk, width), _hints(desk, width)]
     return [_fit(row, width, desk.ascii_only) for row in rows]
 
@@ -56,6 +64,8 @@ def _fit(line: Line, width: int, ascii_only: bool) -> Line:
     spans: Line = []
     room = width
     for text, tone in line:
+        if not text.isprintable():  # no control character of a file may reach the terminal
+            text = words_only(text)
         if ascii_only and not text.isascii():
             text = text.encode("ascii", "replace").decode()
         size = len(text) if text.isascii() else cell_len(text)
@@ -100,7 +110,9 @@ def _title(desk: Desk) -> Line:
 
 
 def _state(session: Session, desk: Desk) -> Line:
-    if session.outcome is None or (desk.pending and not session.fresh):
+    if desk.job is not None:
+        return [(f"~ {desk.job.label} {desk.job.fraction:.0%}", "thin")]
+    if session.outcome is None or (desk.pending and not session.complete):
         return [("~ calculating", "thin")]
     errors = len(session.outcome.built.errors)
     spans: Line = []
@@ -109,11 +121,13 @@ def _state(session: Session, desk: Desk) -> Line:
     result = session.result
     if result is None:
         return [*spans, ("no results", "fail")]
-    status = result.status
-    spans.append((("FAIL" if status == "fail" else status) + " ", status))
+    if session.outcome.built.left_out:
+        spans.append((f"! {len(session.outcome.built.left_out)} left out ", "fail"))
     counts = words.counts(result.checks)
-    rest = [f"{n} {s}" for s, n in counts.items() if n and s != "ok"]
-    spans.append((", ".join(rest) or "all checks", ""))
+    names = {"fail": "FAIL", "thin": "thin", "no data": "no data"}
+    spans += [(f"{counts[s]} {name} ", s) for s, name in names.items() if counts[s]]
+    if not counts["fail"] and not counts["thin"]:
+        spans.append(("ok", "ok"))
     return spans
 
 
@@ -225,9 +239,27 @@ def _side(desk: Desk, width: int, height: int) -> list[Line]:
     """Beside the sheet the fields of its row, beside any other view the checks."""
     if desk.view_name == "sheet":
         view = desk.make("fields", edits.owner(desk.item() or ("bus",)))
+    elif desk.view_name == "checks":
+        view = desk.make("fields", edits.owner(desk.here()[1].leads or ("bus",)))
     else:
         view = desk.make("checks", ())
     return _panel(desk, view, width, height)
+
+
+def _picture(desk: Desk, width: int, height: int) -> list[Line]:
+    """A view with a picture: the table of its lines beside it where there is room, below it otherwise."""
+    picture = desk.view().plot
+    assert picture is not None
+    row, _ = desk.here()
+    picture = replace(picture, cursor=row.mark if row else None)
+    if width >= SIDE:
+        main = width - SIDE_WIDTH - 1
+        bar = "|" if desk.ascii_only else "\u2502"
+        left = plot.draw(picture, main, height, ascii_only=desk.ascii_only)
+        right = _grid(desk, SIDE_WIDTH, height)
+        return [[*_fit(one, main, desk.ascii_only), (bar, "pale"), *two] for one, two in zip(left, right, strict=True)]
+    table = min(8, max(4, height // 3))
+    return [*plot.draw(picture, width, height - table, ascii_only=desk.ascii_only), *_grid(desk, width, table)]
 
 
 def _panel(desk: Desk, view: View, width: int, height: int) -> list[Line]:
@@ -259,15 +291,6 @@ def _pick(pick: Pick, width: int, height: int) -> list[Line]:
     return lines
 
 
-def _overlay(lines: list[Line], box: list[Line], ascii_only: bool) -> list[Line]:
-    out = list(lines)
-    for k, line in enumerate(box[: len(lines)]):
-        size = sum(_size(text) for text, _ in line)
-        under = plain(lines[k])
-        out[k] = [*line, (under[size:] if under.isascii() else "", "pale")]
-    return out
-
-
 # -- the lines below
 
 
@@ -279,6 +302,9 @@ def _info(desk: Desk) -> list[Line]:
     row, cell = desk.here()
     if row is None:
         return [[("", "")], [("", "")]]
+    summary = desk.view().summary
+    if summary:
+        return [[(cell.info, "")], [(_split(summary, desk.width)[0], "head")]]
     if cell.path is None:
         second = "Enter goes to what it follows from" if cell.leads else ""
         first, rest = _split(cell.info or cell.text, desk.width)
@@ -288,7 +314,8 @@ def _info(desk: Desk) -> list[Line]:
     where = place(desk.session.document, cell.path)
     problem = _problem(desk, cell)
     if problem:
-        return [[(f"{where}: ", "head"), (f"! {problem}", "fail")], [(_second(spec, cell), "pale")]]
+        first, rest = _split(f"{where}: ! {problem}", desk.width)
+        return [[(first, "fail")], [(rest, "") if rest else (_second(spec, cell), "pale")]]
     return [[(f"{where}: ", "head"), (help_text, "")], [(_second(spec, cell), "pale")]]
 
 
@@ -301,10 +328,17 @@ def _split(text: str, width: int) -> tuple[str, str]:
 
 
 def _problem(desk: Desk, cell: Cell) -> str:
+    """What is wrong with the cell; for the name of a marked row, what is wrong with the row."""
     outcome = desk.session.outcome
-    for p in outcome.built.problems if outcome and cell.path is not None else ():
+    problems = outcome.built.problems if outcome and cell.path is not None else ()
+    for p in problems:
         if edits.cell_of(p.path) == cell.path:
             return p.text
+    if cell.mark == "!" and cell.path is not None:
+        base = edits.owner(cell.path)
+        for p in problems:
+            if p.error and p.path[: len(base)] == base:
+                return f"{p.place} {p.text}"
     return ""
 
 
@@ -351,8 +385,7 @@ def _info_edit(desk: Desk, edit: Edit) -> list[Line]:
     first: Line = [(f"{label}: ", "head"), (before, ""), (caret, "cursor"), (rest, "")]
     if comes_to:
         first.append((f"  = {comes_to}", "pale"))
-    second = f"{spec.help} {describe(spec)}" if spec else ""
-    return [first, [(second, "pale")]]
+    return [first, [(spec.help if spec else "", "pale")]]  # its unit, default and limits stand on the message line
 
 
 def _comes_to(spec: schema.Field | None, text: str) -> str:
@@ -371,7 +404,12 @@ def _message(desk: Desk, width: int) -> Line:
         return [(mode.question, "thin")]
     if isinstance(mode, Edit) and mode.error:
         return [(f"! {mode.error}", "fail")]
+    if isinstance(mode, Edit) and mode.path is not None:
+        spec = edits.spec_at(mode.path)
+        return [(describe(spec) if spec else "", "pale")]
     text = desk.message
+    if not text and mode is None and desk.view().summary:
+        return [(_split(desk.view().summary, width)[1], "head")]
     if _size(text) > width:  # whole findings as far as they fit, then as much as fits
         at = text.rfind(";", 0, width)
         text = text[:at] if at > width // 2 else text[: width - 3] + "..."

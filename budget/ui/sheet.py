@@ -2,21 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+import math
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 from budget import quantity
+from budget.engine.model import LINES
 from budget.project import document as doc
 from budget.project import edits
 from budget.project.document import Path
 from budget.report import words
+from budget.report.numbers import Corner, Number, Numbers, corner_index, numbers
 from budget.session import Session
-from budget.ui.numbers import Corner, Number, Numbers, numbers
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
     from budget.engine.checks import CheckRow
+    from budget.engine.evaluate import Result
 
 PENDING = "~"
 BAR = 5
@@ -30,12 +33,32 @@ COLUMNS = (
     Column("at V", 6, RIGHT),
     Column("heat W", 6, RIGHT),
     Column("worst check", 16, most=34, wide=26),
+    Column("emits dB", 8, RIGHT),
     Column("rated", 7, RIGHT),
     Column("filter", 7),
     Column("load", 7, RIGHT),
     Column("lead R", 8, RIGHT),
     Column("note", 12, most=30),
 )
+
+
+BOTH, DM, CM = "both", "dm", "cm"
+Cells = dict[tuple[Path, str, bool], tuple[tuple[Any, ...], Cell]]
+
+
+@dataclass(frozen=True, slots=True)
+class Options:
+    """What the views of emissions show: which limit set, which mode, the unfiltered level beside it, a clock's scan."""
+
+    limit: int = 0
+    mode: str = BOTH
+    bare: bool = False
+    common: bool = False  # the filter view: common mode in place of differential
+    run: int | None = None  # the switch-on view: which case and event; None is the worst
+    voltages: bool = False
+    log_time: bool = False
+    filter: int = 0  # the stability view
+    scan: Any = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +70,17 @@ class Context:
     bad: frozenset[Path]
     subject: Path
     ascii_only: bool = False
+    options: Options = Options()
+    cells: Cells = field(default_factory=dict)  # made before, see ``value_cell``
+    memo: dict[str, tuple[tuple[Any, ...], Any]] = field(default_factory=dict)
+
+    def once(self, name: str, made_of: tuple[Any, ...], make: Callable[[], Any]) -> Any:
+        """What ``make`` gives, from before if all it is ``made_of`` are still the same objects."""
+        old = self.memo.get(name)
+        if old is None or not all(a is b for a, b in zip(old[0], made_of, strict=True)):
+            old = (made_of, make())
+            self.memo[name] = old
+        return old[1]
 
 
 def figure(value: float | None, unit: str) -> str:
@@ -77,12 +111,29 @@ def sheet(context: Context) -> View:
         rows.append(maker.filter(index, part))
         rows += [maker.converter(n, unit) for n, unit in converters if unit.get("filter") == part.get("id")]
     loose = [(n, unit) for n, unit in converters if unit.get("filter", "") not in known or not unit.get("filter")]
+    if not filters:
+        rows.append(Row(("start",), (Cell("no filter yet: N adds one", tone="pale"),)))
+    elif not converters:
+        rows.append(Row(("start",), (Cell("no converter yet: n on a filter adds one", tone="pale"),)))
     if loose:
         rows.append(
             Row(("loose",), (Cell("not allocated", tone="head", info="These draw nothing: give each a filter."),))
         )
         rows += [maker.converter(n, unit) for n, unit in loose]
     return View("sheet", "sheet", (Section(COLUMNS, tuple(rows)),))
+
+
+def _checks(result: Result, corner: Corner | None) -> tuple[CheckRow, ...]:
+    """The checks of all corners, or what the operating point of one corner alone says."""
+    at = corner_index(result, corner)
+    if at is None:
+        return result.checks
+    from dataclasses import replace
+
+    from budget.engine.evaluate import evaluate_dc
+
+    one = replace(result.project, cases=(result.project.cases[at[0]],))
+    return evaluate_dc(one, (at[1],)).checks
 
 
 def rows_of(document: doc.Document, key: str) -> list[tuple[int, dict[str, Any]]]:
@@ -127,15 +178,20 @@ class _Maker:
         self.context = context
         self.session = context.session
         result = self.session.result
-        self.numbers: Numbers | None = numbers(result, context.corner) if result else None
+        corner = context.corner
+        self.numbers: Numbers | None = (
+            context.once("numbers", (result, corner), lambda: numbers(result, corner)) if result else None
+        )
         self.place: dict[str, dict[str, int]] = {
             "filter": {f.id: k for k, f in enumerate(result.project.filters)} if result else {},
             "converter": {c.id: k for k, c in enumerate(result.project.converters)} if result else {},
         }
         self.checks: dict[str, list[CheckRow]] = {}
-        for row in result.checks if result else ():
+        for row in context.once("checks", (result, corner), lambda: _checks(result, corner)) if result else ():
             self.checks.setdefault(row.subject, []).append(row)
         self.outcome = self.session.outcome is not None
+        made_of = (result, self.session.full, corner, context.options)
+        self.emission: _Emission | None = context.once("emission", made_of, lambda: _emission(context))
 
     def bus(self) -> Row:
         data = self.session.document.data.get("bus")
@@ -147,6 +203,7 @@ class _Maker:
             self.name(("bus",), f"bus {edits.typed(name)}".strip(), ("bus", "name")),
             *self.flow(found, rating, ("bus",), "bus", 0, ("bus", line) if line else None),
             self.check("bus", ("bus",)),
+            self.emits("bus", "bus"),
             self.typed(("bus", "rating")),
             Cell(),
             Cell(),
@@ -165,6 +222,7 @@ class _Maker:
             self.name(path, f"{ident or '?'} {part.get('name', '')}".strip(), (*path, "name")),
             *self.flow(found, allowed, path, "filter", k, None),
             self.check(ident, path),
+            self.emits("filter", ident),
             self.typed((*path, "rated_current")),
             Cell(),
             Cell(),
@@ -184,6 +242,7 @@ class _Maker:
             self.name(path, f"{ident or '?'} {unit.get('name', '')}".strip(), (*path, "name")),
             *self.flow(found, allowed, path, "converter", k, None),
             self.check(ident, path),
+            self.emits("converter", ident),
             self.typed((*path, "rated_power")),
             self.typed((*path, "filter"), "left"),
             self.load(ident),
@@ -207,7 +266,8 @@ class _Maker:
         volts: Path | None,
     ) -> tuple[Cell, ...]:
         """The calculated cells of a row: out, in, current, share, voltage, heat."""
-        lead: Path = (*path, "output", 0, "current") if kind == "converter" else (*path, "name")
+        leads = {"bus": (*path, "resistance"), "filter": (*path, "rated_current")}
+        lead: Path = leads.get(kind, (*path, "output", 0, "current"))
         at = {"bus": "voltage where the filters are tied", "filter": "voltage behind it"}
         labels = {
             "out": ("W", "output power"),
@@ -252,8 +312,9 @@ class _Maker:
         rows = self.checks.get(ident, []) if isinstance(ident, str) else []
         row = worst_of(rows)
         if row is None:
-            text = ("left out" if self.outcome else PENDING) if path != ("bus",) or self.outcome else PENDING
-            return Cell(text, calculated=True, leads=(*path, "name"))
+            bad = next((p for p in sorted(self.context.bad, key=str) if p[: len(path)] == path), (*path, "name"))
+            text = "left out" if self.outcome else PENDING
+            return Cell(text, tone="fail" if self.outcome else "", mark="!" if self.outcome else "", leads=bad)
         lead = behind(row, self.session.document)
         text = words.brief(row)
         info = words.sentence(row)
@@ -261,6 +322,21 @@ class _Maker:
         if lacking and row.status != "no data":
             info += f"; {lacking} without data"
         return Cell(words.verdict(row), None, "left", row.status, "", info, text, leads=lead, calculated=True)
+
+    def emits(self, kind: str, ident: Any) -> Cell:
+        """What a row adds to the reading of the receiver at its worst tuning."""
+        found = self.emission
+        if found is None:
+            waits = self.session.outcome is None and bool(doc.get(self.session.document, ("rules", "emissions")))
+            return Cell(PENDING if waits else "", calculated=True, align=RIGHT)
+        level = found.level(kind, ident)
+        what = {"bus": "reading of the receiver", "filter": "sum of the converters behind it"}.get(
+            kind, "its own share"
+        )
+        info = f"{what} at {words.frequency(found.frequency)}, {found.where}" + (
+            f": {level:.1f} {found.unit}" if level is not None else ": not seen there"
+        )
+        return Cell(f"{level:.1f}" if level is not None else "-", None, RIGHT, "", "", info, calculated=True)
 
     def typed(self, path: Path, align: str = RIGHT) -> Cell:
         return value_cell(self.context, path, align)
@@ -275,19 +351,77 @@ class _Maker:
         return Cell("")
 
 
+@dataclass(frozen=True, slots=True)
+class _Emission:
+    """Shares of the reading at the worst tuning of the limit set and corner shown, in V or A."""
+
+    frequency: float
+    where: str
+    unit: str
+    reading: float  # dB
+    shares: dict[Any, float]  # by the id of a filter or converter
+
+    def level(self, kind: str, ident: Any) -> float | None:
+        if kind == "bus":
+            return self.reading
+        value = self.shares.get(ident, 0.0)
+        return 20.0 * math.log10(value / 1e-6) if value > 0.0 else None
+
+
+def _emission(context: Context) -> _Emission | None:
+    from budget.ui.spectrum import shown
+
+    found = shown(context)
+    if found is None:
+        return None
+    result, lines, at = found
+    assert result.emissions is not None
+    case, line = result.project.cases[at[0]].id, LINES[at[1]]
+    key = (lines.limit.name, case, line)
+    row = next((r for r in result.emissions.rows if (r.limit, r.case, r.line) == key), None)
+    if row is None or row.frequency is None or row.level is None:
+        return None
+    from budget.engine.inspection import parts
+
+    own = parts(result.project, result.operating, lines, at, row.frequency).tolist()
+    shares = {f.id: 0.0 for f in result.project.filters}
+    for unit, value in zip(result.project.converters, own, strict=True):
+        shares[unit.id] = value
+        if unit.filter in shares:
+            shares[unit.filter] += value
+    return _Emission(row.frequency, f"{row.limit} in {case}, {line} line", row.unit, row.level, shares)
+
+
 def words_only(text: str) -> str:
     """Text of the file for the screen: control characters become ``?``."""
+    if text.isprintable():
+        return text
     return "".join(c if c.isprintable() else "?" for c in text)
 
 
 def value_cell(context: Context, path: Path, align: str = RIGHT) -> Cell:
-    """A cell for the value at ``path``: scaled if it can be read, as typed if not, its default in a paler tone."""
+    """A cell for the value at ``path``: scaled if it can be read, as typed if not, its default in a paler tone.
+
+    A cell is made again only when its row, or the shelf that may lend to it, is another object than before.
+    """
+    document, shelves = context.session.document, context.session.shelves
+    bad = path in context.bad
+    made_of = (doc.get(document, edits.owner(path)), document.data.get("shelf"), shelves)
+    key = (path, align, bad)
+    old = context.cells.get(key)
+    if old is not None and all(a is b for a, b in zip(old[0], made_of, strict=True)):
+        return old[1]
+    cell = _value_cell(context, path, align, bad)
+    context.cells[key] = (made_of, cell)
+    return cell
+
+
+def _value_cell(context: Context, path: Path, align: str, bad: bool) -> Cell:
     session = context.session
     spec = edits.spec_at(path)
     value, lent = edits.value_at(session.document, session.shelves, path)
     if spec is None:
         return Cell(words_only(edits.typed(value)), align=align)
-    bad = path in context.bad
     text = words_only(edits.typed(value))
     info = f"as typed: {text}" if text else ""
     tone = "lent" if lent else ""
@@ -314,7 +448,10 @@ def scaled(spec: Any, value: Any) -> str | None:
             return quantity.show(number, quantity.KINDS["power" if kind == "power" else "ratio"])
         cell = spec.fields[-1] if spec.kind == schema.CURVE and not isinstance(value, list) else spec
         if cell.kind in quantity.KINDS:
-            return quantity.show(read.quantity_value(cell, value), quantity.KINDS[cell.kind])
+            number = read.quantity_value(cell, value)
+            if cell.kind == "time" and number >= 60.0:
+                return f"{number / 3600:.4g} h" if number >= 3600.0 else f"{number / 60:.4g} min"
+            return quantity.show(number, quantity.KINDS[cell.kind])
     except ValueError:
         return None
     return None

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from budget.project.document import Path
+from budget.ui.plot import Plot
 
 LEFT, RIGHT = "left", "right"
 
@@ -38,6 +39,7 @@ class Row:
     cells: tuple[Cell, ...]
     item: Path | None = None
     depth: int = 0
+    mark: tuple[float, float] | None = None  # the point of the view's picture that this row is about
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,6 +62,8 @@ class View:
     name: str
     title: str
     sections: tuple[Section, ...] = field(default=())
+    plot: Plot | None = None
+    summary: str = ""  # a line about the whole, shown while the cell under the cursor has nothing to say
 
     def flat(self) -> list[tuple[Section, Row | None]]:
         """Every line from top to bottom; None stands for the heading of a section."""

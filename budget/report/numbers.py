@@ -63,7 +63,9 @@ def numbers(result: Result, corner: Corner | None) -> Numbers:
     at = corner_index(result, corner)
     solved = op.solved
 
-    flat = solved.reshape(-1)
+    chosen = np.zeros(lines, dtype=np.bool_)
+    chosen[list(result.lines)] = True
+    flat = (solved & chosen).reshape(-1)
     names = [f"{case.id}, {line} line" for case in project.cases for line in LINES]
 
     def pick(values: Any, largest: bool = True) -> tuple[list[float], list[str]]:

@@ -1,0 +1,633 @@
+"""Switch-on and surge of one network, for many members (a load case and an event each) at once.
+
+**Method.** The linear part of the network is advanced exactly, mode by mode (see ``modes``). What is not linear enters
+by a few inputs g: the load currents P(t)/v and the corrections w of saturating inductors. Over a step they are taken as
+quadratic in time through their values at its start, middle and end, which makes an exponential collocation method
+(Hochbruck & Ostermann, Acta Numerica 2010, section 2.2; of Lobatto type, order 4 where the step resolves the modes,
+exact for quasi-static modes however stiff). The two unknown values solve a small system, g = G(q0 + K g) with K from
+the step table: by repetition where that contracts well, by Newton elsewhere. Newton starts from the voltage before, so
+that a load without a capacitor of its own is at the upper of its two voltages for as long as that exists.
+
+**Steps.** Each member has its own time and step length. A step is limited by the defect of the quadratic, evaluated at
+a quarter and three quarters and carried to the outputs; and by the modes that are still ringing, as strongly as they
+can be seen at an output: between its nodes a step is read from the quartic through five exact values, for peaks,
+integrals (Boole's rule) and thresholds. Fast modes that have died away, or never were excited, cost nothing.
+
+**Events.** A step that meets a threshold or an instant is cut there: the point is found on the quartic and put right on
+the exact solution, at which the network's own equations, not an interpolation, give the state.
+
+Voltages at a load that inductors alone feed leave out L di/dt of the load current itself: a constant power behind an
+inductor with no capacitor has no solution that holds still. So the load is followed quasi-statically, with a remark.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from contextlib import suppress
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from budget.engine.events import Logic, Phase, Segment, initial
+from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps, step_weights
+from budget.engine.statespace import StateSpace, saturation
+
+Floats = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+Bools = NDArray[np.bool_]
+Indices = NDArray[np.intp]
+
+TOLERANCE = 1e-5  # of an output's scale, for the defect of one step
+_RESOLVE = 2.0  # tolerances: a mode that rings by less at every output is not followed
+_QUARTIC = 3e-5  # error of the quartic through five points is this times (rate h)^5 of the amplitude
+_GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
+_CONTRACTS = 0.15  # repetition instead of Newton
+_SWEEPS = 12
+_JUMP = 1e-9  # of the window: a step this short that the defect still rejects holds a jump, and is taken
+_BAND = 0.01  # of a threshold: within it the outcome is a coin toss
+_POINTS = 6000  # of a waveform; beyond, it is thinned
+_PENDING = 20000  # points of all waveforms together that wait to be sorted
+
+_THETA = np.array(NODES)
+_FINE = np.linspace(0.0, 1.0, 25)
+_AT = np.array((0.0, *NODES))
+_LAGRANGE = np.array([[np.prod([(s - b) / (a - b) for b in _AT if b != a]) for a in _AT] for s in _FINE])  # (25, 5)
+_MIX = np.stack(  # (4, 3) quadratic through start, middle, end, at the nodes
+    ((1 - _THETA) * (1 - 2 * _THETA), 4 * _THETA * (1 - _THETA), _THETA * (2 * _THETA - 1)), axis=1
+)
+_BOOLE = np.array([7.0, 32.0, 12.0, 32.0, 7.0]) / 90.0
+
+
+@dataclass(frozen=True, slots=True)
+class Member:
+    """One run: its case (an index), the source's segments, and whether it starts from a steady state, and from which.
+
+    ``currents`` (N,) [A] drawn in that steady state at the source voltage ``before`` [V]; None starts from zero.
+    """
+
+    case: int
+    segments: tuple[Segment, ...]
+    currents: Floats | None = None
+    before: float = 0.0
+
+
+@dataclass(slots=True)
+class Outcome:
+    """What a member's run gave. Rows of the state space's outputs: W = 1 + 2 F + N, the first ones, [A] and [V]."""
+
+    peak: Floats  # (W,)
+    i2t: Floats  # (1 + F,) A^2 s
+    runs_at: Floats  # (N,) s, nan: never, or throughout
+    phase: NDArray[np.int8]  # (N,) at the end
+    timer: Floats  # (N,) s, what it waits for, inf: nothing
+    tripped: Bools  # (N,)
+    near_on: Bools  # (N,) came within 1 % of turn_on without clearly crossing it
+    near_off: Bools  # (N,)
+    reached: float  # s, the end of the window if all went well
+    problem: str  # "", "chatter", "steps"
+    steps: int
+    time: Floats = field(default_factory=lambda: np.zeros(0))  # (K,) s
+    values: Floats = field(default_factory=lambda: np.zeros((0, 0)))  # (K, W) A and V
+
+
+class Batch:
+    """Members that still run. Arrays have one row for each; see the module for the method."""
+
+    _ROWS = ("member", "case", "t", "stop", "volts", "slope", "z", "g", "drive", "y", "bend", "level", "peak", "i2t")
+    _MORE = ("hint", "used", "still", "side", "touch", "near")
+    _PHASE = ("phase", "timer", "level", "climb", "upper", "lower", "runs_at", "tripped")
+
+    def __init__(
+        self,
+        space: StateSpace,
+        modal: Modes,
+        logic: Logic,
+        members: Sequence[Member],
+        reference: float,
+        limit: int,
+        tolerance: float = TOLERANCE,
+    ) -> None:
+        """``reference`` [V]: errors of voltages count against it; ``limit``: steps that a member may take."""
+        self.members, self.logic, self.limit, self.tolerance = members, logic, limit, tolerance
+        self.reference = reference
+        self.loads = space.converters.size
+        filters = space.filters.size
+        self.meters = 1 + filters
+        self.watch = 1 + 2 * filters + self.loads
+        self.terminals = space.terminal_voltages
+        self.curves = space.L0, space.saturation
+        outputs = space.C.shape[0]
+        self.outputs = outputs
+        self.quantities = slice(outputs - self.loads, outputs + space.L0.size)
+
+        show = np.concatenate((space.C, space.flux_C))
+        direct = np.concatenate((space.D, space.flux_D))
+        late = np.concatenate((space.D1, np.zeros_like(space.flux_D)))
+        shown, driven = modal.seen(show), modal.driven(space.B)
+        self.rate = modal.rate
+        self.slow = np.where(np.abs(self.rate) > 1e-30, 1.0 / np.where(self.rate == 0.0, 1.0, self.rate), 0.0)
+        self.by_source = driven[:, 0]
+        self.drive_real = _as_real(driven[:, 1:].T)
+        self.show_real = _read_real(shown)
+        self.direct_source, self.late_source, self.direct = direct[:, 0], late[:, 0], direct[:, 1:]
+        self.late = late[:, 1 + self.loads :] if late[:, 1 + self.loads :].any() else None
+        self.weight_seen = np.abs(shown[:outputs])
+        q = self.quantities
+        window = max(m.segments[-1].end for m in members)
+        self.tables: Steps = make_steps(
+            self.rate, window, driven[:, 1:], shown[q], self.direct[q], shown[:outputs], self.direct[:outputs]
+        )
+        self.jump = window * _JUMP
+        self.store: list[tuple[Indices, Floats, Floats]] = []
+        self.stored = 0
+        self.waves = [(np.zeros(0), np.zeros((0, self.watch))) for _ in members]
+        self.outcomes: list[Outcome | None] = [None] * len(members)
+        self._begin(modal)
+
+    def _begin(self, modal: Modes) -> None:
+        count, inputs = len(self.members), self.direct.shape[1]
+        self.member = np.arange(count)
+        self.case = np.array([m.case for m in self.members], dtype=np.intp)
+        self.t, self.stop = np.zeros(count), np.zeros(count)
+        self.volts, self.slope = np.zeros(count), np.zeros(count)
+        self.z = np.zeros((count, self.rate.size), dtype=np.complex128)
+        self.g, self.bend = np.zeros((count, inputs)), np.zeros((count, 2, inputs))
+        self.drive = np.zeros((count, self.rate.size), dtype=np.complex128)
+        self.y = np.zeros((count, self.outputs + self.curves[0].size))
+        self.level = np.full(count, self.tables.length.size - 1, dtype=np.intp)
+        self.peak, self.i2t = np.zeros((count, self.watch)), np.zeros((count, self.meters))
+        self.hint, self.used = np.full(count, 1e-300), np.zeros(count, dtype=np.intp)
+        self.still = np.zeros(count, dtype=np.intp)
+        self.side = np.zeros((count, 2 * self.loads), dtype=np.int8)
+        self.touch = np.zeros((count, 2 * self.loads), dtype=np.int8)
+        self.near = np.zeros((count, 2 * self.loads), dtype=np.bool_)
+        self.threshold = np.concatenate((self.logic.turn_on, self.logic.turn_off))
+        running = np.array([m.currents is not None for m in self.members], dtype=np.bool_)
+        self.ph: Phase = initial(self.logic, self.case, running)
+        for i, member in enumerate(self.members):
+            if member.currents is not None:
+                self._settle(i, member.currents, member.before)
+            self._segment(i)
+            self._restart(i)
+
+    # --- what does not move ---------------------------------------------------------------------------------------
+
+    def _segment(self, i: int) -> None:
+        """Take the source's segment that begins now, or holds now."""
+        for s in self.members[int(self.member[i])].segments:
+            if s.end > self.t[i] * (1.0 + 1e-15):
+                self.stop[i] = s.end
+                self.volts[i], self.slope[i] = s.voltage + s.slope * (self.t[i] - s.start), s.slope
+                return
+
+    def _settle(self, i: int, currents: Floats, volts: float) -> None:
+        """The steady state at a source of ``volts`` [V] and load ``currents`` (N,) [A]; undamped modes rest."""
+        source = self.by_source * volts
+        inverse = self.slow
+        sense = self.show_real[:, self.quantities]
+        flux = slice(self.loads, None)
+        g = np.zeros(self.g.shape[1])
+        g[: self.loads] = currents
+        whole = self.drive_real.view(np.complex128) * -inverse  # (M, R) steady z for each input
+        rows = np.ascontiguousarray(whole).view(np.float64) @ sense + self.direct[self.quantities].T  # (M, Q)
+        at = np.ascontiguousarray(-inverse * source).view(np.float64) @ sense
+        at = at + self.direct_source[self.quantities] * volts
+        L0, sat = self.curves  # noqa: N806
+        for _ in range(100 if L0.size else 0):
+            q = at + g @ rows
+            current, slope = saturation(q[flux], L0, sat)
+            gap = current - q[flux] / L0 - g[flux]
+            if np.abs(gap).max() <= 1e-13 * max(1.0, np.abs(g).max()):
+                break
+            matrix = np.eye(L0.size) - (slope - 1.0 / L0)[:, None] * rows[flux, flux].T
+            g[flux] += np.linalg.solve(matrix, gap)
+        self.z[i] = -inverse * (source + (g @ self.drive_real).view(np.complex128))
+        self.g[i] = g
+
+    def _restart(self, i: int) -> None:
+        """Inputs and outputs anew at this instant, after something has jumped."""
+        rows = np.array([i])
+        seen = self.z[i].view(np.float64) @ self.show_real
+        seen = seen + self.direct_source * self.volts[i] + self.late_source * self.slope[i]
+        q = self.quantities
+        start = self.g[rows].copy()
+        start[0, : self.loads] = self._nonlinear(self.y[rows][:, None, q], self.t[rows][:, None], rows)[0][
+            0, 0, : self.loads
+        ]
+        if not self.y[i].any():
+            start = self._nonlinear(seen[None, None, q], self.t[rows][:, None], rows)[0][:, 0]
+        loop = self.direct[q][None]
+        g, fine = self._solve(seen[None, q], loop, np.abs(loop).sum(axis=2), start, self.t[rows][:, None], rows)
+        if not fine[0]:  # no root from there: the one below
+            start[0, : self.loads] = np.maximum(self.ph.level[i] + self.ph.climb[i] * self.t[i], 0.0) / self.logic.floor
+            g, fine = self._solve(seen[None, q], loop, np.abs(loop).sum(axis=2), start, self.t[rows][:, None], rows)
+        self.g[i] = g[0]
+        self.bend[i] = 0.0
+        self.drive[i] = (g[0] @ self.drive_real).view(np.complex128)
+        self.y[i] = seen + self.direct @ g[0]
+        free = self._free(rows)[0]
+        self.hint[i] = max(0.2 * float((self.weight_seen[: self.meters] * np.abs(free)).max()), 1e-300)
+        self._record(rows, self.t[rows][:, None], self.y[rows][:, None, : self.watch])
+
+    def _nonlinear(self, q: Floats, t: Floats, rows: Indices | slice) -> tuple[Floats, Floats]:
+        """Inputs [A] and their slopes from the quantities ``q`` (m, T, Q) [V, V s] at the times ``t`` (m, T) [s]."""
+        n = self.loads
+        volts = np.maximum(q[..., :n], self.logic.floor)
+        power = self.ph.level[rows][:, None] + self.ph.climb[rows][:, None] * t[..., None]
+        amps = power / volts
+        slope = np.where(q[..., :n] > self.logic.floor, -amps / volts, 0.0)
+        if not self.curves[0].size:
+            return amps, slope
+        L0, sat = self.curves  # noqa: N806
+        flux = q[..., n:]
+        current, steep = saturation(flux, L0, sat)
+        return (
+            np.concatenate((amps, current - flux / L0), axis=-1),
+            np.concatenate((slope, steep - 1.0 / L0), axis=-1),
+        )
+
+    def _solve(
+        self, known: Floats, loop: Floats, spread: Floats, guess: Floats, t: Floats, rows: Indices | slice
+    ) -> tuple[Floats, Bools]:
+        """Solve g = G(known + loop g) for g (m, T M) [A], flat over times ``t`` (m, T) [s]; and whether it is done."""
+        shape = (*t.shape, -1)
+        most = np.maximum(self.peak[rows, : self.meters].max(axis=1), self.hint[rows])
+        least = 1e-3 * self.tolerance * most[:, None]  # rounding must not keep it going where nothing flows
+        g = guess
+        done = np.zeros(len(g), dtype=np.bool_)
+        newton: Bools | None = None
+        for _ in range(_SWEEPS):
+            q = known + np.matmul(loop, g[:, :, None])[:, :, 0]
+            found, slope = self._nonlinear(q.reshape(shape), t, rows)
+            found, slope = found.reshape(g.shape), slope.reshape(g.shape)
+            gap = found - g
+            size = np.abs(found)
+            off = np.abs(gap) > 0.02 * self.tolerance * size + least
+            if newton is None:
+                newton = (np.abs(slope) * spread).max(axis=1, initial=0.0) > _CONTRACTS
+                some = bool(newton.any())
+            done = ~off.any(axis=1)
+            if some:
+                which = np.flatnonzero(newton & ~done)
+                if which.size:
+                    matrix = -slope[which][:, :, None] * loop[which]
+                    matrix[:, np.arange(g.shape[1]), np.arange(g.shape[1])] += 1.0
+                    with suppress(np.linalg.LinAlgError):  # a fold: repetition moves off it
+                        gap[which] = np.linalg.solve(matrix, gap[which][:, :, None])[:, :, 0]
+            g = g + gap
+            if done.all():
+                break
+        return g, done
+
+    # --- one step -------------------------------------------------------------------------------------------------
+
+    def _free(self, rows: Indices | slice) -> Complex:
+        """What of each mode the inputs, with their slopes as they are now, do not hold; (m, R)."""
+        bend = (self.bend[rows] @ self.drive_real).view(np.complex128)  # (m, 2, R)
+        forced = 2.0 * bend[:, 1] * self.slow
+        forced = (forced + bend[:, 0] + self.slope[rows][:, None] * self.by_source) * self.slow
+        forced += self.volts[rows][:, None] * self.by_source + self.drive[rows]
+        free: Complex = self.z[rows] + forced * self.slow
+        return free
+
+    def _scale(self) -> Floats:
+        """What an error of each output counts against, (m, P): currents [A] by the greatest so far, voltages [V]."""
+        scale = np.full((self.t.size, self.outputs), self.reference)
+        amps = np.maximum(self.peak[:, : self.meters], np.abs(self.y[:, : self.meters]))
+        most = np.maximum(amps.max(axis=1), self.hint)
+        scale[:, : self.meters] = np.maximum(amps, 0.02 * most[:, None])
+        return scale
+
+    def advance(self) -> None:
+        """One step of every member that still runs."""
+        tables = self.tables
+        scale = self._scale()
+        free = np.abs(self._free(slice(None)))
+        seen = (free[:, None] * (self.weight_seen / scale[:, :, None])).max(axis=1)
+        speed = np.abs(self.rate)
+        resolve = _RESOLVE * self.tolerance
+        rings = seen > resolve
+        reach = np.where(rings, (resolve / (_QUARTIC * np.where(rings, seen, 1.0))) ** 0.2, np.inf)
+        bound = (reach / np.maximum(speed, 1e-300)).min(axis=1)
+        instant = np.minimum(self.stop, self.ph.timer.min(axis=1, initial=np.inf))
+        left = instant - self.t
+        shortest = tables.length[0]
+        most = np.floor(PER_OCTAVE * np.log2(np.maximum(bound, shortest) / shortest))
+        cover = np.ceil(PER_OCTAVE * np.log2(np.maximum(left, shortest) / shortest) + 1e-9)
+        top = np.minimum(np.minimum(most, cover), tables.length.size - 1)
+        level = np.maximum(np.minimum(self.level, top.astype(np.intp)), 0)
+        tables.need(level)
+
+        h = tables.length[level]
+        w = tables.weights[level]
+        m, inputs = self.g.shape
+        everyone = slice(None)
+        source = self.volts[:, None] * self.by_source
+        ramp = self.slope[:, None] * self.by_source
+        base = w[:, :, 0] * self.z[:, None] + w[:, :, 1] * source[:, None]
+        base += w[:, :, 2] * ramp[:, None]
+        base += w[:, :, 3] * self.drive[:, None]
+        volts = self.volts[:, None] + (self.slope * h)[:, None] * _THETA
+        fixed = volts[:, :, None] * self.direct_source + (self.slope[:, None] * self.late_source)[:, None]
+        q = self.quantities
+        known = base[:, 1::2].view(np.float64) @ self.show_real[:, q] + fixed[:, 1::2, q]
+        t = self.t[:, None] + h[:, None] * _THETA
+        ratio = h[:, None]
+        first, second = self.bend[:, 0] * ratio, self.bend[:, 1] * ratio**2
+        guess = np.concatenate((self.g + 0.5 * first + 0.25 * second, self.g + first + second), axis=1)
+        found, fine = self._solve(
+            known.reshape(m, -1), tables.loop[level], tables.spread[level], guess, t[:, 1::2], everyone
+        )
+        ends = found.reshape(m, 2, inputs)
+        pushed = (ends @ self.drive_real).view(np.complex128)
+        z = base + w[:, :, 4] * pushed[:, 0, None] + w[:, :, 5] * pushed[:, 1, None]
+        along = _MIX @ np.stack((self.g, ends[:, 0], ends[:, 1]), axis=1)
+        y = z.view(np.float64) @ self.show_real + fixed + along @ self.direct.T
+        bend = np.stack(
+            (4.0 * ends[:, 0] - 3.0 * self.g - ends[:, 1], 2.0 * (self.g + ends[:, 1]) - 4.0 * ends[:, 0]), 1
+        )
+        if self.late is not None:
+            tilt = (bend[:, 0, None] + 2.0 * _THETA[:, None] * bend[:, 1, None]) / h[:, None, None]
+            y += tilt[:, :, self.loads :] @ self.late.T
+
+        check, _ = self._nonlinear(y[:, 0::2, q], t[:, 0::2], everyone)
+        defect = np.abs(check - along[:, 0::2]).max(axis=1)
+        error = np.matmul(tables.defect[level], defect[:, :, None])[:, :, 0] / scale
+        worst = error.max(axis=1) / self.tolerance
+        taken = fine & ((worst <= 1.0) | (h <= self.jump))
+        self.used += 1
+        change = np.floor(PER_OCTAVE * np.log2(0.9 * np.maximum(worst, 1e-6) ** (-1.0 / 3.0)))
+        change = np.where(fine, np.clip(change, -_SHRINK, _GROW), -_SHRINK)
+        change = np.where(taken, change, np.minimum(change, -1))
+        self.level = np.clip(level + change.astype(np.intp), 0, tables.length.size - 1)
+
+        five = np.concatenate((self.y[:, None, : self.watch], y[:, :, : self.watch]), axis=1)
+        fine_values = _LAGRANGE @ five
+        high, low = fine_values.max(axis=1), fine_values.min(axis=1)
+        v = self.terminals
+        met = (high[:, v] >= self.ph.upper) | (low[:, v] < self.ph.lower)
+        cut = taken & (met.any(axis=1) | (t[:, 3] >= instant * (1.0 - 1e-14)))
+        plain = taken & ~cut
+        rows = everyone if plain.all() else np.flatnonzero(plain)
+        if plain.any():
+            self._account(rows, h[rows], t[rows], five[rows], fine_values[rows], high[rows], low[rows])
+            self.z[rows], self.g[rows], self.drive[rows] = z[rows, 3], ends[rows, 1], pushed[rows, 1]
+            self.y[rows], self.t[rows], self.volts[rows] = y[rows, 3], t[rows, 3], volts[rows, 3]
+            steep = bend[rows] / np.stack((h[rows], h[rows] ** 2), axis=1)[:, :, None]
+            steep[:, 0] += 2.0 * steep[:, 1] * h[rows][:, None]
+            self.bend[rows] = steep
+            self.still[rows] = 0
+        for i in np.flatnonzero(cut).tolist():
+            self._land(i, float(h[i]), float(instant[i]), ends[i], fine_values[i], met[i])
+        late = np.flatnonzero((self.used > self.limit) | (~taken & (level == 0)))
+        for i in late.tolist():
+            self._finish(i, "steps")
+        self._compress()
+
+    def _account(
+        self, rows: Indices | slice, h: Floats, t: Floats, five: Floats, values: Floats, high: Floats, low: Floats
+    ) -> None:
+        """Peaks, integrals, thresholds and the waveform of steps that have been taken."""
+        peak = self.peak[rows]
+        better = high > peak * (1.0 - 1e-3)
+        if better.any():
+            who, what = np.nonzero(better)
+            curve = values[who, :, what]
+            top = curve.argmax(axis=1)
+            inner = (top > 0) & (top < len(_FINE) - 1)
+            centre = np.clip(top, 1, len(_FINE) - 2)
+            each = np.arange(top.size)
+            a, b, c = curve[each, centre - 1], curve[each, centre], curve[each, centre + 1]
+            bow = np.where(inner, 2.0 * b - a - c, 0.0)
+            bonus = np.where(bow > 0.0, (c - a) ** 2 / (8.0 * np.where(bow > 0.0, bow, 1.0)), 0.0)
+            peak[who, what] = np.maximum(peak[who, what], high[who, what] + np.minimum(bonus, 0.25 * bow))
+            self.peak[rows] = peak
+        self.i2t[rows] += h[:, None] * (_BOOLE @ five[:, :, : self.meters] ** 2)
+        self._watch_bands(rows, low, high, five[:, 4])
+        self._record(rows, t, five[:, 1:])
+
+    def _watch_bands(self, rows: Indices | slice, low: Floats, high: Floats, end: Floats) -> None:
+        """Note terminals that come within 1 % of a threshold that counts and leave to the side they came from."""
+        v, at = self.terminals, self.threshold
+        low2, high2 = np.tile(low[:, v], 2), np.tile(high[:, v], 2)
+        inside = (high2 >= (1.0 - _BAND) * at) & (low2 <= (1.0 + _BAND) * at)
+        touch = self.touch[rows]
+        if inside.any() or touch.any():
+            end2 = np.tile(end[:, v], 2)
+            before = self.side[rows]
+            now = np.where(end2 > (1.0 + _BAND) * at, 1, np.where(end2 < (1.0 - _BAND) * at, -1, 0)).astype(np.int8)
+            across = ((before > 0) & (low2 < (1.0 - _BAND) * at)) | ((before < 0) & (high2 > (1.0 + _BAND) * at))
+            touch = np.where(across, 2, np.maximum(touch, inside & self._counts(rows))).astype(np.int8)
+            left = now != 0
+            self.near[rows] |= left & (touch == 1) & (now == before)
+            self.touch[rows] = np.where(left, 0, touch)
+            self.side[rows] = np.where(left, now, before)
+        else:
+            self.side[rows] = np.where(low2 > at, 1, -1)
+
+    def _counts(self, rows: Indices | slice) -> Bools:
+        """Which thresholds count: turn_on while it waits or counts, turn_off while it runs (m, 2 N)."""
+        runs = self.ph.phase[rows] == 2
+        enabled = self.logic.enabled[self.case[rows]]
+        return np.concatenate((~runs & enabled, runs & enabled), axis=1)
+
+    # --- events ---------------------------------------------------------------------------------------------------
+
+    def _exact(self, i: int, h: float, ends: Floats, theta: Floats) -> tuple[Complex, Floats, Floats]:
+        """z (T, R), outputs (T, Y) and inputs (T, M) at ``theta`` (T,) of a step that has been solved."""
+        w = step_weights(self.rate, np.array([h]), theta)[0]
+        pushed = (ends @ self.drive_real).view(np.complex128)
+        ramp = self.slope[i] * self.by_source
+        z = w[:, 0] * self.z[i] + w[:, 1] * (self.volts[i] * self.by_source) + w[:, 2] * ramp
+        z = z + w[:, 3] * self.drive[i] + w[:, 4] * pushed[0] + w[:, 5] * pushed[1]
+        mix = np.stack(((1 - theta) * (1 - 2 * theta), 4 * theta * (1 - theta), theta * (2 * theta - 1)), axis=1)
+        along = mix @ np.stack((self.g[i], ends[0], ends[1]))
+        volts = self.volts[i] + self.slope[i] * h * theta
+        y = z.view(np.float64) @ self.show_real + volts[:, None] * self.direct_source
+        y = y + self.slope[i] * self.late_source + along @ self.direct.T
+        if self.late is not None:
+            one = 4.0 * ends[0] - 3.0 * self.g[i] - ends[1]
+            two = 2.0 * (self.g[i] + ends[1]) - 4.0 * ends[0]
+            y = y + ((one + 2.0 * theta[:, None] * two) / h)[:, self.loads :] @ self.late.T
+        return z, y, along
+
+    def _land(self, i: int, h: float, instant: float, ends: Floats, values: Floats, met: Bools) -> None:
+        """Cut the step of member ``i`` at the first event inside it, and let that happen."""
+        theta = (instant - float(self.t[i])) / h
+        theta = min(max(theta, 0.0), 1.0)
+        crossing = -1
+        bracket = (0.0, 0.0)
+        for j in np.flatnonzero(met).tolist():
+            upper, lower = self.ph.upper[i, j], self.ph.lower[i, j]
+            curve = values[:, self.terminals.start + j]
+            beyond = curve >= upper if upper < np.inf else curve < lower
+            k = int(beyond.argmax())
+            if k == 0:
+                at, span = 0.0, (0.0, 0.0)
+            else:
+                limit = upper if upper < np.inf else lower
+                part = (limit - curve[k - 1]) / (curve[k] - curve[k - 1])
+                at, span = (
+                    float(_FINE[k - 1] + part * (_FINE[k] - _FINE[k - 1])),
+                    (float(_FINE[k - 1]), float(_FINE[k])),
+                )
+            if at < theta:
+                theta, crossing, bracket = at, j, span
+        if crossing >= 0 and theta > 0.0:
+            theta = self._refine(i, h, ends, crossing, theta, bracket)
+        if theta > 0.0:
+            nodes = theta * _THETA
+            z, y, along = self._exact(i, h, ends, nodes)
+            rows = np.array([i])
+            five = np.concatenate((self.y[i][None, : self.watch], y[:, : self.watch]))[None]
+            part_values = _LAGRANGE @ five
+            length = theta * h
+            t = self.t[i] + h * nodes
+            if crossing < 0:
+                t[3] = instant
+            self._account(
+                rows, np.array([length]), t[None], five, part_values, part_values.max(axis=1), part_values.min(axis=1)
+            )
+            self.z[i], self.y[i], self.g[i] = z[3], y[3], along[3]
+            self.volts[i] += self.slope[i] * length
+            self.t[i] = t[3]
+            self.still[i] = 0
+        else:
+            self.still[i] += 1
+            if crossing < 0:
+                self.t[i] = instant
+        self._happen(i, crossing, instant if crossing < 0 else -1.0)
+
+    def _refine(self, i: int, h: float, ends: Floats, j: int, theta: float, bracket: tuple[float, float]) -> float:
+        """The point of a step at which terminals ``j`` meet their threshold, on the exact solution."""
+        upper = self.ph.upper[i, j]
+        limit = float(upper if upper < np.inf else self.ph.lower[i, j])
+        row = self.terminals.start + j
+        low, high = bracket
+        both = self._exact(i, h, ends, np.array([low, high]))[1][:, row] - limit
+        f_low, f_high = float(both[0]), float(both[1])
+        if f_low * f_high > 0.0:  # a grazing touch, seen by the quartic only
+            return theta
+        for _ in range(40):
+            f = float(self._exact(i, h, ends, np.array([theta]))[1][0, row]) - limit
+            if abs(f) <= 1e-12 * limit or (high - low) * h <= 1e-15 * max(float(self.t[i]), h):
+                break
+            if (f > 0.0) == (f_high > 0.0):
+                high, f_high = theta, f
+            else:
+                low, f_low = theta, f
+            theta = low - f_low * (high - low) / (f_high - f_low)
+            if not low < theta < high or high - low > 0.02:
+                theta = 0.5 * (low + high) if not low < theta < high else theta
+        return theta
+
+    def _happen(self, i: int, crossing: int, instant: float) -> None:
+        now, case = float(self.t[i]), int(self.case[i])
+        segments = self.members[int(self.member[i])].segments
+        if crossing >= 0:
+            self.ph.cross(i, crossing, self.logic, case, now)
+        else:
+            for j in np.flatnonzero(self.ph.timer[i] <= instant).tolist():
+                self.ph.expire(i, j, self.logic, case, now)
+            if self.stop[i] <= instant:
+                if instant >= segments[-1].end:
+                    self._finish(i, "")
+                    return
+                self._segment(i)
+        if self.still[i] > 6 * self.loads + 30:
+            self._finish(i, "chatter")
+            return
+        self._restart(i)
+
+    def _finish(self, i: int, problem: str) -> None:
+        who = int(self.member[i])
+        if self.outcomes[who] is not None:
+            return
+        n = self.loads
+        resting = (self.side[i] != 0) & (self.touch[i] == 1)
+        near = self.near[i] | resting
+        self.outcomes[who] = Outcome(
+            peak=self.peak[i].copy(),
+            i2t=self.i2t[i].copy(),
+            runs_at=self.ph.runs_at[i].copy(),
+            phase=self.ph.phase[i].copy(),
+            timer=self.ph.timer[i].copy(),
+            tripped=self.ph.tripped[i].copy(),
+            near_on=near[:n],
+            near_off=near[n:],
+            reached=float(self.t[i]),
+            problem=problem,
+            steps=int(self.used[i]),
+        )
+
+    def _record(self, rows: Indices | slice, t: Floats, y: Floats) -> None:
+        """Keep points of the waveforms: times ``t`` (m, T) [s] and outputs ``y`` (m, T, W)."""
+        self.store.append((self.member[rows], t, y))
+        self.stored += t.size
+        if self.stored > _PENDING:
+            self._sort()
+
+    def _sort(self) -> None:
+        for who in range(len(self.members)):
+            chosen = [(t[k], y[k]) for m, t, y in self.store for k in np.flatnonzero(m == who).tolist()]
+            if chosen:
+                time, values = self.waves[who]
+                time = np.concatenate((time, *(t for t, _ in chosen)))
+                values = np.concatenate((values, *(y for _, y in chosen)))
+                while time.size > _POINTS:
+                    time, values = thinned(time, values)
+                self.waves[who] = time, values
+        self.store.clear()
+        self.stored = 0
+
+    def _compress(self) -> None:
+        alive = np.array([self.outcomes[k] is None for k in self.member.tolist()], dtype=np.bool_)
+        if alive.all():
+            return
+        for name in (*self._ROWS, *self._MORE):
+            setattr(self, name, getattr(self, name)[alive])
+        for name in self._PHASE:
+            setattr(self.ph, name, getattr(self.ph, name)[alive])
+
+    def run(self, tick: Callable[[float], None]) -> list[Outcome]:
+        """Advance all to their ends; ``tick`` is told the share done, 0 to 1, every few steps, and may raise."""
+        total = sum(m.segments[-1].end for m in self.members)
+        count = 0
+        while self.member.size:
+            self.advance()
+            count += 1
+            if count % 16 == 0:
+                pairs = zip(self.outcomes, self.members, strict=True)
+                done = sum(m.segments[-1].end for o, m in pairs if o is not None)
+                tick(min(1.0, (done + float(self.t.sum())) / total))
+        self._sort()
+        found = [o for o in self.outcomes if o is not None]
+        for outcome, (time, values) in zip(found, self.waves, strict=True):
+            outcome.time, outcome.values = time, values
+        return found
+
+
+def thinned(time: Floats, values: Floats) -> tuple[Floats, Floats]:
+    """Half as many points: of four in a row the least and the greatest of each output, in their order.
+
+    ``time`` (K,) [s], ``values`` (K, W) [A] and [V]; no peak is lost, and none moves by more than three points.
+    """
+    whole = time.size // 4 * 4
+    block = values[:whole].reshape(-1, 4, values.shape[1])
+    low, high = block.min(axis=1), block.max(axis=1)
+    rising = block.argmin(axis=1) <= block.argmax(axis=1)
+    pair = np.stack((np.where(rising, low, high), np.where(rising, high, low)), axis=1)
+    kept = np.concatenate((pair.reshape(-1, values.shape[1]), values[whole:]))
+    return np.concatenate((time[:whole].reshape(-1, 4)[:, (0, 3)].ravel(), time[whole:])), kept
+
+
+def _as_real(matrix: Complex) -> Floats:
+    """(M, R) complex as (M, 2 R) with real and imaginary parts side by side."""
+    return np.ascontiguousarray(matrix).view(np.float64)
+
+
+def _read_real(matrix: Complex) -> Floats:
+    """(Y, R) complex as (2 R, Y), so that z as reals times it is the real part of matrix z."""
+    pairs = np.stack((matrix.real, -matrix.imag), axis=-1)
+    return np.ascontiguousarray(pairs.reshape(matrix.shape[0], -1).T)

@@ -1,0 +1,200 @@
+"""Switch-on and surge over time: currents or voltages of one case and event, with limits, starts, peaks and i2t."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+from budget import quantity
+from budget.report import words
+from budget.ui.plot import SYMBOLS, Plot, Trace
+from budget.ui.sheet import Context, words_only
+from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
+
+if TYPE_CHECKING:
+    from budget.engine.evaluate import Result
+    from budget.engine.transient import Run
+
+COLUMNS = (
+    Column("", 12, most=26),
+    Column("peak A", 8, RIGHT),
+    Column("limit", 8, RIGHT),
+    Column("i2t", 11, RIGHT),
+    Column("limit", 11, RIGHT),
+    Column("peak V", 8, RIGHT),
+    Column("limit", 8, RIGHT),
+    Column("starts", 9, RIGHT),
+    Column("at the end", 10, most=16),
+)
+
+
+def shown_result(context: Context) -> Result | None:
+    """The latest result that has the switch-on: the present one, or the one before while that is in work."""
+    result = context.session.result
+    return result if result is not None and result.inrush is not None else context.session.full
+
+
+def shown_run(context: Context) -> tuple[Result, Run] | None:
+    """The case and event shown: the chosen one, else the one of the worst check."""
+    result = shown_result(context)
+    if result is None or result.inrush is None or not result.inrush.runs:
+        return None
+    runs = result.inrush.runs
+    if context.options.run is not None:
+        return result, runs[context.options.run % len(runs)]
+    names = ("inrush peak", "bus inrush", "overshoot", "inrush i2t", "breaker i2t", "start")
+    ranked = words.by_severity(row for row in result.checks if row.check in names and row.case)
+    at = (ranked[0].case, ranked[0].line) if ranked else None
+    return result, next((run for run in runs if (run.case, run.event) == at), runs[0])
+
+
+def switch_on(context: Context) -> View:
+    """The view: a picture over time, and bus, filters and converters with their peaks against the limits."""
+    found = shown_run(context)
+    if found is None:
+        waits = shown_result(context) is None or context.session.result is None or context.session.result.inrush is None
+        text = "~ calculating" if waits else "nothing to calculate: no bus, or no case"
+        return View("switchon", "switch-on", (Section((Column("", 60),), (Row(("none",), (Cell(text),)),)),))
+    result, run = found
+    title = f"{run.event} in {run.case}"
+    rows = _rows(result, run)
+    summary = _summary(run)
+    return View("switchon", title, (Section(COLUMNS, tuple(rows)),), _picture(context, result, run), summary)
+
+
+def _amps(value: float | None) -> str:
+    return "" if value is None else words.show(value, "A")
+
+
+def _volts(value: float | None) -> str:
+    return "" if value is None else words.show(value, "V")
+
+
+def _i2t(value: float | None) -> str:
+    return "" if value is None else quantity.show(value, quantity.KINDS["i2t"])
+
+
+def _seconds(value: float | None) -> str:
+    return "" if value is None else quantity.show(value, quantity.KINDS["time"])
+
+
+def _over(value: float | None, limit: float | None) -> str:
+    return "fail" if value is not None and limit is not None and value > limit else ""
+
+
+def _rows(result: Result, run: Run) -> list[Row]:
+    project = result.project
+    bus = project.bus
+    rows = [
+        _row(
+            ("bus",),
+            f"{SYMBOLS[0]} bus",
+            (_amps(run.bus_peak), _amps(bus.inrush_peak), _i2t(run.bus_i2t), _i2t(bus.breaker_i2t), "", "", "", ""),
+            (_over(run.bus_peak, bus.inrush_peak), _over(run.bus_i2t, bus.breaker_i2t), ""),
+            "current from the source",
+        )
+    ]
+    filters = {f.id: (k, f) for k, f in enumerate(project.filters)}
+    for entry in run.filters:
+        k, part = filters[entry.id]
+        values = (
+            _amps(entry.peak),
+            _amps(part.inrush_peak),
+            _i2t(entry.i2t),
+            _i2t(part.inrush_i2t),
+            _volts(entry.peak_voltage),
+            _volts(part.max_surge),
+            "",
+            "",
+        )
+        tones = (
+            _over(entry.peak, part.inrush_peak),
+            _over(entry.i2t, part.inrush_i2t),
+            _over(entry.peak_voltage, part.max_surge),
+        )
+        name = f"{SYMBOLS[1 + k]} {entry.id} {part.name}"
+        rows.append(_row(("filter", entry.id), name, values, tones, "current into it, voltage at its output"))
+    units = {c.id: (k, c) for k, c in enumerate(project.converters)}
+    for unit in run.converters:
+        k, converter = units[unit.id]
+        name = f"{SYMBOLS[k]} {unit.id} {converter.name}"
+        start, limit = _seconds(unit.runs_at), converter.max_surge
+        values = ("", "", "", "", _volts(unit.peak_voltage), _volts(limit), start, unit.state)
+        tones = ("", "", _over(unit.peak_voltage, limit))
+        near = [code for code, who in run.remarks if who == unit.id]
+        info = "voltage at its terminals, and when it starts to run" + ("; " + ", ".join(near) if near else "")
+        rows.append(_row(("converter", unit.id), name, values, tones, info))
+    return rows
+
+
+def _row(key: tuple[Any, ...], name: str, values: tuple[str, ...], tones: tuple[str, str, str], info: str) -> Row:
+    info = words_only(f"{name[2:]}: {info}")
+    by_column = {0: tones[0], 2: tones[1], 4: tones[2]}
+    cells = [Cell(words_only(name), tone="head", info=info)]
+    for k, text in enumerate(values):
+        tone = by_column.get(k, "fail" if text in ("waiting", "tripped") else "")
+        mark = "!" if tone == "fail" else ""
+        cells.append(Cell(text, None, "left" if k == 7 else RIGHT, tone, mark, info, calculated=True))
+    return Row(key, tuple(cells))
+
+
+def _summary(run: Run) -> str:
+    remarks = [f"{who}: {code}" if who else code for code, who in run.remarks]
+    told = "; ".join(remarks[:4]) + ("; and more" if len(remarks) > 4 else "")
+    return "A currents or voltages, j next event, L time axis, H what would help" + (f"; {told}" if told else "")
+
+
+def _picture(context: Context, result: Result, run: Run) -> Plot | None:
+    wave = run.wave
+    if wave is None or len(wave.time) < 2:
+        return None
+    log = context.options.log_time
+    time = wave.time.tolist()
+    first = max(1e-7, next((t for t in time if t > 0), 1e-7))
+    traces: list[Trace] = []
+    dash = "-" if context.ascii_only else "\u2500"
+    if context.options.voltages:
+        for k, unit in enumerate(result.project.converters):
+            y = wave.terminals[:, k].tolist()
+            traces.append(Trace(unit.id, SYMBOLS[k % len(SYMBOLS)], time, y, tone=f"trace{k % 6}"))
+            entry = next((u for u in run.converters if u.id == unit.id), None)
+            if entry is not None and entry.runs_at is not None:
+                traces.append(Trace("starts", "^", [entry.runs_at], [0.0], "dots", "head"))
+        limits = sorted({c.max_surge for c in result.project.converters if c.max_surge is not None})[:1]
+    else:
+        traces.append(Trace("bus", SYMBOLS[0], time, wave.bus.tolist(), tone="trace0"))
+        for k, part in enumerate(result.project.filters):
+            y = wave.filters[:, k].tolist()
+            traces.append(Trace(part.id, SYMBOLS[1 + k], time, y, tone=f"trace{(k + 1) % 6}"))
+        bus_limit = result.project.bus.inrush_peak
+        limits = sorted({f.inrush_peak for f in result.project.filters if f.inrush_peak is not None})[:1]
+        limits += [bus_limit] if bus_limit is not None else []
+    span = (first if log else time[0], time[-1])
+    for limit in limits:
+        traces.insert(0, Trace("limit", dash, list(span), [limit, limit], "step", "thin"))
+    label = "V" if context.options.voltages else "A"
+    return Plot(tuple(traces), "time", label, log_x=log, x_range=span)
+
+
+def csv_waves(context: Context) -> str:
+    """The waveforms shown as CSV: seconds, amperes, volts."""
+    import csv
+    import io
+
+    found = shown_run(context)
+    if found is None or found[1].wave is None:
+        return ""
+    result, run = found
+    wave = run.wave
+    assert wave is not None
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    project = result.project
+    head = ["time", "bus current", *(f"{f.id} current" for f in project.filters)]
+    head += [f"{f.id} voltage" for f in project.filters] + [f"{c.id} voltage" for c in project.converters]
+    writer.writerow(head)
+    columns = [wave.time[:, None], wave.bus[:, None], wave.filters, wave.outputs, wave.terminals]
+    import numpy as np
+
+    for row in np.hstack(columns).tolist():
+        writer.writerow(["" if value != value else value for value in row])
+    return out.getvalue()

@@ -1,0 +1,297 @@
+"""What the desk looks like: text goldens of every view, exact widths at every size, and states that need no colour.
+
+``BUDGET_GOLDEN=1 pytest tests/screen/test_paint.py`` writes the goldens anew; look at the difference before committing.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from rich.cells import cell_len
+
+from budget.session import Session, calculate
+from budget.ui.desk import VIEWS, Desk
+from budget.ui.paint import SMALLEST, frame, plain
+from tests.screen.driving import TEXTS, desk_of, key_of, press, screen, session_of, shown, small, typed
+
+GOLDEN = Path(__file__).parent / "golden"
+SIZES = ((80, 24), (160, 48))
+
+
+def _move_into_output(desk: Desk) -> None:
+    desk.go_to(("converter", 0, "output", 1, "current"))
+
+
+def _typing(desk: Desk) -> None:
+    desk.go_to(("converter", 0, "lead", "R"))
+    typed(desk, "2 * 3 mohm")
+
+
+def _wrong(desk: Desk) -> None:
+    desk.go_to(("converter", 0, "rated_power"))
+    typed(desk, "80 A")
+    press(desk, "enter")
+
+
+SCENES: dict[str, tuple[str, str | Callable[[Desk], None]]] = {
+    **{f"view {view}": ("small", "") for view in VIEWS},
+    "converter fields": ("small", "down down f"),
+    "converter lists": ("small", _move_into_output),
+    "filter fields": ("small", "down f"),
+    "sheet right": ("small", "down down end"),
+    "sheet corner": ("small", "o down enter down down"),
+    "typing": ("small", _typing),
+    "wrong entry": ("small", _wrong),
+    "commands": ("small", "space"),
+    "choices": ("small", "r down down down down down down enter"),
+    "edited": ("small", "down down > w"),
+    "question": ("small", "down D q"),
+    "broken sheet": ("broken", "down"),
+    "broken faults": ("broken", "b down down"),
+    "empty sheet": ("empty", ""),
+    "empty loads": ("empty", "l"),
+}
+
+
+def scene(name: str, ascii_only: bool) -> Desk:
+    text, keys = SCENES[name]
+    desk = small(text, ascii_only=ascii_only)
+    if name.startswith("view "):
+        desk.view_name = name.removeprefix("view ")
+    elif isinstance(keys, str):
+        press(desk, keys)
+    else:
+        keys(desk)
+    return desk
+
+
+@pytest.mark.parametrize("ascii_only", [True, False], ids=["ascii", "unicode"])
+@pytest.mark.parametrize(("width", "height"), SIZES, ids=lambda n: str(n))
+@pytest.mark.parametrize("name", list(SCENES))
+def test_golden(name: str, width: int, height: int, ascii_only: bool) -> None:
+    desk = scene(name, ascii_only)
+    lines = screen(desk, width, height)
+    assert [cell_len(line) for line in lines] == [width] * height
+    if ascii_only:
+        assert all(line.isascii() for line in lines)
+    text = "\n".join(line.rstrip() for line in lines) + "\n"
+    file = GOLDEN / f"{name.replace(' ', '-')}-{width}x{height}-{'ascii' if ascii_only else 'unicode'}.txt"
+    if os.environ.get("BUDGET_GOLDEN"):
+        GOLDEN.mkdir(exist_ok=True)
+        file.write_text(text, encoding="utf-8")
+    assert text == file.read_text(encoding="utf-8")
+
+
+def test_no_golden_is_left_over() -> None:
+    wanted = {f"{n.replace(' ', '-')}-{w}x{h}-{k}.txt" for n in SCENES for w, h in SIZES for k in ("ascii", "unicode")}
+    assert {file.name for file in GOLDEN.iterdir()} == wanted
+
+
+def test_unicode_differs_from_ascii_only_in_signs() -> None:
+    for name in SCENES:
+        for one, two in zip(screen(scene(name, True)), screen(scene(name, False)), strict=True):
+            assert len(one) == len(two)
+            assert all(a == b or not b.isascii() for a, b in zip(one, two, strict=True))
+
+
+# -- states can be told without colour
+
+
+def row_text(desk: Desk, ident: str) -> str:
+    return next(line for line in screen(desk) if ident in line.split()[:1] or f"!{ident}" in line.split()[:1])
+
+
+def test_fail_thin_and_no_data_are_words() -> None:
+    desk = small()
+    assert "FAIL" in row_text(desk, "FA")
+    assert "thin" in row_text(desk, "C1")
+    assert "FAIL" in row_text(desk, "C4")
+    assert "ok" in row_text(desk, "FB")
+    assert "left out" in row_text(small("broken"), "FA")
+    press(desk, "k")
+    states = {line.split()[0] for line in screen(desk)[2:20] if line.strip()}
+    assert {"FAIL", "thin", "no", "ok"} <= states
+
+
+def test_every_span_in_a_tone_that_warns_has_a_word_or_a_mark() -> None:
+    marks = ("FAIL", "thin", "!", "%", "no results", "error", "warning", "calculating", "cannot", "changed", "unsaved")
+    for name in SCENES:
+        if name in ("view help", "view spectrum"):  # cautions are words themselves; a limit line is drawn as one
+            continue
+        desk = scene(name, True)
+        for width, height in SIZES:
+            for line in frame(desk, width, height):
+                for text, tone in line:
+                    if tone in ("fail", "thin") and text.strip():
+                        assert any(mark in plain(line) for mark in marks), (name, text)
+
+
+def test_the_share_over_all_of_it_is_a_number_above_100() -> None:
+    assert "144%" in row_text(small(), "FA")
+
+
+def test_bad_cells_are_marked() -> None:
+    desk = small("broken")
+    assert "!C1" in shown(desk)
+    assert "bad cells (b)" in screen(desk)[0]
+    desk.go_to(("bus", "rating"))
+    assert "!lots" in shown(desk)
+    told = "\n".join(screen(desk)[-4:])
+    assert "'lots' is not a quantity" in told
+
+
+def test_pending_and_stale_results_are_marked() -> None:
+    session = session_of(TEXTS["small"])
+    desk = Desk(session, True)
+    assert "~ calculating" in screen(desk)[0]
+    assert screen(desk)[2].split()[2:9] == ["~"] * 7
+    desk.accept(calculate(session.snapshot()))
+    ready = shown(desk)
+    assert "~" not in ready
+    press(desk, "down down end left left left left 9 0 enter home")
+    desk.pending = True  # as the program says when results are late
+    stale = shown(desk)
+    assert "~ calculating" in stale
+    assert "~110" in stale
+    desk.accept(calculate(session.snapshot()))
+    assert "~" not in shown(desk)
+
+
+def test_unsaved_work_has_a_mark() -> None:
+    desk = small()
+    assert "*" not in screen(desk)[0]
+    press(desk, "down D")
+    assert "*" in screen(desk, 160, 48)[0]
+
+
+def test_the_cursor_and_the_caret_are_reversed_not_coloured() -> None:
+    from budget.ui.app import STYLES
+
+    assert STYLES["cursor"].reverse
+    assert STYLES["cursor"].color is None
+    for keys in ("", "down right", "k", "space", "5", "g"):
+        desk = small()
+        press(desk, keys)
+        assert any(tone == "cursor" for line in frame(desk, 80, 24) for _, tone in line)
+
+
+def test_no_style_differs_from_another_by_colour_alone_where_it_matters() -> None:
+    from budget.ui.app import STYLES
+
+    for tone in ("cursor", "edit", "bar", "heading", "panel", "head"):
+        assert STYLES[tone].color is None
+
+
+# -- sizes
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    st.sampled_from(list(TEXTS)),
+    st.booleans(),
+    st.lists(
+        st.one_of(
+            st.sampled_from(
+                [
+                    *("down", "up", "left", "right", "end", "home", "pagedown", "enter", "escape", "tab", "space"),
+                    *"slfrkihtb?ognNDRuU><m5e.",
+                ]
+            ),
+            st.tuples(st.integers(1, 220), st.integers(1, 70)),
+        ),
+        max_size=25,
+    ),
+)
+def test_a_frame_fills_the_terminal_exactly(name: str, ascii_only: bool, steps: list[str | tuple[int, int]]) -> None:
+    desk = small(name, ascii_only=ascii_only)
+    width, height = 80, 24
+    for step in [*steps, (80, 24)]:
+        if isinstance(step, tuple):
+            width, height = step
+        else:
+            desk.key(*key_of(step))
+        lines = frame(desk, width, height)
+        assert len(lines) == height
+        for line in lines:
+            assert cell_len(plain(line)) == width
+            assert not ascii_only or plain(line).isascii()
+
+
+@pytest.mark.parametrize("height", [SMALLEST[1], 24])
+@pytest.mark.parametrize("width", [SMALLEST[0], 80, 100, 130])
+def test_the_cursor_is_always_in_sight(width: int, height: int) -> None:
+    for view in VIEWS:
+        desk = small()
+        desk.view_name = view
+        frame(desk, width, height)
+        count = sum(row is not None for _, row in desk.lines())
+        for key in (*["down"] * count, "end", "home", *["right"] * 14, *["up"] * count, *["left"] * 14):
+            desk.key(key)
+            row, _ = desk.here()
+            if row is not None and not (desk.view().plot is not None):
+                tones = [tone for line in frame(desk, width, height)[1:-4] for _, tone in line]
+                assert "cursor" in tones, (view, key, desk.spot())
+
+
+def test_a_terminal_that_is_too_small_says_so() -> None:
+    desk = small()
+    assert "60x12" in shown(desk, 20, 5)
+    assert screen(desk, 80, 24)[2].startswith("bus")
+
+
+# -- wide and strange characters
+
+
+NAMES = (
+    "ńändliches Gerät",
+    "電源フィルター一号機",
+    "e\u0301\u0302te\u0301",
+    "\u200bnull",
+    "\U0001f50b battery",
+    "a\tb",
+    "ﷺ" * 5,
+)
+
+
+@pytest.mark.parametrize("ascii_only", [True, False])
+@pytest.mark.parametrize("name", NAMES)
+def test_names_of_any_width_keep_the_columns(name: str, ascii_only: bool) -> None:
+    desk = small(ascii_only=ascii_only)
+    desk.go_to(("converter", 0, "name"))
+    press(desk, "enter ctrl+u")
+    desk.paste(name)
+    for width, height in (*SIZES, (61, 13)):
+        assert {cell_len(line) for line in screen(desk, width, height)} == {width}
+    press(desk, "enter")
+    for view in VIEWS:
+        desk.view_name = view
+        for width, height in SIZES:
+            assert {cell_len(line) for line in screen(desk, width, height)} == {width}
+
+
+@settings(max_examples=30, deadline=None)
+@given(st.text(st.characters(codec="utf-8"), min_size=1, max_size=40), st.integers(60, 170))
+def test_any_text_of_a_file_keeps_the_columns(text: str, width: int) -> None:
+    import tomli_w
+
+    data = {"format": 1, "bus": {"low": 22, "nominal": 28, "high": 29, "name": text, "note": text, "rating": text}}
+    data["converter"] = [{"id": text, "name": text, "filter": text, "output": [{"name": text}]}]
+    data["project"] = {"title": text}
+    desk = desk_of(session_of(tomli_w.dumps(data)), ascii_only=False)[0]
+    for view in VIEWS:
+        desk.view_name = view
+        lines = screen(desk, width, 24)
+        assert {cell_len(line) for line in lines} == {width}
+        assert not any(ord(c) < 32 or ord(c) == 127 for line in lines for c in line)
+
+
+def test_a_session_without_results_paints_every_view() -> None:
+    desk = Desk(Session(session_of(TEXTS["small"]).document), True)
+    for view in VIEWS:
+        desk.view_name = view
+        assert len(screen(desk)) == 24
