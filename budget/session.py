@@ -68,6 +68,7 @@ def stages(
     ``cancelled``, and ends the stages if that says so; it tells ``progress`` the share done.
     """
     from budget.engine import evaluate  # numpy is loaded here, after the first paint
+    from budget.engine.transient import CancelledError
 
     built = build(snapshot.document, snapshot.shelves, snapshot.cache)
     built = replace(built, problems=(*snapshot.problems, *built.problems))
@@ -77,6 +78,13 @@ def stages(
     result = evaluate.evaluate_dc(built.project)
     yield Outcome(snapshot.generation, built, result, complete=False)
     result = evaluate.with_emissions(result, snapshot.previous)
+    yield Outcome(snapshot.generation, built, result, complete=False)
+    result = evaluate.with_stability(result)
+    yield Outcome(snapshot.generation, built, result, complete=False)
+    try:
+        result = evaluate.with_inrush(result, cancelled, progress)
+    except CancelledError:
+        return
     yield Outcome(snapshot.generation, built, result)
 
 

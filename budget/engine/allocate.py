@@ -22,7 +22,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from budget.engine.bounds import fit, root_bound
 from budget.engine.checks import CheckRow
+from budget.engine.descent import improve, neighbours
 from budget.engine.emission import emissions
 from budget.engine.evaluate import Result, evaluate
 from budget.engine.feed import Indices
@@ -30,26 +32,20 @@ from budget.engine.model import Project
 from budget.engine.operating import operating_points
 from budget.engine.partition import TooWideError
 from budget.engine.placing import Constraints, Task, task_of
-from budget.engine.relax import Relaxation, Shortfall, relaxations, shortfall
-from budget.engine.search import (
+from budget.engine.pool import (
     SAME,
     Found,
-    Outcome,
     Pool,
     StoppedError,
     Watch,
-    enumerate_all,
-    even,
     exact_shares,
     filter_classes,
-    fit,
-    improve,
     obeys,
     order_of,
-    root_bound,
-    settle_moves,
     spread,
 )
+from budget.engine.relax import Relaxation, Shortfall, relaxations, shortfall
+from budget.engine.search import Outcome, enumerate_all, even, settle_moves
 
 GOALS = ("even", "fewest", "quiet")
 TIME = 10.0  # s
@@ -106,17 +102,19 @@ def allocate(
     cancelled: Callable[[], bool] = lambda: False,
     progress: Callable[[Candidate, float | None], None] = lambda best, bound: None,
     finish: Callable[[Project], Result] = evaluate,
+    explain: bool = True,
 ) -> Allocation:
     """Search for at most ``time_limit`` [s], or until ``cancelled`` says so; then check the best few completely.
 
     ``progress`` hears of every better admissible allocation at once, with the headroom that none can exceed, as far as
-    known (None with ``quiet``). The checks of the candidates come on top of the time. Raises ValueError for an unknown
-    goal or id.
+    known (None with ``quiet``). The checks of the candidates come on top of the time, and where nothing is admissible
+    the search for what would help, which takes as much time again at most and is left out without ``explain``. Raises
+    ValueError for an unknown goal or id.
     """
     if goal not in GOALS:
         raise ValueError(f'there is no goal "{goal}": use one of {", ".join(GOALS)}')
     search = _Search(project, goal, constraints or Constraints(), time_limit, cancelled, progress)
-    return search.run(max(1, candidates), finish)
+    return search.run(max(1, candidates), finish, explain)
 
 
 def as_json(found: Allocation) -> dict[str, object]:
@@ -167,7 +165,7 @@ class _Search:
         self.note: list[str] = []
         self.margins: dict[tuple[int, ...], float] = {}
 
-    def run(self, count: int, finish: Callable[[Project], Result]) -> Allocation:
+    def run(self, count: int, finish: Callable[[Project], Result], explain: bool) -> Allocation:
         task = task_of(self.project, self.constraints)
         if not isinstance(task, Task):
             return self._nothing(Shortfall("contradiction", constraints=task), proved=True)
@@ -183,13 +181,14 @@ class _Search:
         try:
             if goal == "fewest":
                 few = self._fewest(task, pool, outcome)
+            elif goal == "quiet":
+                self._admissible_start(task, pool, outcome)
             else:
-                even(task, pool, self.watch.until(0.5 * self.time_limit) if goal == "quiet" else self.watch, outcome,
-                     told=self._told)  # fmt: skip
+                even(task, pool, self.watch, outcome, told=self._told)
         except StoppedError:
             self._stopped()
         if pool.share() > 1.0:
-            return self._inadmissible(task, pool, outcome)
+            return self._inadmissible(task, pool, outcome, explain)
         if goal == "quiet":
             return self._finished(*self._quiet(task, pool), None, "dB", pool, count, finish)
         try:
@@ -281,6 +280,16 @@ class _Search:
                 rivals.append((root_bound(only), only))
         rivals.sort(key=lambda rival: rival[0])
         return rivals
+
+    def _admissible_start(self, task: Task, pool: Pool, outcome: Outcome) -> None:
+        """Something admissible for ``quiet`` to start from; the whole search only if there is nothing at once."""
+        for moves in range(3):
+            near = neighbours(task, moves)
+            if near is not None and near.size:
+                pool.add(near[:2000])
+        improve(task, pool, self.watch, 6)
+        if pool.share() > 1.0:
+            even(task, pool, self.watch, outcome)
 
     def _quiet(self, task: Task, pool: Pool) -> tuple[list[Found], bool]:
         """Admissible allocations by margin, the largest first, and whether all were looked at."""
@@ -399,15 +408,18 @@ class _Search:
             note=tuple(self.note),
         )
 
-    def _inadmissible(self, task: Task, pool: Pool, outcome: Outcome) -> Allocation:
+    def _inadmissible(self, task: Task, pool: Pool, outcome: Outcome, explain: bool) -> Allocation:
         best = pool.best[0] if pool.best else None
+        proved = outcome.proved or outcome.bound > 1.0 + SAME
+        if best is None and not proved:
+            return self._nothing(Shortfall("not found"), proved=False)
         reason = shortfall(self.project, task, best)
-        # what would help is worth as much time again, also when the search took all of it
-        watch = Watch(time.monotonic() + self.time_limit, self.watch.cancelled)
-        helps = relaxations(self.project, self.constraints, task, best, watch)
-        proved = outcome.proved or outcome.bound > 1.0 + SAME or not math.isfinite(outcome.bound)
-        return replace(self._nothing(reason, proved), relaxations=helps, visited=pool.visited,
-                       seconds=time.monotonic() - self.begun)  # fmt: skip
+        helps: tuple[Relaxation, ...] = ()
+        if explain and not self.watch.cancelled():
+            watch = Watch(time.monotonic() + self.time_limit, self.watch.cancelled)
+            helps = relaxations(self.project, self.constraints, task, best, watch)
+        found = self._nothing(reason, proved)
+        return replace(found, relaxations=helps, visited=pool.visited, seconds=time.monotonic() - self.begun)
 
     def _nothing(self, reason: Shortfall, proved: bool) -> Allocation:
         return Allocation(

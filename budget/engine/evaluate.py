@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 from budget.engine.checks import BEYOND_DATA, CheckRow, dc_checks, emission_checks, in_order, worst_status
 from budget.engine.emission import Emissions, emissions
 from budget.engine.holdup import HoldUp, hold_up
+from budget.engine.inrush import inrush_checks
 from budget.engine.model import LINES, Project
 from budget.engine.operating import Operating, operating_points
 from budget.engine.stability import Stability, stability, stability_checks
@@ -46,7 +47,7 @@ def evaluate(project: Project, lines: tuple[int, ...] = (0, 1, 2), previous: Res
 
     ``lines`` are the lines that count, as indices of ``LINES``; ``previous`` is a result to reuse what did not change.
     """
-    return with_emissions(evaluate_dc(project, lines), previous)
+    return with_inrush(with_stability(with_emissions(evaluate_dc(project, lines), previous)))
 
 
 def with_emissions(result: Result, previous: Result | None = None) -> Result:
@@ -79,8 +80,6 @@ def with_inrush(
 
     Raises ``transient.CancelledError`` when ``cancelled`` says so; ``progress`` is told the share done.
     """
-    from budget.engine.transient import inrush_checks
-
     project = result.project
     found = inrush(project, result.operating, cancelled=cancelled, progress=progress)
     rows = inrush_checks(project, found)

@@ -12,11 +12,13 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from budget.engine.bounds import fit
 from budget.engine.feed import filter_currents
 from budget.engine.model import Project
 from budget.engine.operating import derating
 from budget.engine.placing import Constraints, Name, Task, task_of
-from budget.engine.search import SAME, Found, StoppedError, Watch, decide, fit, spread
+from budget.engine.pool import SAME, Found, StoppedError, Watch, spread
+from budget.engine.search import decide
 
 _FINE = 1e-4  # relative; how closely a number is looked for
 

@@ -174,6 +174,14 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
     return Fingerprint(written.st_mtime_ns, written.st_size, written.st_ino, hashlib.sha256(data).hexdigest())
 
 
+def free_name(path: FilePath, word: str) -> FilePath:
+    """A name beside ``path`` that is not taken: bus.toml -> bus.mine-1.toml."""
+    number = 1
+    while (new := path.with_name(f"{path.stem}.{word}-{number}{path.suffix}")).exists():
+        number += 1
+    return new
+
+
 def copy_shelves(names: list[str], source: FilePath, target: FilePath) -> None:
     """Bring the shelf files of a project along when it is saved into another folder.
 

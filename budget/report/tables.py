@@ -15,6 +15,8 @@ from budget.engine.checks import CheckRow
 from budget.engine.emission import Contributor
 from budget.engine.evaluate import Result
 from budget.engine.model import LINES
+from budget.engine.stability import stability_rows
+from budget.engine.transient import as_json as as_json_runs
 from budget.report import words
 from budget.report.numbers import Number, numbers
 
@@ -31,8 +33,8 @@ def as_json(result: Result, warnings: Sequence[str]) -> dict[str, Any]:
         "operating": operating(result),
         "emissions": emissions(result),
         "beats": beats(result),
-        "inrush": [],
-        "stability": [],
+        "inrush": as_json_runs(result.inrush) if result.inrush else [],
+        "stability": stability(result),
         "energy": [
             {
                 "case": e.case,
@@ -42,6 +44,7 @@ def as_json(result: Result, warnings: Sequence[str]) -> dict[str, Any]:
             }
             for e in result.energy
         ],
+        "hold_up": [{"id": h.id, "case": h.case, "capacitance": h.capacitance} for h in result.hold_up],
         "warnings": list(warnings),
     }
 
@@ -138,6 +141,14 @@ def emissions(result: Result) -> list[dict[str, Any]]:
         }
         for row in (result.emissions.rows if result.emissions else ())
     ]
+
+
+def stability(result: Result) -> list[dict[str, Any]]:
+    """One entry per case and chosen line; a corner without an operating point has no numbers."""
+    if result.stability is None:
+        return []
+    chosen = {LINES[k] for k in result.lines}
+    return [row for row in stability_rows(result.project, result.stability) if row["line"] in chosen]
 
 
 def beats(result: Result) -> list[dict[str, Any]]:
@@ -244,6 +255,63 @@ def emission_table(result: Result) -> list[tuple[str, ...]]:
 def _contributor(part: Contributor, unit: str) -> str:
     order = f" x{part.harmonic}" if part.harmonic else ""
     return f"{words.clean(part.clock)}{order} {words.show(part.level, unit)}"
+
+
+STABILITY_HEAD = ("corner", "state", "margin", "least damping", "at")
+
+
+def stability_table(result: Result) -> list[tuple[str, ...]]:
+    """The corner with the smallest margin, and its least damped mode."""
+    found = result.stability
+    if found is None or not found.solved[:, list(result.lines)].any():
+        return []
+    lines = list(result.lines)
+    margins = np.where(found.solved, found.margin_db, np.inf)[:, lines]
+    c, i = np.unravel_index(int(margins.argmin()), margins.shape)
+    k = lines[int(i)]
+    margin, damping, at = (float(x[c, k]) for x in (found.margin_db, found.damping, found.frequency))
+    return [
+        (
+            words.clean(f"{result.project.cases[int(c)].id}, {LINES[k]} line"),
+            "stable" if found.stable[c, k] else "UNSTABLE",
+            words.stability_margin(margin),
+            f"{damping:.3g}" if math.isfinite(damping) else "",
+            words.frequency(at) if math.isfinite(at) else "",
+        )
+    ]
+
+
+RUN_HEAD = ("switch-on and surge", "bus peak", "bus i2t", "largest filter peak", "highest terminals", "last start")
+
+
+def run_table(result: Result) -> list[tuple[str, ...]]:
+    """Each case and event with its peaks, and when the last converter starts."""
+    rows: list[tuple[str, ...]] = []
+    for run in result.inrush.runs if result.inrush else ():
+        peaks = [(f.peak, f.id) for f in run.filters if f.peak is not None]
+        volts = [(c.peak_voltage, c.id) for c in run.converters if c.peak_voltage is not None]
+        starts = [c.runs_at for c in run.converters if c.runs_at is not None]
+        rows.append(
+            (
+                words.clean(f"{run.case}, {run.event}"),
+                words.show(run.bus_peak, "A"),
+                words.show(run.bus_i2t, "A^2 s"),
+                f"{words.show(max(peaks)[0], 'A')} {max(peaks)[1]}" if peaks else "",
+                f"{words.show(max(volts)[0], 'V')} {max(volts)[1]}" if volts else "",
+                words.seconds(max(starts)) if starts else "",
+            )
+        )
+    return rows
+
+
+HOLD_UP_HEAD = ("hold-up of", "case", "capacitance needed")
+
+
+def hold_up_table(result: Result) -> list[tuple[str, ...]]:
+    """What each converter that shall run on without the bus needs at its input."""
+    return [
+        (words.clean(h.id), words.clean(h.case), words.farads(h.capacitance) or "out of reach") for h in result.hold_up
+    ]
 
 
 ENERGY_HEAD = ("case", "duration", "energy", "charge")

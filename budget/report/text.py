@@ -32,19 +32,26 @@ _RIGHT = {
 def as_text(name: str, result: Result, warnings: Sequence[str], *, colour: bool = False) -> str:
     """The report of one file as text; ``colour`` adds ANSI colours to the words that state a status."""
     lines = [_headline(name, result, colour), _scope(result), ""]
-    sections = (
-        ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
-        ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
-        ("Emissions, worst corner of each limit set", tables.EMISSION_HEAD, tables.emission_table(result)),
-        ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
-    )
-    for title, head, rows in sections:
+    for title, head, rows in _sections(result):
         if rows:
             lines += [title, *_columns(head, rows, colour), ""]
     if warnings:
         lines += ["Warnings", *(f"  {words.clean(w)}" for w in warnings), ""]
     lines += words.CAUTION
     return "\n".join(lines) + "\n"
+
+
+def _sections(result: Result) -> tuple[tuple[str, tuple[str, ...], list[tuple[str, ...]]], ...]:
+    """The tables of a report: title, headings and rows; one without rows is left out."""
+    return (
+        ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
+        ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
+        ("Emissions, worst corner of each limit set", tables.EMISSION_HEAD, tables.emission_table(result)),
+        ("Stability, worst corner", tables.STABILITY_HEAD, tables.stability_table(result)),
+        ("Switch-on and surge", tables.RUN_HEAD, tables.run_table(result)),
+        ("Hold-up", tables.HOLD_UP_HEAD, tables.hold_up_table(result)),
+        ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
+    )
 
 
 def _headline(name: str, result: Result, colour: bool) -> str:
@@ -90,13 +97,7 @@ def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
     """The report of one file as markdown."""
     lines = [f"# {_escape(result.project.title or name)}", ""]
     lines += [f"**{result.status}**: {words.summary(result.checks)}; {_escape(_scope(result))}.", ""]
-    sections = (
-        ("Checks, worst first", tables.CHECK_HEAD, tables.check_table(result.checks)),
-        ("Worst over these corners", tables.FLOW_HEAD, tables.flow_table(result)),
-        ("Emissions, worst corner of each limit set", tables.EMISSION_HEAD, tables.emission_table(result)),
-        ("Energy at the nominal line", tables.ENERGY_HEAD, tables.energy_table(result)),
-    )
-    for title, head, rows in sections:
+    for title, head, rows in _sections(result):
         if not rows:
             continue
         lines += [f"## {title}", "", "| " + " | ".join(head) + " |"]

@@ -32,10 +32,26 @@ REMARKS = {
     "limit from memory": "limit from memory; enter the points from your own copy",
     "no receiver bandwidth": "the limit line has no receiver bandwidth, so lines are taken one by one",
     "too many lines": "more lines in the band than can be added up",
+    "infinite current": "a step of the source meets a capacitor with no resistance between",
+    "filter is a table": "the filter is a table, which has no impedance",
+    "known by a table only": "the filter is a table, which has no impedance",
+    "table filters left out": "filters given as tables left out",
+    "not finished": "the calculation was given up before the window ended",
+    "never turned on": "its terminals never reach turn_on",
+    "still counting": "its start delay is not over when the window ends",
+    "still soft starting": "its soft start is not over when the window ends",
+    "tripped": "its terminals fall below turn_off, and it does not come back",
+    "near turn_on": "comes within 1 % of turn_on without clearly crossing it: a coin toss",
+    "near turn_off": "comes within 1 % of turn_off without clearly crossing it: a coin toss",
+    "no input capacitor": "its load is fed by inductors alone",
+    "unstable for any load": "unstable for any load",
+    "no converter runs behind it": "no converter runs behind it",
+    "undamped resonance": "an undamped resonance",
+    "no source impedance": "no source impedance",
 }
 LEVELS = ("dBuV", "dBuA")
 BASIS = {"read": "read in the standard", "memory": "from memory", "own": "entered here"}
-_KINDS = {"A": "current", "V": "voltage", "W": "power"}
+_KINDS = {"A": "current", "V": "voltage", "W": "power", "A^2 s": "i2t"}
 
 
 def clean(text: str) -> str:
@@ -47,11 +63,30 @@ def clean(text: str) -> str:
 
 def show(value: float | None, unit: str) -> str:
     """A value of a check row as text, in its unit; empty where there is none."""
+    if unit == "dB" and value is not None:
+        return f"{value:.1f} dB" if math.isfinite(value) else ""
     if unit in LEVELS and value is not None:
         return f"{value:.1f} {unit}" if math.isfinite(value) else "too large"
     if unit not in _KINDS or value is None:
         return ""
     return quantity.show(value, quantity.KINDS[_KINDS[unit]]) if math.isfinite(value) else "too large"
+
+
+def seconds(value: float | None) -> str:
+    """A time as text; empty where there is none."""
+    return "" if value is None else quantity.show(value, quantity.KINDS["time"])
+
+
+def farads(value: float | None) -> str:
+    """A capacitance as text; empty where there is none."""
+    return "" if value is None else quantity.show(value, quantity.KINDS["capacitance"])
+
+
+def stability_margin(margin: float) -> str:
+    """How many times larger all converters' conductances may get, in dB, before the bus oscillates."""
+    if math.isinf(margin):
+        return "stable whatever the loads" if margin > 0 else "unstable for any load"
+    return f"{margin:.1f} dB"
 
 
 def frequency(value: float | None) -> str:
@@ -104,7 +139,7 @@ def corner(row: CheckRow) -> str:
     """The corner of a row: 'climb, low line'; empty for a row that has none."""
     words = [row.case] if row.case else []
     if row.line:
-        words.append(f"{row.line} line")
+        words.append(row.line if row.line in ("on-low", "on-high", "surge") else f"{row.line} line")
     return ", ".join(words)
 
 

@@ -4,21 +4,18 @@ from __future__ import annotations
 
 import copy
 from collections.abc import Callable
-from dataclasses import replace
 from pathlib import Path as FilePath
 from typing import Any
 
-from budget import quantity
 from budget.engine.model import LINES
 from budget.project import document as doc
 from budget.project import edits, schema, starter
 from budget.project.document import Path
 from budget.project.problems import ProjectError, place
-from budget.project.store import ChangedOnDiskError, write_text
-from budget.ui import lists
-from budget.ui.desk import Desk, Work, command_items
-from budget.ui.sheet import BOTH, CM, DM, rows_of
-from budget.ui.spectrum import csv_lines, shown_result
+from budget.project.store import ChangedOnDiskError, free_name
+from budget.ui import lists, studies
+from budget.ui.desk import Desk, command_items
+from budget.ui.sheet import rows_of
 from budget.ui.view import Cell, Row
 
 Action = Callable[[Desk], None]
@@ -619,14 +616,6 @@ def _ask_changed(desk: Desk, write: Callable[[bool], None], then: Callable[[], N
     desk.ask(f"{session.name} was changed on disk by someone else.", options)
 
 
-def free_name(path: FilePath, word: str) -> FilePath:
-    """A name beside ``path`` that is not taken: bus.toml -> bus.mine-1.toml."""
-    number = 1
-    while (new := path.with_name(f"{path.stem}.{word}-{number}{path.suffix}")).exists():
-        number += 1
-    return new
-
-
 def save_as(desk: Desk, then: Callable[[], None] = lambda: None) -> None:
     start = str(desk.session.path or "project.toml")
 
@@ -663,105 +652,13 @@ def quit_program(desk: Desk) -> None:
     )
 
 
-# -- emissions
-
-
 def view_response(desk: Desk) -> None:
     view_fields(desk)
     desk.view_name = "response"
 
 
-def next_mode(desk: Desk) -> None:
-    if desk.view_name == "response":
-        desk.options = replace(desk.options, common=not desk.options.common)
-        return
-    order = (BOTH, DM, CM)
-    desk.options = replace(desk.options, mode=order[(order.index(desk.options.mode) + 1) % 3])
-
-
-def next_limit(desk: Desk) -> None:
-    result = shown_result(desk.context())
-    count = len(result.emissions.spectra) if result and result.emissions else 0
-    if count < 2:
-        raise ProjectError("there is no other limit set; the rules (r) name them under emissions.")
-    desk.options = replace(desk.options, limit=(desk.options.limit + 1) % count)
-
-
-def toggle_bare(desk: Desk) -> None:
-    desk.options = replace(desk.options, bare=not desk.options.bare)
-
-
-def export(desk: Desk) -> None:
-    """Write the lines of the spectrum as CSV beside the project."""
-    text = csv_lines(desk.context())
-    if text.count("\n") < 2:
-        raise ProjectError("there are no lines to write.")
-    path = desk.session.path or FilePath("project.toml")
-
-    def accept(name: str) -> None:
-        target = FilePath(name.strip()).expanduser()
-        if not name.strip() or target.is_dir():
-            raise ProjectError("a file name was expected.")
-        if target.exists():
-            raise ProjectError(f"{target} exists already; another name was expected.")
-        write_text(target, text)
-        desk.say(f"written: {target}")
-
-    desk.prompt("write the lines as CSV to", str(free_name(path.with_suffix(".csv"), "lines")), accept)
-
-
-def scan_clock(desk: Desk) -> None:
-    """Ask for a clock and a range, and find the worst margin over it in the background."""
-    result = shown_result(desk.context())
-    if result is None or result.emissions is None or not result.emissions.spectra:
-        raise ProjectError("there are no emissions yet; name a limit set in the rules (r), emissions.")
-    names = [clock.name for clock in result.emissions.spectra[0].clocks if clock.frequency]
-
-    def choose(name: str) -> None:
-        clock = next(c for c in result.emissions.spectra[0].clocks if c.name == name)  # type: ignore[union-attr]
-        assert clock.frequency is not None
-        kind = quantity.KINDS["frequency"]
-        low, high = quantity.show(clock.frequency * 0.75, kind), quantity.show(clock.frequency * 1.25, kind)
-        desk.prompt(f"move {name} over, from - to", f"{low} to {high}", lambda text: start(name, text))
-
-    def start(name: str, text: str) -> None:
-        low, high = frequency_range(text)
-        shown = shown_result(desk.context()) or result
-        assert shown is not None
-
-        def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:
-            from budget.engine.plan import scan
-
-            return scan(shown.project, shown.operating, name, low, high, 61, cancelled, progress)
-
-        def done(found: Any) -> None:
-            if found is not None:
-                desk.options = replace(desk.options, scan=found)
-                desk.view_name = "plan"
-
-        desk.start_job(Work(f"moving {name}", run, done))
-
-    desk.pick("which clock?", [(name, name) for name in names], choose)
-
-
-def frequency_range(text: str) -> tuple[float, float]:
-    """'250 kHz to 400 kHz' in Hz; raises ProjectError with a sentence."""
-    parts = text.split(" to ")
-    if len(parts) != 2:
-        raise ProjectError("two frequencies were expected, such as 250 kHz to 400 kHz.")
-    kind = quantity.KINDS["frequency"]
-    try:
-        low, high = (quantity.parse(part.strip(), kind).si for part in parts)
-    except quantity.QuantityError as error:
-        raise ProjectError(str(error)) from error
-    if low > high:
-        low, high = high, low
-    if not 1.0 <= low < high <= 1e9:
-        raise ProjectError("a range within 1 Hz to 1 GHz was expected.")
-    return low, high
-
-
 ACTIONS: dict[str, Action] = {
+    **studies.ACTIONS,
     **{name: _move(name) for name in ("up", "down", "left", "right", "first", "last", "page_up", "page_down")},
     **{f"view_{name}": _show(name) for name in ("rules", "loads", "checks", "limits", "shelf", "project")},
     "view_sheet": view_sheet,
@@ -797,11 +694,8 @@ ACTIONS: dict[str, Action] = {
     "view_spectrum": _show("spectrum"),
     "view_plan": _show("plan"),
     "view_response": view_response,
-    "next_mode": next_mode,
-    "next_limit": next_limit,
-    "toggle_bare": toggle_bare,
-    "export": export,
-    "scan_clock": scan_clock,
+    "view_switchon": _show("switchon"),
+    "view_stable": _show("stable"),
     "commands": show_commands,
     "save": save,
     "save_as": save_as,

@@ -62,6 +62,14 @@ class Trouble(Message):
         self.text = text
 
 
+class Staged(Message):
+    """How far the longest stage of the present results has come."""
+
+    def __init__(self, share: float) -> None:
+        super().__init__()
+        self.share = share
+
+
 class Progress(Message):
     """How far a longer calculation has come."""
 
@@ -88,6 +96,7 @@ class Worker:
     def __init__(self, post: Callable[[Message], object]) -> None:
         self._post = post
         self._wanted: Snapshot | None = None
+        self._told = 0.0
         self._wake = threading.Condition()
         self._thread = threading.Thread(target=self._run, name="calculate", daemon=True)
         self._thread.start()
@@ -104,12 +113,20 @@ class Worker:
                     self._wake.wait()
                 snapshot, self._wanted = self._wanted, None
             try:
-                for outcome in stages(snapshot):
+                for outcome in stages(snapshot, self._newer_waits, self._progress):
                     self._send(Calculated(outcome))
-                    if self._wanted is not None:
-                        break  # a newer one waits; what is left of this one is of no use
+                    if self._newer_waits():
+                        break  # what is left of this one is of no use
             except Exception as error:  # the sheet must stay open whatever the calculation does
                 self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+
+    def _newer_waits(self) -> bool:
+        return self._wanted is not None
+
+    def _progress(self, share: float) -> None:
+        if share - self._told >= 0.1 or share < self._told:  # a word now and then; each costs the terminal bytes
+            self._told = share
+            self._send(Staged(share))
 
     def _send(self, message: Message) -> None:
         with contextlib.suppress(Exception):  # the program may be closing
@@ -237,6 +254,11 @@ class BudgetApp(App[int], inherit_bindings=False):
 
     def on_calculated(self, event: Calculated) -> None:
         if self.desk.accept(event.outcome):
+            self.board.sync()
+
+    def on_staged(self, event: Staged) -> None:
+        self.desk.share = event.share
+        if self.desk.pending:
             self.board.sync()
 
     def on_trouble(self, event: Trouble) -> None:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-SHEET, FIELDS, SPECTRUM, PLAN, RESPONSE, ALL = "sheet", "fields", "spectrum", "plan", "response", "all"
+SHEET, FIELDS, SPECTRUM, PLAN, RESPONSE = "sheet", "fields", "spectrum", "plan", "response"
+SWITCHON, STABLE, ALL = "switchon", "stable", "all"
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,10 +72,32 @@ COMMANDS: tuple[Command, ...] = (
     Command("view_spectrum", ("a",), "emissions: every line against the limit", "show", "emissions", rank=24),
     Command("view_plan", ("y",), "frequency plan: clocks that meet, beats", "show"),
     Command("view_response", ("z",), "the filter over frequency: loss, impedance, damping", "show", "filter", rank=25),
-    Command("next_mode", ("A",), "differential, common mode, both", "show", "DM/CM", (SPECTRUM, RESPONSE), rank=5),
-    Command("next_limit", ("j",), "next limit set", "show", "next limit", (SPECTRUM, PLAN), rank=6),
+    Command("view_switchon", ("J",), "switch-on and surge over time", "show", "switch-on", rank=26),
+    Command("view_stable", ("Y",), "stability: impedances and modes", "show", "stability", rank=27),
+    Command(
+        "next_mode",
+        ("A",),
+        "DM, CM, both; or currents, voltages",
+        "show",
+        "mode",
+        (SPECTRUM, RESPONSE, SWITCHON),
+        rank=5,
+    ),
+    Command(
+        "next_one",
+        ("j",),
+        "next limit set, event or filter",
+        "show",
+        "next",
+        (SPECTRUM, PLAN, SWITCHON, STABLE),
+        rank=6,
+    ),
+    Command("log_time", ("L",), "time axis linear or logarithmic", "show", "log", (SWITCHON,), rank=7),
+    Command(
+        "what_helps", ("H",), "what would bring it within the limit", "show", "what helps", (SWITCHON, STABLE), rank=8
+    ),
     Command("toggle_bare", ("B",), "the unfiltered level beside it", "show", "unfiltered", (SPECTRUM,), rank=7),
-    Command("export", ("E",), "write the lines as CSV", "show", "CSV", (SPECTRUM,), rank=8),
+    Command("export", ("E",), "write what is drawn as CSV", "show", "CSV", (SPECTRUM, SWITCHON, STABLE), rank=9),
     Command(
         "scan_clock", ("M",), "move one clock over a range, find the best place", "show", "move clock", (PLAN,), rank=5
     ),

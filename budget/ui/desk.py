@@ -19,7 +19,7 @@ from budget.project.problems import ProjectError
 from budget.report import change
 from budget.report.numbers import Corner
 from budget.session import Outcome, Session
-from budget.ui import commands, fields, layout, lists, plan, response, sheet, spectrum
+from budget.ui import commands, fields, layout, lists, plan, response, sheet, spectrum, stable, switchon
 from budget.ui.commands import COMMANDS, SHEET
 from budget.ui.sheet import Cells, Context, Options
 from budget.ui.view import Cell, Row, Section, View
@@ -37,6 +37,8 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "spectrum": spectrum.spectrum,
     "plan": plan.plan,
     "response": response.response,
+    "switchon": switchon.switch_on,
+    "stable": stable.stable,
     "help": lists.help_view,
 }
 FORMS = frozenset({"fields", "rules", "limits", "project", "loads"})  # the first column only names the others
@@ -142,6 +144,7 @@ class Desk:
     label: str = ""  # of the last edit, told with what it changed
     told: str = ""  # what was told of it so far; later stages of the results may tell more
     options: Options = field(default_factory=Options)
+    share: float = 0.0  # how far the longest stage of the results has come
     job: Job | None = None  # a longer calculation that was asked for, and its progress
     start_job: Callable[[Work], None] = lambda _: None
     before: Any = None  # the result before it
@@ -282,7 +285,8 @@ class Desk:
         """Take results; tell what the last edit changed."""
         if not self.session.accept(outcome):
             return False
-        self.pending = False
+        if outcome.complete:
+            self.pending = False
         if self.label:
             told = "; ".join(
                 part for part in (self._left_out(outcome), change.describe(self.before, outcome.result)) if part

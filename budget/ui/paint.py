@@ -112,8 +112,10 @@ def _title(desk: Desk) -> Line:
 def _state(session: Session, desk: Desk) -> Line:
     if desk.job is not None:
         return [(f"~ {desk.job.label} {desk.job.fraction:.0%}", "thin")]
-    if session.outcome is None or (desk.pending and not session.complete):
+    if session.outcome is None or (desk.pending and not session.fresh):
         return [("~ calculating", "thin")]
+    if desk.pending and not session.complete:
+        return [(f"~ switch-on {desk.share:.0%}" if desk.share else "~ calculating", "thin")]
     errors = len(session.outcome.built.errors)
     spans: Line = []
     if errors:

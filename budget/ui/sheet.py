@@ -159,7 +159,17 @@ def behind(row: CheckRow, document: doc.Document) -> Path:
         "converter load": "rated_power",
         "input low": "min_input",
         "input high": "max_input",
+        "inrush peak": "inrush_peak",
+        "bus inrush": "inrush_peak",
+        "inrush i2t": "inrush_i2t",
+        "breaker i2t": "breaker_i2t",
+        "overshoot": "max_surge",
+        "start": "turn_on",
+        "stability": "inductance",
+        "impedance": "dm",
     }
+    if row.check.startswith("emission "):
+        return ("rules", "emissions")
     key = keys.get(row.check, "note")
     if row.subject == "bus":
         return ("bus", key)
@@ -390,6 +400,11 @@ def _emission(context: Context) -> _Emission | None:
         if unit.filter in shares:
             shares[unit.filter] += value
     return _Emission(row.frequency, f"{row.limit} in {case}, {line} line", row.unit, row.level, shares)
+
+
+def stale(context: Context, result: Result) -> str:
+    """A mark before the title of a view whose results are those from before the last edit."""
+    return "" if result is context.session.result else "~ before the edit: "
 
 
 def words_only(text: str) -> str:

@@ -9,7 +9,7 @@ from budget.engine.model import LINES
 from budget.report import words
 from budget.report.numbers import corner_index
 from budget.ui.plot import SYMBOLS, Plot, Trace
-from budget.ui.sheet import BOTH, CM, DM, Context, words_only
+from budget.ui.sheet import BOTH, CM, DM, Context, stale, words_only
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -151,7 +151,7 @@ def spectrum(context: Context) -> View:
         rows = [Row(("none",), (Cell("no line in the band", info=summary),))]
     columns = COLUMNS if not context.options.bare else (*COLUMNS[:6], Column("bare", 6, RIGHT), *COLUMNS[6:])
     picture = _picture(entries, lines, context)
-    return View("spectrum", title, (Section(columns, tuple(rows)),), picture, summary)
+    return View("spectrum", stale(context, result) + title, (Section(columns, tuple(rows)),), picture, summary)
 
 
 def _summary(result: Result, limit: str, case: str, line: str) -> str:

@@ -9,7 +9,7 @@ from budget import quantity
 from budget.report import words
 from budget.report.numbers import corner_index
 from budget.ui.plot import Plot, Trace
-from budget.ui.sheet import Context, words_only
+from budget.ui.sheet import Context, stale, words_only
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -64,14 +64,7 @@ def stable(context: Context) -> View:
         return View("stable", title, (Section((Column("", 60),), (Row(("none",), (Cell("no operating point"),)),)),))
     sections = (Section(_FILTERS, _filter_rows(result, c, k)), Section(_MODES, _mode_rows(context, result, c, k)))
     picture = _picture(context, result, c, k)
-    return View("stable", title, sections, picture, _summary(result, c, k))
-
-
-def margin_words(margin: float) -> str:
-    """A stability margin in words: all converters' conductances times this, and the bus oscillates."""
-    if math.isinf(margin):
-        return "stable whatever the loads" if margin > 0 else "unstable for any load"
-    return f"{margin:.1f} dB"
+    return View("stable", stale(context, result) + title, sections, picture, _summary(result, c, k))
 
 
 def _summary(result: Result, c: int, k: int) -> str:
@@ -81,7 +74,7 @@ def _summary(result: Result, c: int, k: int) -> str:
     damping, frequency = float(found.damping[c, k]), float(found.frequency[c, k])
     least = "" if math.isnan(damping) else f", least damping {damping:.3g} at {words.frequency(frequency)}"
     return (
-        f"{state}, margin {margin_words(float(found.margin_db[c, k]))}{least}; "
+        f"{state}, margin {words.stability_margin(float(found.margin_db[c, k]))}{least}; "
         "s |Z source|, L |Z load| in dB over 1 ohm; j next filter, H what would help"
     )
 
@@ -162,3 +155,33 @@ def _picture(context: Context, result: Result, c: int, k: int) -> Plot | None:
         level = 20.0 * math.log10(load)
         traces.append(Trace(f"{part.id} load", "L", [10.0, 1e6], [level, level], "step", "trace1"))
     return Plot(tuple(traces), y_label=f"dB {part.id}"[:7], x_range=(10.0, 1e6))
+
+
+def csv_stability(context: Context) -> str:
+    """The modes of the shown corner as CSV, then the source impedance of every filter: plain SI numbers."""
+    import csv
+    import io
+
+    result = shown_result(context)
+    if result is None or result.stability is None:
+        return ""
+    import numpy as np
+
+    from budget.engine.cure import mode_table
+    from budget.engine.stability import source_impedances
+
+    c, k = shown_corner(context, result)
+    out = io.StringIO()
+    writer = csv.writer(out, lineterminator="\n")
+    writer.writerow(("mode frequency", "damping", "owner", "share"))
+    for mode in mode_table(result.project, result.operating, c, k):
+        for owner, share in mode.owners[:4]:
+            writer.writerow((mode.frequency, mode.damping, " ".join(x for x in owner if x), share))
+    parts = [f for f, part in enumerate(result.project.filters) if not part.attenuation]
+    grid = np.geomspace(10.0, 1e6, 900)
+    z = np.abs(source_impedances(result.project, 2.0 * np.pi * grid))
+    writer.writerow([])
+    writer.writerow(("frequency", *(f"{result.project.filters[f].id} source impedance" for f in parts)))
+    for n, f in enumerate(grid.tolist()):
+        writer.writerow((f, *(float(z[p, n]) for p in parts)))
+    return out.getvalue()

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 from budget import quantity
 from budget.report import words
 from budget.ui.plot import SYMBOLS, Plot, Trace
-from budget.ui.sheet import Context, words_only
+from budget.ui.sheet import Context, stale, words_only
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -15,11 +15,11 @@ if TYPE_CHECKING:
     from budget.engine.transient import Run
 
 COLUMNS = (
-    Column("", 12, most=26),
+    Column("", 11, most=26),
     Column("peak A", 8, RIGHT),
     Column("limit", 8, RIGHT),
-    Column("i2t", 11, RIGHT),
-    Column("limit", 11, RIGHT),
+    Column("i2t", 13, RIGHT),
+    Column("limit", 10, RIGHT),
     Column("peak V", 8, RIGHT),
     Column("limit", 8, RIGHT),
     Column("starts", 9, RIGHT),
@@ -42,7 +42,9 @@ def shown_run(context: Context) -> tuple[Result, Run] | None:
     if context.options.run is not None:
         return result, runs[context.options.run % len(runs)]
     names = ("inrush peak", "bus inrush", "overshoot", "inrush i2t", "breaker i2t", "start")
-    ranked = words.by_severity(row for row in result.checks if row.check in names and row.case)
+    rows = [row for row in result.checks if row.check in names and row.case]
+    failed = [row for row in rows if row.status == "fail"]
+    ranked = words.by_severity(failed or [row for row in rows if row.check in ("inrush peak", "bus inrush")])
     at = (ranked[0].case, ranked[0].line) if ranked else None
     return result, next((run for run in runs if (run.case, run.event) == at), runs[0])
 
@@ -58,7 +60,13 @@ def switch_on(context: Context) -> View:
     title = f"{run.event} in {run.case}"
     rows = _rows(result, run)
     summary = _summary(run)
-    return View("switchon", title, (Section(COLUMNS, tuple(rows)),), _picture(context, result, run), summary)
+    return View(
+        "switchon",
+        stale(context, result) + title,
+        (Section(COLUMNS, tuple(rows)),),
+        _picture(context, result, run),
+        summary,
+    )
 
 
 def _amps(value: float | None) -> str:
@@ -158,7 +166,8 @@ def _picture(context: Context, result: Result, run: Run) -> Plot | None:
             traces.append(Trace(unit.id, SYMBOLS[k % len(SYMBOLS)], time, y, tone=f"trace{k % 6}"))
             entry = next((u for u in run.converters if u.id == unit.id), None)
             if entry is not None and entry.runs_at is not None:
-                traces.append(Trace("starts", "^", [entry.runs_at], [0.0], "dots", "head"))
+                near = min(range(len(time)), key=lambda n, at=entry.runs_at: abs(time[n] - at))  # type: ignore[misc]
+                traces.append(Trace("starts", "^", [entry.runs_at], [y[near]], "dots", "head"))
         limits = sorted({c.max_surge for c in result.project.converters if c.max_surge is not None})[:1]
     else:
         traces.append(Trace("bus", SYMBOLS[0], time, wave.bus.tolist(), tone="trace0"))
