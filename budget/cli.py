@@ -103,6 +103,9 @@ def _check_parser() -> argparse.ArgumentParser:
     check.add_argument("files", metavar="FILE", nargs="+", help="project files")
     check.add_argument("--format", choices=FORMATS, default="text", help="how to print (default: text)")
     check.add_argument("--strict", action="store_true", help="exit 1 also for thin checks and checks without data")
+    check.add_argument(
+        "--dc", action="store_true", help="only the DC part: no emissions, stability or switch-on, at once"
+    )
     check.add_argument("--case", action="append", metavar="ID", help="only this load case; may be given again")
     check.add_argument(
         "--line", action="append", choices=("low", "nominal", "high"), help="only this line; may be given again"
@@ -157,7 +160,7 @@ def _check(options: argparse.Namespace) -> int:
     found: list[tuple[str, Result, list[str]]] = []
     for name in options.files:
         try:
-            result, warnings = check_file(Path(name), options.case, options.line)
+            result, warnings = check_file(Path(name), options.case, options.line, dc=options.dc)
         except ProjectError as error:
             _say(f"budget: {error}")
             continue
@@ -197,15 +200,17 @@ def _colour() -> bool:
     return at_terminal and not os.environ.get("NO_COLOR") and os.environ.get("TERM") != "dumb"
 
 
-def check_file(path: Path, cases: list[str] | None, lines: list[str] | None) -> tuple[Result, list[str]]:
-    """Calculate one file for the wanted cases and lines (None: all).
+def check_file(
+    path: Path, cases: list[str] | None, lines: list[str] | None, *, dc: bool = False
+) -> tuple[Result, list[str]]:
+    """Calculate one file for the wanted cases and lines (None: all); with ``dc`` the DC part alone.
 
     Returns the result and the warnings as sentences. Raises ProjectError with every problem, a sentence a line, where
     the file cannot be used.
     """
     from dataclasses import replace
 
-    from budget.engine.evaluate import evaluate
+    from budget.engine.evaluate import evaluate, evaluate_dc
     from budget.engine.model import LINES
     from budget.project import store
     from budget.project.build import build
@@ -228,7 +233,7 @@ def check_file(path: Path, cases: list[str] | None, lines: list[str] | None) -> 
                 )
         project = replace(project, cases=tuple(case for case in project.cases if case.id in cases))
     chosen = tuple(k for k, line in enumerate(LINES) if not lines or line in lines)
-    result = evaluate(project, chosen)
+    result = evaluate_dc(project, chosen) if dc else evaluate(project, chosen)
     warnings = [p.sentence() for p in problems if not p.error]
     warnings += [words.engine_warning(code) for code in result.warnings]
     return result, warnings

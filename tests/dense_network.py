@@ -19,16 +19,14 @@ from budget.engine.model import Branch, Project
 from budget.engine.operating import loads, operating_points
 
 
-def current_of(flux: float, ind: float, sat: float | None) -> float:
-    """From the definition: L(i) = max(L / (1 + (3/7)(i/sat)^2), L/20), by bisection on its integral."""
-    if sat is None:
-        return flux / ind
-    s = math.sqrt(3.0 / 7.0) / sat
-    knee = math.sqrt(19.0) / s
-    flux_knee = ind / s * math.atan(math.sqrt(19.0))
-    size = abs(flux)
-    i = math.tan(size * s / ind) / s if size < flux_knee else knee + (size - flux_knee) / (0.05 * ind)
-    return math.copysign(i, flux)
+def current_of(flux: np.ndarray, ind: np.ndarray, sat: np.ndarray) -> np.ndarray:
+    """From the definition L(i) = max(L / (1 + (3/7)(i/sat)^2), L/20): its integral, inverted; ``sat`` inf is linear."""
+    linear = np.isinf(sat)
+    s = math.sqrt(3.0 / 7.0) / np.where(linear, 1.0, sat)
+    size = np.abs(flux)
+    knee = ind / s * math.atan(math.sqrt(19.0))
+    bent = np.tan(np.minimum(size, knee) * s / ind) / s + np.maximum(size - knee, 0.0) / (0.05 * ind)
+    return np.where(linear, flux / ind, np.copysign(bent, flux))
 
 
 @dataclass
@@ -133,10 +131,12 @@ class Reference:
         self.v_term = np.array([volt(n) for n in self.terminals]).reshape(-1, full.shape[1])
         self.v_end = np.array([volt(n) for n in self.ends]).reshape(-1, full.shape[1])
         self.nc, self.nl, self.nn, self.nf = nc, nl, nn, len(entries)
+        self.ind = np.array([value for _, _, value, _ in net.inductors])
+        self.sat = np.array([math.inf if sat is None else sat for _, _, _, sat in net.inductors])
+        self.moves = np.concatenate((self.c_rows / self.caps[:, None], self.l_rows))
 
     def inputs(self, x: np.ndarray, source: float, power: np.ndarray, floor: np.ndarray) -> np.ndarray:
-        net = self.net
-        i_l = [current_of(x[self.nc + k], ind, sat) for k, (_, _, ind, sat) in enumerate(net.inductors)]
+        i_l = current_of(x[self.nc : self.nc + self.nl], self.ind, self.sat)
         u = np.concatenate(([source], x[: self.nc], i_l, np.zeros(self.nn)))
         at = self.v_end @ u
         z = self.v_end[:, u.size - self.nn :]
@@ -147,10 +147,11 @@ class Reference:
         for _ in range(60):  # Newton from above
             i = power / np.maximum(v, floor)
             gap = v - at - z @ i
-            if np.abs(gap).max() < 1e-13 * max(1.0, np.abs(at).max()):
+            if np.abs(gap).max() < 1e-12 * max(1.0, np.abs(at).max()):
                 break
             slope = np.where(v > floor, -i / np.maximum(v, floor), 0.0)
-            v = v - np.linalg.solve(np.eye(self.nn) - z * slope, gap)
+            jacobian = np.eye(self.nn) - z * slope
+            v = v - (gap / jacobian[0] if self.nn == 1 else np.linalg.solve(jacobian, gap))
         u[u.size - self.nn :] = power / np.maximum(v, floor)
         return u
 
@@ -211,7 +212,7 @@ class Reference:
 
         def rhs(t: float, x: np.ndarray) -> np.ndarray:
             u = inputs_at(t, x)
-            return np.concatenate(((self.c_rows @ u) / self.caps, self.l_rows @ u, (self.amps @ u) ** 2))
+            return np.concatenate((self.moves @ u, (self.amps @ u) ** 2))
 
         def threshold(k: int) -> tuple[float, float]:
             return (on[k], 1.0) if phase[k] in ("wait", "count") else (off[k], -1.0)

@@ -94,7 +94,7 @@ def test_exit_status(budget: Run, arguments: tuple[str, ...], status: int) -> No
 
 
 def test_only_the_wanted_corners_are_told(budget: Run) -> None:
-    arguments = ("check", HERON, "--format", "json", "--case", "relay", "--case", "ground", "--line", "low")
+    arguments = ("check", "--dc", HERON, "--format", "json", "--case", "relay", "--case", "ground", "--line", "low")
     data = json.loads(budget(*arguments)[1])
     assert [(row["case"], row["line"]) for row in data["operating"]] == [("ground", "low"), ("relay", "low")]
     assert {row["case"] for row in data["checks"]} == {"ground", "relay", None}
@@ -104,13 +104,15 @@ def test_only_the_wanted_corners_are_told(budget: Run) -> None:
 
 def test_the_limits_of_the_corners_are_those_of_all(budget: Run) -> None:
     """A corner has the same bits whatever is calculated beside it."""
-    everything = json.loads(budget("check", HERON, "--format", "json")[1])["operating"]
-    alone = json.loads(budget("check", HERON, "--format", "json", "--case", "survey", "--line", "low")[1])["operating"]
+    everything = json.loads(budget("check", "--dc", HERON, "--format", "json")[1])["operating"]
+    alone = json.loads(budget("check", "--dc", HERON, "--format", "json", "--case", "survey", "--line", "low")[1])[
+        "operating"
+    ]
     assert alone == [row for row in everything if (row["case"], row["line"]) == ("survey", "low")]
 
 
 def test_an_unknown_case_is_named_with_those_there_are(budget: Run) -> None:
-    status, out, err = budget("check", HERON, "--case", "surve\x1by")
+    status, out, err = budget("check", "--dc", HERON, "--case", "surve\x1by")
     assert (status, out) == (2, "")
     assert "no load case is called 'surve?y'; there are: ground, climb, survey, relay." in err
 
@@ -180,10 +182,10 @@ def test_warnings_of_a_csv_go_to_standard_error(budget: Run) -> None:
     "arguments",
     [
         ("check",),
-        ("check", HERON, "--format", "pdf"),
-        ("check", HERON, "--line", "middle"),
-        ("check", HERON, "--form", "json"),  # a short form today may be ambiguous tomorrow
-        ("check", HERON, "--\x1b[31m"),
+        ("check", "--dc", HERON, "--format", "pdf"),
+        ("check", "--dc", HERON, "--line", "middle"),
+        ("check", "--dc", HERON, "--form", "json"),  # a short form today may be ambiguous tomorrow
+        ("check", "--dc", HERON, "--\x1b[31m"),
         ("chekc", HERON),
         ("--bogus",),
         ("new",),
@@ -318,7 +320,7 @@ def test_no_control_characters_come_out_with_an_error(budget: Run) -> None:
 
 
 def test_python_m_budget(tmp_path: Path) -> None:
-    done = process("check", HERON)
+    done = process("check", "--dc", HERON)
     assert (done.returncode, done.stderr) == (1, b"")
     assert b"FAIL (1 fail" in done.stdout
     assert b"\x1b" not in done.stdout, "a pipe gets no colours"
@@ -341,7 +343,9 @@ def test_output_fits_any_encoding(tmp_path: Path, form: str) -> None:
     posix.stdout.decode()
 
 
-@pytest.mark.parametrize("arguments", [("check", HERON), ("check", HERON, "--format", "json"), ("--help",)], ids=len)
+@pytest.mark.parametrize(
+    "arguments", [("check", "--dc", HERON), ("check", "--dc", HERON, "--format", "json"), ("--help",)], ids=len
+)
 def test_a_reader_that_had_enough_is_no_fault(arguments: tuple[str, ...]) -> None:
     read, write = os.pipe()
     os.close(read)
@@ -374,19 +378,19 @@ def test_a_closed_output_is_said() -> None:
 
 
 def test_colours_on_a_terminal_only_and_only_where_wanted() -> None:
-    status, text = at_terminal("check", HERON)
+    status, text = at_terminal("check", "--dc", HERON)
     assert status == 1
     assert "\x1b[1;31mFAIL\x1b[0m" in text
     assert "\x1b[32mok" in text
-    plain = process("check", HERON).stdout.decode()
+    plain = process("check", "--dc", HERON).stdout.decode()
     colours = ("\x1b[1;31m", "\x1b[33m", "\x1b[32m", "\x1b[2m", "\x1b[0m")
     for colour in colours:
         text = text.replace(colour, "")
     assert text.replace("\r\n", "\n") == plain, "colours change nothing but colours"
-    assert "\x1b" not in at_terminal("check", HERON, NO_COLOR="1")[1]
-    assert "\x1b" not in at_terminal("check", HERON, TERM="dumb")[1]
-    assert "\x1b" in at_terminal("check", HERON, NO_COLOR="")[1]
-    assert "\x1b" not in at_terminal("check", HERON, "--format", "markdown")[1]
+    assert "\x1b" not in at_terminal("check", "--dc", HERON, NO_COLOR="1")[1]
+    assert "\x1b" not in at_terminal("check", "--dc", HERON, TERM="dumb")[1]
+    assert "\x1b" in at_terminal("check", "--dc", HERON, NO_COLOR="")[1]
+    assert "\x1b" not in at_terminal("check", "--dc", HERON, "--format", "markdown")[1]
 
 
 def test_an_unusable_file_at_a_terminal_is_one_sentence(tmp_path: Path) -> None:

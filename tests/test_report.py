@@ -174,7 +174,9 @@ CHECK = [
 
 
 def output(*arguments: str) -> tuple[int, str]:
-    """Exit status and standard output of one command line, in this process."""
+    """Exit status and standard output of one command line, in this process: the DC part, which this file is about."""
+    if arguments[0] == "check":
+        arguments = ("check", "--dc", *arguments[1:])
     with contextlib.redirect_stdout(io.StringIO()) as out, contextlib.redirect_stderr(io.StringIO()):
         status = run(arguments)
     return status, out.getvalue()
@@ -232,7 +234,7 @@ def test_json_has_the_parts_others_rely_on(small: str) -> None:
     _, text = output("check", small, "--format", "json")
     assert text.isascii()
     data = json.loads(text)
-    assert list(data) == [*PARTS, "warnings"]
+    assert list(data) == [*PARTS, "warnings", "hold_up"]
     assert data["title"] == "Bench supply | \x1b[31mA_1"
     assert data["warnings"] == ["converter C1, colour: is an unknown key; it is kept, and not used."]
     assert all(list(row) == CHECK for row in data["checks"])
@@ -260,8 +262,15 @@ def test_a_corner_without_an_operating_point_has_no_lists(small: str) -> None:
 
 
 @pytest.mark.filterwarnings("ignore::RuntimeWarning")  # of numpy: the numbers do overflow
-def test_numbers_past_all_bounds_are_null_or_said(small: str) -> None:
+def test_numbers_past_all_bounds_are_refused(small: str) -> None:
     huge = SMALL.replace('"12 V", current = "2 A"', '"1e200 V", current = "1e200 A"').replace('"1.5 A"', "1e-320")
+    Path(small).write_text(huge)
+    status, text = output("check", small)
+    assert (status, text) == (2, "")
+
+
+def test_large_numbers_are_null_or_said(small: str) -> None:
+    huge = SMALL.replace('"12 V", current = "2 A"', '"1e14 V", current = "1e14 A"').replace('"1.5 A"', "1e-23")
     Path(small).write_text(huge)
     status, text = output("check", small, "--format", "json")
     assert status == 1

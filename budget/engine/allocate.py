@@ -50,14 +50,15 @@ from budget.engine.search import Outcome, enumerate_all, even, settle_moves
 GOALS = ("even", "fewest", "quiet")
 TIME = 10.0  # s
 _QUIET_MOST = 3000  # admissible allocations whose emissions are computed one by one
-_RANK = {"": 0, "ok": 0, "no data": 0, "thin": 0, "fail": 1}
+_RANK = {"": 0.5, "ok": 0, "no data": 0, "thin": 0, "fail": 1}
 
 
 @dataclass(frozen=True, slots=True)
 class Candidate:
     """One admissible allocation. ``headroom`` is a ratio, None if no filter in use has a rating; margins in dB.
 
-    ``status`` and ``worst`` (check, subject) come from all checks; "" and None while the search goes on.
+    ``status`` and ``worst`` (check, subject) come from all checks; "" and None while the search goes on, and where it
+    was stopped before they were made.
     """
 
     allocation: tuple[tuple[str, str], ...]  # (converter id, filter id), in project order
@@ -163,24 +164,24 @@ class _Search:
         self.progress = progress
         self.bound: float | None = None
         self.note: list[str] = []
+        self.few = 1
         self.margins: dict[tuple[int, ...], float] = {}
 
     def run(self, count: int, finish: Callable[[Project], Result], explain: bool) -> Allocation:
+        if not self.project.filters and self.project.converters:
+            return self._nothing(Shortfall("no filters"), proved=True)
         task = task_of(self.project, self.constraints)
         if not isinstance(task, Task):
             return self._nothing(Shortfall("contradiction", constraints=task), proved=True)
-        if not self.project.filters and self.project.converters:
-            return self._nothing(Shortfall("no filters"), proved=True)
         pool = Pool(task, changed=self._better)
         outcome = Outcome(0.0, False)
         goal = self.goal
         if goal == "quiet" and not self.project.checked:
             self.note.append("no limit set")
             goal = "even"
-        few = 0
         try:
             if goal == "fewest":
-                few = self._fewest(task, pool, outcome)
+                self._fewest(task, pool, outcome)
             elif goal == "quiet":
                 self._admissible_start(task, pool, outcome)
             else:
@@ -192,13 +193,15 @@ class _Search:
         if goal == "quiet":
             return self._finished(*self._quiet(task, pool), None, "dB", pool, count, finish)
         try:
-            if goal == "fewest":
+            if outcome.all_ties:
+                pass
+            elif goal == "fewest":
                 kept = _restricted(task, pool.best[0].home)
                 part = Pool(kept)
                 part.best = list(pool.best)
                 settle_moves(kept, part, self.watch)
                 pool.best = part.best
-            elif not outcome.all_ties:
+            else:
                 settle_moves(task, pool, self.watch)
         except StoppedError:
             if not outcome.proved:
@@ -209,7 +212,11 @@ class _Search:
         if goal == "fewest":
             least = min(f.used for f in fine)
             fine.sort(key=lambda f: (f.used, order_of(f)))
-            gap, unit = (float(least - few), "filters") if few < least else (fine[0].share - outcome.bound, "headroom")
+            gap, unit = (
+                (float(least - self.few), "filters")
+                if self.few < least
+                else (fine[0].share - outcome.bound, "headroom")
+            )
         else:
             fine.sort(key=order_of)
             gap, unit = fine[0].share - outcome.bound, "headroom"
@@ -219,24 +226,40 @@ class _Search:
 
     # --- goals ----------------------------------------------------------------------------------------------------
 
-    def _fewest(self, task: Task, pool: Pool, outcome: Outcome) -> int:
-        """Leaves allocations with the fewest filters in ``pool``; returns how many filters are proved to be needed."""
+    def _fewest(self, task: Task, pool: Pool, outcome: Outcome) -> None:
+        """Leaves allocations with the fewest filters in ``pool``, and in ``few`` how many are proved to be needed."""
         if task.items:
             improve(task, pool, self.watch, 4)
         needed = {int(row.argmax()) for row in task.allowed if row.sum() == 1}
         usable = np.flatnonzero(task.allowed.any(axis=0)).tolist()
-        few = max(1, len(needed)) if task.items else 0
+        self.few = max(1, len(needed)) if task.items else 0
+        enough = len(usable)
+        for size in range(self.few, len(usable) + 1):
+            first = Pool(task, changed=pool.changed)
+            for _, only in self._rivals(task, needed, usable, size)[:20]:
+                part = Pool(only, changed=pool.changed, aim=1.0)
+                improve(only, part, self.watch, 8)
+                pool.visited += part.visited
+                if part.share() <= 1.0:
+                    first.add(np.array([f.items for f in part.best], dtype=np.intp))
+                    break
+            if first.share() <= 1.0:
+                pool.best, pool.by_moves, enough = first.best, first.by_moves, size
+                break
         proved = True
-        for size in range(few, len(usable) + 1):
+        for size in range(self.few, enough + 1):
             rivals = self._rivals(task, needed, usable, size)
             found = Pool(task, changed=pool.changed)
+            if size == enough and pool.share() <= 1.0:
+                found.add(np.array([f.items for f in pool.best], dtype=np.intp))
             open_: list[float] = []
+            state = Outcome(0.0, False)
             for number, (bound, only) in enumerate(rivals):
                 ceiling = min(1.0, found.share())
                 if bound > ceiling + SAME:
                     continue
                 part, state = Pool(only, changed=found.changed), Outcome(bound, False)
-                last = number == len(rivals) - 1
+                last = size == enough and number == len(rivals) - 1
                 try:
                     watch = self.watch if last else self.watch.until(max(1.0, self.watch.left() / 2.0))
                     even(only, part, watch, state, ceiling=ceiling)
@@ -251,18 +274,18 @@ class _Search:
             if found.share() <= 1.0:
                 pool.best, pool.by_moves = found.best, found.by_moves
                 outcome.proved = proved and not open_
+                outcome.all_ties = len(rivals) == 1 and state.all_ties
                 outcome.bound = min([found.share(), *open_])
                 if self.watch.left() <= 0.0 and not outcome.proved:
                     self._stopped()
-                return few
+                return
             proved &= not open_
             if proved:
-                few = size + 1
+                self.few = size + 1
         if pool.share() <= 1.0:
             self._stopped()
-            return few
+            return
         even(task, pool, self.watch, outcome)  # nothing is admissible, and what is closest to it is told
-        return few
 
     def _rivals(self, task: Task, needed: set[int], usable: list[int], size: int) -> list[tuple[float, Task]]:
         """The choices of ``size`` filters, equals once, that may be enough, with the share that none is below."""
@@ -284,9 +307,9 @@ class _Search:
     def _admissible_start(self, task: Task, pool: Pool, outcome: Outcome) -> None:
         """Something admissible for ``quiet`` to start from; the whole search only if there is nothing at once."""
         for moves in range(3):
-            near = neighbours(task, moves)
+            near = neighbours(task, moves, 2000)
             if near is not None and near.size:
-                pool.add(near[:2000])
+                pool.add(near)
         improve(task, pool, self.watch, 6)
         if pool.share() > 1.0:
             even(task, pool, self.watch, outcome)
@@ -313,6 +336,8 @@ class _Search:
             self._stopped()
         if not complete and not self.note:
             self.note.append("too many")
+        if complete:
+            self.note.clear()
         if not self.margins:
             self._margin(next(iter(known.values())))
         found = sorted((known[k] for k in self.margins), key=lambda f: (-round(self.margins[f.items], 9), f.moves,
@@ -383,8 +408,12 @@ class _Search:
         count: int,
         finish: Callable[[Project], Result],
     ) -> Allocation:
-        checked = []
+        checked: list[Candidate] = []
         for one in found[:count]:
+            if checked and self.watch.cancelled():
+                self._stopped()
+                checked.append(self._candidate(one))
+                continue
             result = finish(moved(self.project, self._ids(one)))
             margin = _margin_of(result)
             checked.append(

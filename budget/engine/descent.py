@@ -17,8 +17,8 @@ _POWERS = (5, 9)  # shares are weighed by their power of 2^5, then of 2^9, in th
 _NEAR = 200_000  # allocations of a neighbourhood that are looked at
 
 
-def neighbours(task: Task, moved: int) -> Indices | None:
-    """All allocations of items (A, K) with just ``moved`` items elsewhere, as indices; None if there are too many.
+def neighbours(task: Task, moved: int, most: int = _NEAR) -> Indices | None:
+    """All allocations of items (A, K) with just ``moved`` items elsewhere, as indices; None if above ``most``.
 
     Items that have no place yet, or whose converters are apart, are among the moved.
     """
@@ -31,7 +31,7 @@ def neighbours(task: Task, moved: int) -> Indices | None:
     filters = task.wanted.size
     if extra > len(settled):
         return np.zeros((0, len(task.items)), dtype=np.intp)
-    if math.comb(len(settled), extra) * max(1, filters - 1) ** extra * filters ** len(homeless) > _NEAR:
+    if math.comb(len(settled), extra) * max(1, filters - 1) ** extra * filters ** len(homeless) > most:
         return None
     chosen = _rows(itertools.combinations(settled, extra), extra)
     shifts = _rows(itertools.product(range(1, filters), repeat=extra), extra)

@@ -32,6 +32,7 @@ from numpy.typing import NDArray
 from budget.engine.events import Logic, Phase, Segment, initial
 from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps, step_weights
 from budget.engine.statespace import StateSpace, saturation
+from budget.engine.waves import Waves
 
 Floats = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -44,10 +45,9 @@ _QUARTIC = 3e-5  # error of the quartic through five points is this times (rate 
 _GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
 _CONTRACTS = 0.15  # repetition instead of Newton
 _SWEEPS = 12
+_EVENT = 4  # steps that an event counts for in the limit
 _JUMP = 1e-9  # of the window: a step this short that the defect still rejects holds a jump, and is taken
 _BAND = 0.01  # of a threshold: within it the outcome is a coin toss
-_POINTS = 6000  # of a waveform; beyond, it is thinned
-_PENDING = 20000  # points of all waveforms together that wait to be sorted
 
 _THETA = np.array(NODES)
 _FINE = np.linspace(0.0, 1.0, 25)
@@ -139,9 +139,8 @@ class Batch:
             self.rate, window, driven[:, 1:], shown[q], self.direct[q], shown[:outputs], self.direct[:outputs]
         )
         self.jump = window * _JUMP
-        self.store: list[tuple[Indices, Floats, Floats]] = []
-        self.stored = 0
-        self.waves = [(np.zeros(0), np.zeros((0, self.watch))) for _ in members]
+        self.decay = np.exp(self.rate * self.tables.length[:: 2 * PER_OCTAVE, None])  # (times, R) for a look ahead
+        self.waves = Waves(len(members), self.watch)
         self.outcomes: list[Outcome | None] = [None] * len(members)
         self._begin(modal)
 
@@ -226,8 +225,10 @@ class Batch:
         self.bend[i] = 0.0
         self.drive[i] = (g[0] @ self.drive_real).view(np.complex128)
         self.y[i] = seen + self.direct @ g[0]
-        free = self._free(rows)[0]
-        self.hint[i] = max(0.2 * float((self.weight_seen[: self.meters] * np.abs(free)).max()), 1e-300)
+        to_come = (
+            np.ascontiguousarray(self._free(rows) * self.decay).view(np.float64) @ self.show_real[:, : self.meters]
+        )
+        self.hint[i] = max(0.5 * float(np.abs(to_come).max()), 1e-300)
         self._record(rows, self.t[rows][:, None], self.y[rows][:, None, : self.watch])
 
     def _nonlinear(self, q: Floats, t: Floats, rows: Indices | slice) -> tuple[Floats, Floats]:
@@ -457,25 +458,24 @@ class Batch:
         theta = (instant - float(self.t[i])) / h
         theta = min(max(theta, 0.0), 1.0)
         crossing = -1
-        bracket = (0.0, 0.0)
+        bracket, chord = (0.0, 0.0), 0.0
         for j in np.flatnonzero(met).tolist():
             upper, lower = self.ph.upper[i, j], self.ph.lower[i, j]
             curve = values[:, self.terminals.start + j]
             beyond = curve >= upper if upper < np.inf else curve < lower
             k = int(beyond.argmax())
             if k == 0:
-                at, span = 0.0, (0.0, 0.0)
-            else:
-                limit = upper if upper < np.inf else lower
-                part = (limit - curve[k - 1]) / (curve[k] - curve[k - 1])
-                at, span = (
-                    float(_FINE[k - 1] + part * (_FINE[k] - _FINE[k - 1])),
-                    (float(_FINE[k - 1]), float(_FINE[k])),
-                )
+                theta, crossing = 0.0, j
+                break
+            limit = float(upper if upper < np.inf else lower)
+            low, high = float(_FINE[k - 1]), float(_FINE[k])
+            slope = float(curve[k] - curve[k - 1]) / (high - low)
+            at = low + (limit - float(curve[k - 1])) / slope
             if at < theta:
-                theta, crossing, bracket = at, j, span
+                theta, crossing, bracket, chord = at, j, (low, high), slope
         if crossing >= 0 and theta > 0.0:
-            theta = self._refine(i, h, ends, crossing, theta, bracket)
+            theta = self._refine(i, h, ends, crossing, theta, bracket, chord)
+        self.used[i] += _EVENT
         if theta > 0.0:
             nodes = theta * _THETA
             z, y, along = self._exact(i, h, ends, nodes)
@@ -499,27 +499,24 @@ class Batch:
                 self.t[i] = instant
         self._happen(i, crossing, instant if crossing < 0 else -1.0)
 
-    def _refine(self, i: int, h: float, ends: Floats, j: int, theta: float, bracket: tuple[float, float]) -> float:
-        """The point of a step at which terminals ``j`` meet their threshold, on the exact solution."""
+    def _refine(
+        self, i: int, h: float, ends: Floats, j: int, theta: float, bracket: tuple[float, float], chord: float
+    ) -> float:
+        """The share of a step at which terminals ``j`` meet their threshold, on the exact solution, by chords."""
         upper = self.ph.upper[i, j]
         limit = float(upper if upper < np.inf else self.ph.lower[i, j])
         row = self.terminals.start + j
         low, high = bracket
-        both = self._exact(i, h, ends, np.array([low, high]))[1][:, row] - limit
-        f_low, f_high = float(both[0]), float(both[1])
-        if f_low * f_high > 0.0:  # a grazing touch, seen by the quartic only
-            return theta
-        for _ in range(40):
+        for _ in range(8):
             f = float(self._exact(i, h, ends, np.array([theta]))[1][0, row]) - limit
-            if abs(f) <= 1e-12 * limit or (high - low) * h <= 1e-15 * max(float(self.t[i]), h):
+            if abs(f) <= 1e-10 * limit or high - low <= 1e-12:
                 break
-            if (f > 0.0) == (f_high > 0.0):
-                high, f_high = theta, f
+            if (f > 0.0) == (upper < np.inf):  # beyond the threshold already
+                high = theta
             else:
-                low, f_low = theta, f
-            theta = low - f_low * (high - low) / (f_high - f_low)
-            if not low < theta < high or high - low > 0.02:
-                theta = 0.5 * (low + high) if not low < theta < high else theta
+                low = theta
+            step = theta - f / chord
+            theta = step if low < step < high else 0.5 * (low + high)
         return theta
 
     def _happen(self, i: int, crossing: int, instant: float) -> None:
@@ -563,23 +560,7 @@ class Batch:
 
     def _record(self, rows: Indices | slice, t: Floats, y: Floats) -> None:
         """Keep points of the waveforms: times ``t`` (m, T) [s] and outputs ``y`` (m, T, W)."""
-        self.store.append((self.member[rows], t, y))
-        self.stored += t.size
-        if self.stored > _PENDING:
-            self._sort()
-
-    def _sort(self) -> None:
-        for who in range(len(self.members)):
-            chosen = [(t[k], y[k]) for m, t, y in self.store for k in np.flatnonzero(m == who).tolist()]
-            if chosen:
-                time, values = self.waves[who]
-                time = np.concatenate((time, *(t for t, _ in chosen)))
-                values = np.concatenate((values, *(y for _, y in chosen)))
-                while time.size > _POINTS:
-                    time, values = thinned(time, values)
-                self.waves[who] = time, values
-        self.store.clear()
-        self.stored = 0
+        self.waves.add(self.member[rows], t, y)
 
     def _compress(self) -> None:
         alive = np.array([self.outcomes[k] is None for k in self.member.tolist()], dtype=np.bool_)
@@ -601,25 +582,10 @@ class Batch:
                 pairs = zip(self.outcomes, self.members, strict=True)
                 done = sum(m.segments[-1].end for o, m in pairs if o is not None)
                 tick(min(1.0, (done + float(self.t.sum())) / total))
-        self._sort()
         found = [o for o in self.outcomes if o is not None]
-        for outcome, (time, values) in zip(found, self.waves, strict=True):
+        for outcome, (time, values) in zip(found, self.waves.sorted(), strict=True):
             outcome.time, outcome.values = time, values
         return found
-
-
-def thinned(time: Floats, values: Floats) -> tuple[Floats, Floats]:
-    """Half as many points: of four in a row the least and the greatest of each output, in their order.
-
-    ``time`` (K,) [s], ``values`` (K, W) [A] and [V]; no peak is lost, and none moves by more than three points.
-    """
-    whole = time.size // 4 * 4
-    block = values[:whole].reshape(-1, 4, values.shape[1])
-    low, high = block.min(axis=1), block.max(axis=1)
-    rising = block.argmin(axis=1) <= block.argmax(axis=1)
-    pair = np.stack((np.where(rising, low, high), np.where(rising, high, low)), axis=1)
-    kept = np.concatenate((pair.reshape(-1, values.shape[1]), values[whole:]))
-    return np.concatenate((time[:whole].reshape(-1, 4)[:, (0, 3)].ravel(), time[whole:])), kept
 
 
 def _as_real(matrix: Complex) -> Floats:

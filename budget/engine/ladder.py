@@ -23,7 +23,7 @@ SMALLEST = 1e-60  # siemens or ohm: a lossless resonance met exactly stays finit
 
 def impedance(branch: Branch, w: Floats) -> Complex:
     """R + (jwL || Rp || 1/jwCp) + 1/jwC of one element [ohm], shape (K,); absent parts drop out."""
-    z: Complex = impedances((branch,), w)[0]
+    z: Complex = impedances((branch,), w.ravel())[0].reshape(w.shape)
     return z
 
 

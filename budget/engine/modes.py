@@ -7,7 +7,7 @@ that is a polynomial in time over the step, z is then known in closed form throu
     integral of e^(r (T - s)) s^k ds from 0 to T = k! T^(k+1) phi_(k+1)(r T)
 
 (Hochbruck & Ostermann, "Exponential integrators", Acta Numerica 19, 2010, section 2). Of a pair of conjugate modes one
-is kept, with twice its weight. The price of modes is their condition: where A is close to having no basis of
+is kept. The price of modes is their condition: where A is close to having no basis of
 eigenvectors (critical damping) V is close to singular, and rounding grows by cond(V). ``condition`` tells.
 
 A table of steps in powers of 2^(1/4) keeps what depends on the step length alone; rows are made when first used.
@@ -59,21 +59,27 @@ def modes(A: Floats, weight: Floats) -> Modes:  # noqa: N803
     if not A.size:
         nothing = np.zeros((0, 1), dtype=np.complex128)
         return Modes(np.array([-1.0 + 0j]), nothing, nothing.T.copy(), 1.0)
-    found, basis = np.linalg.eig(weight[:, None] * A / weight)
+    found, vectors = np.linalg.eig(weight[:, None] * A / weight)
     rate: Complex = found.astype(np.complex128)
-    vectors: Complex = basis.astype(np.complex128)
-    inverse: Complex
+    kept = np.flatnonzero(rate.imag >= 0.0)
+    rate, kept_vectors = rate[kept], vectors[:, kept].astype(np.complex128)
+    paired = np.flatnonzero(rate.imag > 0.0)
+    # x = Re(v) a + Im(v) b is Re(v z) with z = a - jb. The real basis keeps the residual of the inverse at rounding
+    # also where a pair is about to merge, and the inverse of the complex one would not be conjugate to all digits.
+    basis = np.concatenate((kept_vectors.real, kept_vectors.imag[:, paired]), axis=1)
+    basis_scale = np.linalg.norm(basis, axis=0)
+    left = np.zeros((rate.size, weight.size), dtype=np.complex128)
     try:
-        inverse = np.linalg.inv(vectors).astype(np.complex128)
-        condition = float(np.linalg.norm(vectors, 2) * np.linalg.norm(inverse, 2))
+        inverse = np.linalg.inv(basis / basis_scale)
+        condition = float(np.linalg.norm(basis / basis_scale, 2) * np.linalg.norm(inverse, 2))
+        inverse = inverse / basis_scale[:, None]
+        left += inverse[: rate.size]
+        left[paired] -= 1j * inverse[rate.size :]
     except np.linalg.LinAlgError:
-        inverse, condition = np.zeros_like(vectors), np.inf
+        condition = np.inf
     rate.real = np.minimum(rate.real, 0.0)  # the network is passive: growth is rounding
-    kept = rate.imag >= 0.0
-    share = np.where(rate.imag[kept] > 0.0, 2.0, 1.0)
-    right: Complex = vectors[:, kept] * (share / weight[:, None])
-    left: Complex = inverse[kept] * weight
-    return Modes(rate[kept], right, left, condition)
+    right: Complex = kept_vectors / weight[:, None]
+    return Modes(rate, right, left * weight, condition)
 
 
 def phi(a: Complex) -> tuple[Complex, Complex, Complex, Complex]:

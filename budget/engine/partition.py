@@ -8,9 +8,9 @@ are then joined from such sets, some filters from the front and the others from 
 (after Korf, "Multi-way number partitioning", IJCAI 2009, and Schreiber, Korf & Moffitt, "Optimal multi-way number
 partitioning", J. ACM 65, 2018; from memory).
 
-Sets are bit masks, the first item highest. Equal filters and equal items are counted once: the masks of equal filters
-fall, and equal items go to filters that rise. Both at once are safe: of all renamings of a split, the one whose table
-of filters by items is greatest when read row by row has both properties.
+Sets are bit masks, the first item highest. Equal filters are counted once: their masks fall. So are equal items: they
+go to filters that rise. Both at once are safe: of all renamings of a split, the one whose table of filters by items is
+greatest when read row by row has both properties (others may have them too, and then it comes more than once).
 """
 
 from __future__ import annotations

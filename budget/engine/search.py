@@ -21,7 +21,8 @@ from budget.engine.partition import Split, TooWideError, splits
 from budget.engine.placing import Task
 from budget.engine.pool import KEPT, SAME, Found, Pool, StoppedError, Watch, filter_classes, item_classes
 
-_BEYOND = 1e9
+_BEYOND = 1e9  # times the least share: no rating matters any more
+_FEW = 20_000  # allocations near the present one that are looked at first
 
 
 @dataclass(slots=True)
@@ -53,6 +54,7 @@ def even(
         pool.add(np.zeros((1, 0), dtype=np.intp))
         outcome.proved = True
         return
+    improve(task, pool, watch, 1)  # so that there is something at once
     outcome.bound = root = root_bound(task)
     pool.aim = root
     told(root)
@@ -66,10 +68,11 @@ def even(
         outcome.proved = True
         return
     for moved in range(3):
-        near = neighbours(task, moved)
+        near = neighbours(task, moved, _FEW)
         if near is None:
             break
         if near.size:
+            watch.check()
             at = fit(task, max(root, 1.0) * 2.0)
             if at is not None:
                 near = near[np.argsort(least_shares(task, at, near), kind="stable")[:200]]
@@ -168,7 +171,10 @@ def decide(task: Task, watch: Watch) -> tuple[Found | None, bool]:
 
 
 def split_of(task: Task, at: Fit) -> tuple[Split, Indices, Indices, Indices]:
-    """The split of items with a choice; with the items and filters in its order, and the homes of the other items."""
+    """The split of items with a choice, and indices: its items (I,) and filters (F,), and where the others are (K,).
+
+    The last is -1 for items with a choice.
+    """
     filters = at.caps.size
     choice = at.allowed.sum(axis=1) > 1
     fixed = np.where(choice, -1, at.allowed.argmax(axis=1))

@@ -19,6 +19,7 @@ from budget.project.document import Path
 from budget.project.problems import Problem, found, printable
 from budget.project.schema import Field
 
+LARGEST, SMALLEST = 1e15, 1e-24  # in SI units, of any quantity: what lies beyond would only make overflows
 MAX_ROWS = 20_000  # of one table of numbers; a longer one is a mistake
 
 
@@ -74,7 +75,9 @@ def quantity_value(spec: Field, raw: Any) -> float:
 
 
 def check_limits(spec: Field, value: float, raw: Any) -> None:
-    """Raise ValueError, a sentence, where ``value`` lies outside the limits of its field."""
+    """Raise ValueError, a sentence, where ``value`` lies outside the limits of its field, or of what is real."""
+    if abs(value) > LARGEST or 0.0 < abs(value) < SMALLEST:
+        raise ValueError(f"{found(raw)} is beyond anything on a real bus; {expectation(spec)} was expected.")
     low_missed = spec.low is not None and (value <= spec.low if spec.above else value < spec.low)
     high_missed = spec.high is not None and (value >= spec.high if spec.below else value > spec.high)
     if low_missed or high_missed:

@@ -21,7 +21,7 @@ NESTED: dict[str, dict[str, Any]] = {
 }
 LISTS: dict[str, list[Any]] = {
     "output": [OUTPUT],
-    "dm": [ELEMENT, {"shunt": {"C": "4.7 uF", "R": "6 mohm"}}],
+    "dm": [ELEMENT, {"shunt": {"C": "4.7 uF", "R": "6 mohm"}}, {"shunt": {"C": "22 uF", "R": "600 mohm"}}],
     "cm": [{"series": {"L": "1 mH"}}, {"shunt": {"C": "10 nF"}}],
     "input": [{"shunt": {"C": "10 uF", "R": "5 mohm"}}],
     "attenuation": [["100 kHz", 40, 30], ["10 MHz", 60, 50]],
@@ -41,6 +41,7 @@ ROWS: dict[str, dict[str, Any]] = {
         "efficiency": "88 %",
         "min_input": "16 V",
         "max_input": "40 V",
+        "max_surge": "60 V",
     },
     "case": {"id": "case1", "name": ""},
     "limit": {"name": "own", "unit": "dBuV", "setup": "lisn-50uH", "points": LISTS["points"]},

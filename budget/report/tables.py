@@ -44,8 +44,8 @@ def as_json(result: Result, warnings: Sequence[str]) -> dict[str, Any]:
             }
             for e in result.energy
         ],
-        "hold_up": [{"id": h.id, "case": h.case, "capacitance": h.capacitance} for h in result.hold_up],
         "warnings": list(warnings),
+        "hold_up": [{"id": h.id, "case": h.case, "capacitance": h.capacitance} for h in result.hold_up],
     }
 
 

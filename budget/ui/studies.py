@@ -71,6 +71,8 @@ _EXPORTS: dict[str, tuple[Callable[[Any], str], str]] = {
 
 def export(desk: Desk) -> None:
     """Write what the view draws as CSV beside the project."""
+    if desk.view_name not in _EXPORTS:
+        raise ProjectError("this view has no numbers to write; emissions (a), switch-on (J) and stability (Y) have.")
     make, word = _EXPORTS[desk.view_name]
     text = make(desk.context())
     if text.count("\n") < 2:

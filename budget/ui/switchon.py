@@ -49,6 +49,11 @@ def shown_run(context: Context) -> tuple[Result, Run] | None:
     return result, next((run for run in runs if (run.case, run.event) == at), runs[0])
 
 
+def symbol(k: int) -> str:
+    """The letter of a curve; after all of them they begin again."""
+    return SYMBOLS[k % len(SYMBOLS)]
+
+
 def switch_on(context: Context) -> View:
     """The view: a picture over time, and bus, filters and converters with their peaks against the limits."""
     found = shown_run(context)
@@ -119,12 +124,12 @@ def _rows(result: Result, run: Run) -> list[Row]:
             _over(entry.i2t, part.inrush_i2t),
             _over(entry.peak_voltage, part.max_surge),
         )
-        name = f"{SYMBOLS[1 + k]} {entry.id} {part.name}"
+        name = f"{symbol(1 + k)} {entry.id} {part.name}"
         rows.append(_row(("filter", entry.id), name, values, tones, "current into it, voltage at its output"))
     units = {c.id: (k, c) for k, c in enumerate(project.converters)}
     for unit in run.converters:
         k, converter = units[unit.id]
-        name = f"{SYMBOLS[k]} {unit.id} {converter.name}"
+        name = f"{symbol(k)} {unit.id} {converter.name}"
         start, limit = _seconds(unit.runs_at), converter.max_surge
         values = ("", "", "", "", _volts(unit.peak_voltage), _volts(limit), start, unit.state)
         tones = ("", "", _over(unit.peak_voltage, limit))
@@ -161,19 +166,22 @@ def _picture(context: Context, result: Result, run: Run) -> Plot | None:
     traces: list[Trace] = []
     dash = "-" if context.ascii_only else "\u2500"
     if context.options.voltages:
-        for k, unit in enumerate(result.project.converters):
-            y = wave.terminals[:, k].tolist()
-            traces.append(Trace(unit.id, SYMBOLS[k % len(SYMBOLS)], time, y, tone=f"trace{k % 6}"))
-            entry = next((u for u in run.converters if u.id == unit.id), None)
-            if entry is not None and entry.runs_at is not None:
+        units = {c.id: k for k, c in enumerate(result.project.converters)}
+        for column, entry in enumerate(run.converters):
+            k = units[entry.id]
+            y = wave.terminals[:, column].tolist()
+            traces.append(Trace(entry.id, symbol(k), time, y, tone=f"trace{k % 6}"))
+            if entry.runs_at is not None:
                 near = min(range(len(time)), key=lambda n, at=entry.runs_at: abs(time[n] - at))  # type: ignore[misc]
                 traces.append(Trace("starts", "^", [entry.runs_at], [y[near]], "dots", "head"))
         limits = sorted({c.max_surge for c in result.project.converters if c.max_surge is not None})[:1]
     else:
         traces.append(Trace("bus", SYMBOLS[0], time, wave.bus.tolist(), tone="trace0"))
-        for k, part in enumerate(result.project.filters):
-            y = wave.filters[:, k].tolist()
-            traces.append(Trace(part.id, SYMBOLS[1 + k], time, y, tone=f"trace{(k + 1) % 6}"))
+        filters = {f.id: k for k, f in enumerate(result.project.filters)}
+        for column, part in enumerate(run.filters):
+            k = filters[part.id]
+            y = wave.filters[:, column].tolist()
+            traces.append(Trace(part.id, symbol(1 + k), time, y, tone=f"trace{(k + 1) % 6}"))
         bus_limit = result.project.bus.inrush_peak
         limits = sorted({f.inrush_peak for f in result.project.filters if f.inrush_peak is not None})[:1]
         limits += [bus_limit] if bus_limit is not None else []
@@ -192,14 +200,13 @@ def csv_waves(context: Context) -> str:
     found = shown_run(context)
     if found is None or found[1].wave is None:
         return ""
-    result, run = found
+    run = found[1]
     wave = run.wave
     assert wave is not None
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
-    project = result.project
-    head = ["time", "bus current", *(f"{f.id} current" for f in project.filters)]
-    head += [f"{f.id} voltage" for f in project.filters] + [f"{c.id} voltage" for c in project.converters]
+    head = ["time", "bus current", *(f"{f.id} current" for f in run.filters)]
+    head += [f"{f.id} voltage" for f in run.filters] + [f"{c.id} voltage" for c in run.converters]
     writer.writerow(head)
     columns = [wave.time[:, None], wave.bus[:, None], wave.filters, wave.outputs, wave.terminals]
     import numpy as np

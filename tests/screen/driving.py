@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from functools import cache
+from itertools import islice
 from pathlib import Path
 
 from budget.project import store
 from budget.project.document import Document
-from budget.session import Outcome, Session, calculate, open_file
-from budget.ui.desk import Desk
+from budget.session import Outcome, Session, calculate, open_file, stages
+from budget.ui.desk import Desk, Work
 from budget.ui.paint import frame, plain
 
 PROJECTS = Path(__file__).parents[2] / "projects"
 
 # One of everything: a bus with all fields, a filter of each sort, curves, tables, shelf parts, a row without a filter,
-# a failing, a thin and a fine check, cases with every sort of load, a limit line.
+# a failing, a thin and a fine check, cases with every sort of load, a limit line. Well damped and with a short window,
+# so that its switch-on is calculated in no time.
 SMALL = """\
 format = 1
 
@@ -26,6 +29,7 @@ note = "A note that is longer than the line of a small terminal, so that somewhe
 filter_load = "80 %"
 converter_load = "80 %"
 emissions = ["CE102", "own"]
+inrush_window = "1 ms"
 
 [bus]
 name = "bench"
@@ -35,15 +39,15 @@ high = "29 V"
 rating = "20 A"
 resistance = "20 mohm"
 surge = "50 V"
-surge_time = "12 ms"
-surge_rise = "1 ms"
+surge_time = "1 ms"
+surge_rise = "200 us"
 
 [[filter]]
 id = "FA"
 name = "ladders"
 rated_current = "3 A"
 max_voltage = "40 V"
-dm = [{ series = { L = "4.7 uH", R = "8 mohm" } }, { shunt = { C = "4.7 uF", R = "6 mohm" } }]
+dm = [{ series = { L = "4.7 uH", R = "8 mohm" } }, { shunt = { C = "22 uF", R = "500 mohm" } }]
 cm = [{ series = { L = "1 mH" } }, { shunt = { C = "10 nF" } }]
 
 [[filter]]
@@ -70,7 +74,7 @@ efficiency = [["20 %", "84 %"], ["60 %", "91 %"], ["100 %", "92 %"]]
 min_input = "16 V"
 max_input = "40 V"
 lead = { R = "5 mohm", L = "300 nH" }
-input = [{ series = { L = "1 uH", R = "2 mohm" } }, { shunt = { C = "10 uF", R = "5 mohm" } }]
+input = [{ series = { L = "1 uH", R = "2 mohm" } }, { shunt = { C = "10 uF", R = "150 mohm" } }]
 frequency = "300 kHz"
 chop = { duty = "40 %", rise = "30 ns", fall = "30 ns" }
 cm = { capacitance = "60 pF", swing = "60 V", rise = "30 ns", fall = "30 ns" }
@@ -122,7 +126,7 @@ bandwidth = [["10 kHz", "150 kHz", "1 kHz"], ["150 kHz", "30 MHz", "10 kHz"]]
 [shelf.filter.bought]
 rated_current = "2 A"
 max_voltage = "60 V"
-dm = [{ series = { L = "10 uH", R = "30 mohm" } }, { shunt = { C = "1 uF" } }]
+dm = [{ series = { L = "10 uH", R = "30 mohm" } }, { shunt = { C = "10 uF", R = "400 mohm" } }]
 cm = [{ series = { L = "2 mH" } }]
 note = "lent by the shelf"
 
@@ -207,25 +211,51 @@ class Log:
     left: int = 0
     clips: list[str] = field(default_factory=list)
     calculated: int = 0
+    jobs: list[str] = field(default_factory=list)
+    shares: list[float] = field(default_factory=list)
 
 
-def desk_of(session: Session, *, ascii_only: bool = True, live: bool = True) -> tuple[Desk, Log]:
-    """A desk on ``session``; with ``live`` every edit is calculated at once, else never."""
+def desk_of(
+    session: Session,
+    *,
+    ascii_only: bool = True,
+    live: bool = True,
+    everything: bool = False,
+    known: Outcome | None = None,
+) -> tuple[Desk, Log]:
+    """A desk on ``session``; with ``live`` every edit is calculated at once, else never.
+
+    An edit is calculated without the switch-on, the slow part, unless ``everything`` is asked for. ``known`` are the
+    results of the document as it stands. What a command wants calculated aside is done at once.
+    """
     log = Log()
     desk = Desk(session, ascii_only)
 
     def run() -> None:
         log.calculated += 1
         if live:
-            desk.accept(calculate(session.snapshot()))
+            desk.accept(calculate(session.snapshot()) if everything else without_switch_on(session))
 
     def leave() -> None:
         log.left += 1
 
-    desk.calculate, desk.leave, desk.clip = run, leave, log.clips.append
-    run()
+    def job(work: Work) -> None:
+        log.jobs.append(work.label)
+        work.done(work.run(lambda: False, log.shares.append))
+
+    desk.calculate, desk.leave, desk.clip, desk.start_job = run, leave, log.clips.append, job
+    if known is None:
+        run()
+    elif live:
+        desk.accept(replace(known, generation=session.generation))
     log.calculated = 0
     return desk, log
+
+
+def without_switch_on(session: Session) -> Outcome:
+    """All results but those that take long."""
+    outcome = list(islice(stages(session.snapshot()), 3))[-1]
+    return replace(outcome, complete=True)
 
 
 def session_of(text: str) -> Session:
@@ -234,8 +264,32 @@ def session_of(text: str) -> Session:
     return Session(loaded.document, shelves=loaded.shelves, file_problems=loaded.problems, saved=loaded.document)
 
 
+@cache
+def results_of(text: str) -> Outcome:
+    """All results of a text, calculated once."""
+    return calculate(session_of(text).snapshot())
+
+
 def small(name: str = "small", *, ascii_only: bool = True) -> Desk:
-    return desk_of(session_of(TEXTS[name]), ascii_only=ascii_only)[0]
+    return desk_of(session_of(TEXTS[name]), ascii_only=ascii_only, known=results_of(TEXTS[name]))[0]
+
+
+@cache
+def _demo(name: str) -> tuple[Session, Outcome]:
+    session = open_file(PROJECTS / f"{name}.toml")
+    return session, calculate(session.snapshot())
+
+
+def demo(name: str, *, ascii_only: bool = True, everything: bool = False) -> tuple[Desk, Log]:
+    """A desk on a project of the repository, whose results are calculated once for all tests."""
+    first, outcome = _demo(name)
+    session = Session(first.document, None, first.shelves, first.file_problems, saved=first.document)
+    return desk_of(session, ascii_only=ascii_only, everything=everything, known=outcome)
+
+
+def written(text: str, *, ascii_only: bool = True, everything: bool = False) -> tuple[Desk, Log]:
+    """A desk on a text; its results are calculated once for all tests."""
+    return desk_of(session_of(text), ascii_only=ascii_only, everything=everything, known=results_of(text))
 
 
 def on_file(path: Path) -> tuple[Desk, Log]:

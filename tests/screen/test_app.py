@@ -49,7 +49,7 @@ def lines(app: BudgetApp) -> list[str]:
 
 def test_results_arrive_and_are_painted() -> None:
     async def check(app: BudgetApp, hand: Pilot[int]) -> None:
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.pause()
         assert "FAIL" in lines(app)[0]
         assert "144%" in "\n".join(lines(app))
@@ -62,7 +62,7 @@ def test_keys_reach_the_desk_in_their_order() -> None:
         await hand.press(*["l", "down", "down", "down", "5", "full_stop", "2", "enter", "7", "enter"])
         case = app.desk.session.document.data["case"][0]["load"]
         assert (case["C1"], case["C2"], case["C3"]) == (5.2, 7, "5 W")
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.pause()
         assert lines(app) == [plain(line) for line in app.board.lines]
 
@@ -71,9 +71,9 @@ def test_keys_reach_the_desk_in_their_order() -> None:
 
 def test_an_edit_is_calculated_and_told() -> None:
     async def check(app: BudgetApp, hand: Pilot[int]) -> None:
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.press("down", "down", "greater_than_sign")
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.pause()
         assert lines(app)[-2].startswith("C1 behind FB: ")
 
@@ -138,7 +138,7 @@ def test_a_file_changed_by_another_is_told(tmp_path: Path) -> None:
     file.write_text(TEXTS["small"], encoding="utf-8")
 
     async def check(app: BudgetApp, hand: Pilot[int]) -> None:
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         app.look_at_file()
         assert "changed on disk" not in app.desk.message
         file.write_text(TEXTS["small"].replace("bench", "desk"), encoding="utf-8")
@@ -153,12 +153,12 @@ def test_late_results_look_stale() -> None:
     gate = threading.Event()
     real = app_module.stages
 
-    def slow(snapshot: Snapshot) -> Iterator[Outcome]:
+    def slow(snapshot: Snapshot, *told: object) -> Iterator[Outcome]:
         gate.wait(20)
         yield from real(snapshot)
 
     async def check(app: BudgetApp, hand: Pilot[int]) -> None:
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         app_module.stages = slow  # type: ignore[assignment]
         await hand.press("l", "down", "down", "down", "9", "enter")
         await until(hand, lambda: app.desk.pending)
@@ -168,7 +168,7 @@ def test_late_results_look_stale() -> None:
         assert "~" in lines(app)[2]
         await hand.press("down")  # keys are taken while it calculates
         gate.set()
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.pause()
         assert "~" not in lines(app)[2]
 
@@ -182,17 +182,17 @@ def test_late_results_look_stale() -> None:
 def test_an_error_of_the_calculation_is_told_and_the_sheet_stays_open() -> None:
     real = app_module.stages
 
-    def broken(snapshot: Snapshot) -> Iterator[Outcome]:
+    def broken(snapshot: Snapshot, *told: object) -> Iterator[Outcome]:
         raise ZeroDivisionError("made for the test")
 
     async def check(app: BudgetApp, hand: Pilot[int]) -> None:
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         app_module.stages = broken  # type: ignore[assignment]
         await hand.press("down", "D")
         await until(hand, lambda: "fault of this program" in app.desk.message)
         app_module.stages = real
         await hand.press("u")
-        await until(hand, lambda: app.desk.session.fresh)
+        await until(hand, lambda: app.desk.session.complete)
         await hand.pause()
         assert lines(app)[-2].startswith("undone: duplicated FA")
 
