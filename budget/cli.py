@@ -16,9 +16,10 @@ from budget import __version__
 
 if TYPE_CHECKING:
     from budget.engine.evaluate import Result
+    from budget.engine.model import Project
 
 OK, FAILED, UNUSABLE = 0, 1, 2
-COMMANDS = ("check", "new")
+COMMANDS = ("check", "new", "allocate")
 FORMATS = ("text", "json", "markdown", "csv")
 
 _EXAMPLES = """\
@@ -28,9 +29,18 @@ examples:
   budget check bus.toml           every check, worst first; exit 1 if one fails
   budget check bus.toml --strict --case climb --line low
   budget check *.toml --format json
+  budget allocate bus.toml        propose which converter goes behind which filter
   budget new bus.toml             write a commented project to start from
 
 Results are estimates. Work on powered or charged hardware only as local codes and licensed practice require.
+"""
+_ALLOCATE_EXAMPLES = """\
+examples:
+  budget allocate bus.toml
+  budget allocate bus.toml --goal fewest --keep CV1 CV2 --apart CV9,CV10
+  budget allocate bus.toml --goal quiet --format json
+
+exit status: 0 there is an admissible allocation; 1 there is none; 2 the file cannot be used
 """
 _CHECK_EXAMPLES = """\
 examples:
@@ -54,12 +64,14 @@ def _run(arguments: list[str]) -> int:
     command = arguments[0] if arguments else ""
     if command == "check":
         return _check(_check_parser().parse_intermixed_args(arguments[1:]))
+    if command == "allocate":
+        return _allocate(_allocate_parser().parse_args(arguments[1:]))
     if command == "new":
         return _new(_new_parser().parse_args(arguments[1:]))
     parser = _sheet_parser()
     options = parser.parse_args(arguments)
     if len(options.files) > 1:
-        commands = " and ".join(COMMANDS)
+        commands = ", ".join(COMMANDS)
         parser.error(f"the sheet opens one file, and '{options.files[0]}' is no command; the commands are {commands}")
     if options.version:
         return OK if _print(f"budget {__version__}\n") else UNUSABLE
@@ -111,6 +123,35 @@ def _check_parser() -> argparse.ArgumentParser:
         "--line", action="append", choices=("low", "nominal", "high"), help="only this line; may be given again"
     )
     return check
+
+
+def _allocate_parser() -> argparse.ArgumentParser:
+    parser = _Parser(
+        prog="budget allocate",
+        description="Propose which converter goes behind which filter; the file stays as it is.",
+        epilog=_ALLOCATE_EXAMPLES,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        allow_abbrev=False,
+    )
+    pair = "A,B"
+    parser.add_argument("file", metavar="FILE", help="the project")
+    parser.add_argument(
+        "--goal", choices=("even", "fewest", "quiet"), default="even", help="what is best (default: even)"
+    )
+    parser.add_argument("--keep", nargs="+", action="extend", default=[], metavar="ID", help="converters that stay")
+    parser.add_argument(
+        "--apart", action="append", default=[], metavar=pair, help="two converters not behind one filter"
+    )
+    parser.add_argument(
+        "--together", action="append", default=[], metavar=pair, help="two converters behind one filter"
+    )
+    parser.add_argument(
+        "--ban", action="append", default=[], metavar="CV,FL", help="a converter not behind this filter"
+    )
+    parser.add_argument("--most", type=int, metavar="N", help="at most so many converters behind each filter")
+    parser.add_argument("--time", type=float, default=10.0, metavar="S", help="seconds to search (default: 10)")
+    parser.add_argument("--format", choices=("text", "json"), default="text", help="how to print (default: text)")
+    return parser
 
 
 def _new_parser() -> argparse.ArgumentParser:
@@ -212,18 +253,10 @@ def check_file(
 
     from budget.engine.evaluate import evaluate, evaluate_dc
     from budget.engine.model import LINES
-    from budget.project import store
-    from budget.project.build import build
     from budget.project.problems import ProjectError, printable
     from budget.report import words
 
-    loaded = store.load(path)
-    built = build(loaded.document, loaded.shelves)
-    problems = (*loaded.problems, *built.problems)
-    errors = [p.sentence() for p in problems if p.error]
-    if errors or built.project is None:
-        raise ProjectError(f"{path} cannot be used:\n" + "\n".join(f"  {path}: {e}" for e in errors))
-    project = built.project
+    project, warnings = project_of(path)
     if cases:
         known = [case.id for case in project.cases]
         for wanted in cases:
@@ -234,9 +267,22 @@ def check_file(
         project = replace(project, cases=tuple(case for case in project.cases if case.id in cases))
     chosen = tuple(k for k, line in enumerate(LINES) if not lines or line in lines)
     result = evaluate_dc(project, chosen) if dc else evaluate(project, chosen)
-    warnings = [p.sentence() for p in problems if not p.error]
-    warnings += [words.engine_warning(code) for code in result.warnings]
-    return result, warnings
+    return result, [*warnings, *(words.engine_warning(code) for code in result.warnings)]
+
+
+def project_of(path: Path) -> tuple[Project, list[str]]:
+    """The project of a file, and warnings as sentences; raises ProjectError with all problems, a sentence a line."""
+    from budget.project import store
+    from budget.project.build import build
+    from budget.project.problems import ProjectError
+
+    loaded = store.load(path)
+    built = build(loaded.document, loaded.shelves)
+    problems = (*loaded.problems, *built.problems)
+    errors = [p.sentence() for p in problems if p.error]
+    if errors or built.project is None:
+        raise ProjectError(f"{path} cannot be used:\n" + "\n".join(f"  {path}: {e}" for e in errors))
+    return built.project, [p.sentence() for p in problems if not p.error]
 
 
 def _new(options: argparse.Namespace) -> int:
@@ -256,6 +302,44 @@ def _new(options: argparse.Namespace) -> int:
         return UNUSABLE
     name = f"./{path}" if str(path) in COMMANDS or str(path).startswith("-") else str(path)
     return OK if _print(words.clean(f"{path} is written; 'budget {shlex.quote(name)}' opens it.") + "\n") else UNUSABLE
+
+
+def _allocate(options: argparse.Namespace) -> int:
+    from budget.project.problems import ProjectError
+    from budget.report import allocation
+
+    try:
+        project, _ = project_of(Path(options.file))
+    except ProjectError as error:
+        _say(f"budget: {error}")
+        return UNUSABLE
+    from budget.engine.allocate import allocate, as_json
+    from budget.engine.placing import Constraints
+
+    pairs = {name: [tuple(text.split(",")) for text in getattr(options, name)] for name in ("apart", "together", "ban")}
+    wrong = next((text for name in pairs for text in getattr(options, name) if text.count(",") != 1), None)
+    if wrong is not None:
+        _say(f"budget: '{wrong}' is not a pair; two ids with a comma between were expected.")
+        return UNUSABLE
+    wishes = Constraints(
+        tuple(options.keep), tuple(pairs["apart"]), tuple(pairs["together"]), tuple(pairs["ban"]), options.most
+    )
+    try:
+        found = allocate(project, options.goal, wishes, time_limit=max(0.1, options.time))
+    except ValueError as error:
+        _say(f"budget: {options.file}: {error}.")
+        return UNUSABLE
+    if options.format == "json":
+        import json
+
+        printed = _print(json.dumps(as_json(found), indent=1) + "\n")
+    else:
+        printed = _print(allocation.as_text(found, project))
+    for line in allocation.why_none(found) if not found.candidates else ():
+        _say(f"budget: {line}.")
+    if not printed:
+        return UNUSABLE
+    return OK if found.candidates else FAILED
 
 
 def _sheet(options: argparse.Namespace) -> int:

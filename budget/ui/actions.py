@@ -37,6 +37,9 @@ def _show(view: str) -> Action:
 
 def edit(desk: Desk) -> None:
     row, cell = desk.here()
+    if desk.view_name == "allocation":
+        studies.take_candidate(desk)
+        return
     if cell.path is None:
         if cell.leads is not None:
             desk.back.append(desk.spot())
@@ -694,6 +697,7 @@ ACTIONS: dict[str, Action] = {
     "view_spectrum": _show("spectrum"),
     "view_plan": _show("plan"),
     "view_response": view_response,
+    "view_allocation": _show("allocation"),
     "view_switchon": _show("switchon"),
     "view_stable": _show("stable"),
     "commands": show_commands,

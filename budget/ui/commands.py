@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 SHEET, FIELDS, SPECTRUM, PLAN, RESPONSE = "sheet", "fields", "spectrum", "plan", "response"
-SWITCHON, STABLE, ALL = "switchon", "stable", "all"
+SWITCHON, STABLE, ALLOCATION, ALL = "switchon", "stable", "allocation", "all"
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,6 +74,8 @@ COMMANDS: tuple[Command, ...] = (
     Command("view_response", ("z",), "the filter over frequency: loss, impedance, damping", "show", "filter", rank=25),
     Command("view_switchon", ("J",), "switch-on and surge over time", "show", "switch-on", rank=26),
     Command("view_stable", ("Y",), "stability: impedances and modes", "show", "stability", rank=27),
+    Command("view_allocation", ("Z",), "proposed allocations side by side", "show", "allocation", rank=28),
+    Command("propose", ("G",), "search for an allocation", "show", "search", (ALLOCATION, SHEET), rank=29),
     Command(
         "next_mode",
         ("A",),

@@ -19,7 +19,7 @@ from budget.project.problems import ProjectError
 from budget.report import change
 from budget.report.numbers import Corner
 from budget.session import Outcome, Session
-from budget.ui import commands, fields, layout, lists, plan, response, sheet, spectrum, stable, switchon
+from budget.ui import allocation, commands, fields, layout, lists, plan, response, sheet, spectrum, stable, switchon
 from budget.ui.commands import COMMANDS, SHEET
 from budget.ui.sheet import Cells, Context, Options
 from budget.ui.view import Cell, Row, Section, View
@@ -39,6 +39,7 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "response": response.response,
     "switchon": switchon.switch_on,
     "stable": stable.stable,
+    "allocation": allocation.allocation,
     "help": lists.help_view,
 }
 FORMS = frozenset({"fields", "rules", "limits", "project", "loads"})  # the first column only names the others

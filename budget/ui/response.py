@@ -37,7 +37,11 @@ def response(context: Context) -> View:
     result = context.session.result
     part = _filter(context, result)
     if result is None or part is None:
-        return _only("no filter here: on the sheet (s) go to a filter or a converter behind one, then z" if result else "~ calculating")
+        return _only(
+            "no filter here: on the sheet (s) go to a filter or a converter behind one, then z"
+            if result
+            else "~ calculating"
+        )
     if part.attenuation:
         return _table_filter(part, context)
     import numpy as np

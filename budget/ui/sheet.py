@@ -59,6 +59,7 @@ class Options:
     log_time: bool = False
     filter: int = 0  # the stability view
     scan: Any = None
+    allocation: Any = None  # the last proposal of an allocation
 
 
 @dataclass(frozen=True, slots=True)

@@ -215,6 +215,55 @@ def _with_branch(document: Document, shelves: tuple[Shelf, ...], name: str, bran
     return doc.put(document, ("filter", index, "dm"), [*ladder, {"shunt": branch}])
 
 
+def propose(desk: Desk) -> None:
+    """Search in the background for the best allocation; the best so far is told at once."""
+    result = desk.session.result
+    if result is None:
+        raise ProjectError("there are no results yet to search with.")
+    project = result.project
+    goals = [
+        ("even: the largest headroom", "even"),
+        ("fewest: the fewest filters in use, then the largest headroom", "fewest"),
+        ("quiet: the largest emission margin", "quiet"),
+    ]
+
+    def start(goal: str) -> None:
+        def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:
+            from budget.engine.allocate import allocate
+            from budget.engine.evaluate import evaluate_dc, with_emissions, with_stability
+
+            def finish(moved: Any) -> Any:
+                return with_stability(with_emissions(evaluate_dc(moved)))
+
+            return allocate(project, goal, cancelled=cancelled, finish=finish)
+
+        def done(found: Any) -> None:
+            desk.options = replace(desk.options, allocation=found)
+            desk.view_name = "allocation"
+            desk.cursor.column = 2
+
+        desk.start_job(Work(f"searching, {goal}", run, done))
+
+    desk.pick("search for which allocation?", goals, start)
+
+
+def take_candidate(desk: Desk) -> None:
+    """Put every converter where the candidate under the cursor has it, as one edit."""
+    found = desk.options.allocation
+    column = desk.cursor.column - 2
+    if found is None or not 0 <= column < len(found.candidates):
+        raise ProjectError("the cursor is not on a candidate.")
+    document = desk.session.document
+    homes = dict(found.candidates[column].allocation)
+    for index, row in rows_of(document, "converter"):
+        home = homes.get(row.get("id"))
+        if home is not None and home not in edits.ids(document, "filter"):
+            raise ProjectError("a filter of this candidate is gone meanwhile; search again.")
+        if home is not None:
+            document = edits.to_filter(document, index, home)
+    desk.change(f"allocation no. {column + 1}", document)
+
+
 def scan_clock(desk: Desk) -> None:
     """Ask for a clock and a range, and find the worst margin over it in the background."""
     result = shown_result(desk.context())
@@ -274,4 +323,5 @@ ACTIONS: dict[str, Callable[[Desk], None]] = {
     "export": export,
     "what_helps": what_helps,
     "scan_clock": scan_clock,
+    "propose": propose,
 }
