@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from budget.engine.model import Project
 
 OK, FAILED, UNUSABLE = 0, 1, 2
-COMMANDS = ("check", "new", "allocate")
+COMMANDS = ("check", "new", "allocate", "reach", "sweep", "compare")
 FORMATS = ("text", "json", "markdown", "csv")
 
 _EXAMPLES = """\
@@ -30,6 +30,8 @@ examples:
   budget check bus.toml --strict --case climb --line low
   budget check *.toml --format json
   budget allocate bus.toml        propose which converter goes behind which filter
+  budget reach bus.toml PATH      how far one cell can go before a check fails
+  budget compare A B              what differs, in inputs and results
   budget new bus.toml             write a commented project to start from
 
 Results are estimates. Work on powered or charged hardware only as local codes and licensed practice require.
@@ -66,6 +68,8 @@ def _run(arguments: list[str]) -> int:
         return _check(_check_parser().parse_intermixed_args(arguments[1:]))
     if command == "allocate":
         return _allocate(_allocate_parser().parse_args(arguments[1:]))
+    if command in ("reach", "sweep", "compare"):
+        return _study(command, arguments[1:])
     if command == "new":
         return _new(_new_parser().parse_args(arguments[1:]))
     parser = _sheet_parser()
@@ -302,6 +306,29 @@ def _new(options: argparse.Namespace) -> int:
         return UNUSABLE
     name = f"./{path}" if str(path) in COMMANDS or str(path).startswith("-") else str(path)
     return OK if _print(words.clean(f"{path} is written; 'budget {shlex.quote(name)}' opens it.") + "\n") else UNUSABLE
+
+
+def _study(command: str, arguments: list[str]) -> int:
+    from budget.cli_study import STUDIES
+    from budget.project.problems import ProjectError
+
+    def make(prog: str, description: str, epilog: str) -> argparse.ArgumentParser:
+        return _Parser(
+            prog=prog,
+            description=description,
+            epilog=epilog,
+            formatter_class=argparse.RawDescriptionHelpFormatter,
+            allow_abbrev=False,
+        )
+
+    parser, run_it = STUDIES[command]
+    options = parser(make).parse_args(arguments)
+    try:
+        status, text = run_it(options)
+    except ProjectError as error:
+        _say(f"budget: {error}")
+        return UNUSABLE
+    return status if _print(text) else UNUSABLE
 
 
 def _allocate(options: argparse.Namespace) -> int:

@@ -104,6 +104,8 @@ class Reference:
                 if node:
                     m[node - 1, nv + k] += sign
                     m[nv + k, node - 1] += sign
+        if np.linalg.cond(m[:size]) > 1e13:
+            raise np.linalg.LinAlgError("a cut set of inductors: give one of them an Rp")
         inverse = np.linalg.inv(m[:size])
         # inputs: source, capacitor voltages, inductor currents, load currents
         nl, nn = len(net.inductors), len(project.converters)

@@ -6,7 +6,7 @@ from dataclasses import replace
 
 import pytest
 
-from budget.engine.evaluate import Result, evaluate
+from budget.engine.evaluate import Result, evaluate, evaluate_dc
 from budget.engine.model import Bus, Case, Converter, Filter, Load, Output, Project, Rules
 from budget.report.change import describe
 
@@ -45,7 +45,7 @@ def filters(**changes: object) -> Project:
 
 
 def told(new: Project, old: Project = PROJECT, limit: int = 3) -> list[str]:
-    return describe(evaluate(old), evaluate(new), limit).split("; ")
+    return describe(evaluate_dc(old), evaluate_dc(new), limit).split("; ")
 
 
 def test_a_filter_that_gets_too_much() -> None:
@@ -58,7 +58,7 @@ def test_a_filter_that_gets_too_much() -> None:
 
 def test_a_filter_that_is_relieved() -> None:
     heavy = power("CV2", 81.0, power("CV1", 20.0))
-    assert told(PROJECT, heavy, limit=1) == ["FL2 current 8.1 A -> 7.4 A, now within its limit"]
+    assert told(PROJECT, heavy, limit=1) == ["FL2 current 8.1 A -> 7.4 A, now with the wanted margin"]
     over = converter("CV1", power("CV2", 81.0), filter="FL2")
     assert told(heavy, over, limit=1) == ["FL2 current 10.1 A -> 8.1 A, now within its limit, but thin"]
 

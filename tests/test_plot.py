@@ -29,7 +29,7 @@ def column(rows: list[str], k: int) -> str:
 
 
 def cell(share: float, cells: int) -> int:
-    return min(cells - 1, max(0, int(share * cells)))
+    return min(cells - 1, max(0, int(share * cells + 1e-9)))
 
 
 anything = st.floats(allow_nan=True, allow_infinity=True)
@@ -121,7 +121,9 @@ def test_no_peak_is_lost_however_many_points_there_are(
     y[random.integers(count)] += 1000.0  # one sharp peak, one point wide
     x = np.linspace(0.0, 1.0, count)
     rows = body(
-        Plot((Trace("t", "a", x.tolist(), y.tolist(), kind),), log_x=False, x_range=(0.0, 1.0), y_range=(-10.0, 1100.0)),
+        Plot(
+            (Trace("t", "a", x.tolist(), y.tolist(), kind),), log_x=False, x_range=(0.0, 1.0), y_range=(-10.0, 1100.0)
+        ),
         width,
         height,
     )
@@ -137,32 +139,29 @@ def test_no_peak_is_lost_however_many_points_there_are(
     assert any("a" in row for row in rows[: levels - cell(0.85, levels)])
 
 
-@settings(max_examples=80, deadline=None)
+@settings(max_examples=30, deadline=None)
 @given(
     st.lists(
-        st.tuples(st.sampled_from(["curve", "step"]), st.lists(st.floats(0.0, 1.0), min_size=40, max_size=40)),
+        st.tuples(st.sampled_from(["curve", "step"]), st.lists(st.floats(0.0, 1.0), min_size=16, max_size=16)),
         min_size=2,
-        max_size=5,
+        max_size=4,
     )
 )
 def test_the_highest_point_of_every_curve_is_seen_among_the_others(curves: list[tuple[str, list[float]]]) -> None:
-    x = [(k + 0.5) / 40 for k in range(40)]
+    x = [(k + 0.5) / 16 for k in range(16)]
     made = tuple(Trace(str(n), SYMBOLS[n], x, y, kind) for n, (kind, y) in enumerate(curves))
-    rows = body(Plot(made, log_x=False, x_range=(0.0, 1.0), y_range=(0.0, 1.0)), 48, 22)
-    for k in range(40):
-        alone = {
-            t.symbol: column(body(Plot((t,), log_x=False, x_range=(0.0, 1.0), y_range=(0.0, 1.0)), 48, 22), k).rindex(
-                t.symbol
-            )
-            for t in made
-        }
-        for level in set(alone.values()):
-            assert column(rows, k)[level] in {s for s, top in alone.items() if top == level}
+    plot = Plot(made, log_x=False, x_range=(0.0, 1.0), y_range=(0.0, 1.0))
+    rows = body(plot, 24, 18)
+    alone = {t.symbol: body(replace(plot, traces=(t,)), 24, 18) for t in made}
+    for k in range(16):
+        tops = {symbol: column(lines, k).rindex(symbol) for symbol, lines in alone.items()}
+        for level in set(tops.values()):
+            assert column(rows, k)[level] in {symbol for symbol, top in tops.items() if top == level}
 
 
 def test_curves_that_lie_upon_each_other_are_both_seen() -> None:
     one = Trace("one", "a", [0.0, 1.0], [1.0, 1.0])
-    rows = body(Plot((one, replace(one, symbol="b"), replace(one, symbol="c")), log_x=False))
+    rows = body(Plot((one, replace(one, symbol="b"), replace(one, symbol="c")), log_x=False, x_range=(0.0, 1.0)))
     line = next(row for row in rows if row.strip())
     assert {line.count(s) for s in "abc"} == {24}
 
@@ -185,7 +184,12 @@ def test_a_step_down_is_a_vertical_stroke() -> None:
 @given(st.sampled_from(["curve", "step"]), st.integers(1, 60))
 def test_a_curve_beyond_the_range_leaves_by_the_edge(kind: str, far: int) -> None:
     rows = body(
-        Plot((Trace("t", "a", [0.0, 0.5, 1.0], [0.0, far * 10.0, 0.0], kind),), log_x=False, y_range=(0.0, 10.0))
+        Plot(
+            (Trace("t", "a", [0.0, 0.5, 1.0], [0.0, far * 10.0, 0.0], kind),),
+            log_x=False,
+            x_range=(0.0, 1.0),
+            y_range=(0.0, 10.0),
+        )
     )
     assert column(rows, 36)[-1] == "a"
     assert rows[-1][0] == "a"
@@ -193,9 +197,9 @@ def test_a_curve_beyond_the_range_leaves_by_the_edge(kind: str, far: int) -> Non
 
 def test_a_gap_of_nan_is_a_gap() -> None:
     rows = body(Plot((Trace("t", "a", [0.0, 0.4, 0.5, 0.6, 1.0], [1.0, 1.0, math.nan, 1.0, 1.0]),), log_x=False))
-    joined = "".join(column(rows, k).strip() or " " for k in range(72))
-    assert joined.strip("a").strip() == ""
-    assert " " in joined.strip()
+    joined = "".join(column(rows, k).strip() or " " for k in range(72)).strip()
+    assert set(joined) == {"a", " "}
+    assert joined.split() == ["a" * 27, "a" * 27]
 
 
 def test_points_at_zero_and_below_are_left_out_of_a_logarithmic_axis() -> None:
@@ -224,7 +228,7 @@ def test_stems_below_the_floor_or_beside_the_axis_are_not_drawn() -> None:
 
 @pytest.mark.parametrize("value", [0.0, 1.0, -3.0, 1e-12, 1e12, 123456.789])
 def test_a_constant_curve_is_one_level_line(value: float) -> None:
-    rows = body(Plot((Trace("t", "a", [0.0, 1.0], [value, value]),), log_x=False))
+    rows = body(Plot((Trace("t", "a", [0.0, 1.0], [value, value]),), log_x=False, x_range=(0.0, 1.0)))
     assert [row for row in rows if row.strip()] == ["a" * 72]
 
 

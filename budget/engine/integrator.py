@@ -11,7 +11,8 @@ that a load without a capacitor of its own is at the upper of its two voltages f
 **Steps.** Each member has its own time and step length. A step is limited by the defect of the quadratic, evaluated at
 a quarter and three quarters and carried to the outputs; and by the modes that are still ringing, as strongly as they
 can be seen at an output: between its nodes a step is read from the quartic through five exact values, for peaks,
-integrals (Boole's rule) and thresholds. Fast modes that have died away, or never were excited, cost nothing.
+integrals (Boole's rule) and thresholds. Fast modes that have died away, or never were excited, cost nothing, unless the
+loads make them grow.
 
 **Events.** A step that meets a threshold or an instant is cut there: the point is found on the quartic and put right on
 the exact solution, at which the network's own equations, not an interpolation, give the state.
@@ -45,8 +46,10 @@ _QUARTIC = 3e-5  # error of the quartic through five points is this times (rate 
 _GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
 _CONTRACTS = 0.15  # repetition instead of Newton
 _SWEEPS = 12
+_WARY, _GROWN = 1.5, 3.0  # the loads' push on a mode is taken this much larger; growth e^3 over the window counts
+_STRICT = 3e-3  # of the tolerance, where a mode grows and multiplies every error
 _EVENT = 4  # steps that an event counts for in the limit
-_JUMP = 1e-9  # of the window: a step this short that the defect still rejects holds a jump, and is taken
+_JUMP = 1e-13  # of the window: a step this short that the defect still rejects holds a jump, and is taken
 _BAND = 0.01  # of a threshold: within it the outcome is a coin toss
 
 _THETA = np.array(NODES)
@@ -139,6 +142,9 @@ class Batch:
             self.rate, window, driven[:, 1:], shown[q], self.direct[q], shown[:outputs], self.direct[:outputs]
         )
         self.jump = window * _JUMP
+        self.span = window
+        share = np.where(self.rate.imag > 0.0, 0.5, 1.0)  # of a pair one mode is kept
+        self.feedback = shown[q][: self.loads] * driven[:, 1 : 1 + self.loads].T * share  # (N, R) of 1/s per A/V
         self.decay = np.exp(self.rate * self.tables.length[:: 2 * PER_OCTAVE, None])  # (times, R) for a look ahead
         self.waves = Waves(len(members), self.watch)
         self.outcomes: list[Outcome | None] = [None] * len(members)
@@ -169,6 +175,9 @@ class Batch:
                 self._settle(i, member.currents, member.before)
             self._segment(i)
             self._restart(i)
+        at = np.tile(self.y[:, self.terminals], 2)
+        clear = np.abs(at - self.threshold) > _BAND * self.threshold
+        self.side = np.where(clear, np.sign(at - self.threshold), 0.0).astype(np.int8)
 
     # --- what does not move ---------------------------------------------------------------------------------------
 
@@ -300,6 +309,22 @@ class Batch:
         scale[:, : self.meters] = np.maximum(amps, 0.02 * most[:, None])
         return scale
 
+    def _growth(self) -> tuple[Floats, Bools]:
+        """The longest step (m,) [s] that follows modes that the loads make grow, and whether there are any.
+
+        Below the tolerance a mode is stepped over and dies away in the numbers, which must not happen to one that grows
+        in fact. To first order a load of the slope di/dv at its end moves the mode k by feedback_k di/dv.
+        """
+        n = self.loads
+        volts = self.y[:, self.quantities][:, :n]
+        slope = np.where(volts > self.logic.floor, -self.g[:, :n] / np.maximum(volts, self.logic.floor), 0.0)
+        shift = slope @ self.feedback
+        growth = self.rate.real + _WARY * shift.real
+        risky = growth * self.span > _GROWN
+        fastest = np.where(risky, np.abs(self.rate + shift), 0.0).max(axis=1, initial=0.0)
+        grows: Bools = fastest > 0.0
+        return 1.0 / np.maximum(fastest, 1e-300), grows
+
     def advance(self) -> None:
         """One step of every member that still runs."""
         tables = self.tables
@@ -311,6 +336,9 @@ class Batch:
         rings = seen > resolve
         reach = np.where(rings, (resolve / (_QUARTIC * np.where(rings, seen, 1.0))) ** 0.2, np.inf)
         bound = (reach / np.maximum(speed, 1e-300)).min(axis=1)
+        limit, grows = self._growth()
+        bound = np.minimum(np.minimum(bound, limit), tables.length[-1])
+        tolerance = np.where(grows, _STRICT, 1.0) * self.tolerance
         instant = np.minimum(self.stop, self.ph.timer.min(axis=1, initial=np.inf))
         left = instant - self.t
         shortest = tables.length[0]
@@ -355,7 +383,7 @@ class Batch:
         check, _ = self._nonlinear(y[:, 0::2, q], t[:, 0::2], everyone)
         defect = np.abs(check - along[:, 0::2]).max(axis=1)
         error = np.matmul(tables.defect[level], defect[:, :, None])[:, :, 0] / scale
-        worst = error.max(axis=1) / self.tolerance
+        worst = error.max(axis=1) / tolerance
         taken = fine & ((worst <= 1.0) | (h <= self.jump))
         self.used += 1
         change = np.floor(PER_OCTAVE * np.log2(0.9 * np.maximum(worst, 1e-6) ** (-1.0 / 3.0)))

@@ -165,13 +165,14 @@ def make_steps(
     show: Complex,
     show_direct: Floats,
 ) -> Steps:
-    """Empty tables for steps up to ``window`` [s].
+    """Empty tables for steps up to ``window`` [s] and a little more.
 
     ``rate`` (R,) [1/s]; ``drive`` (R, M) from the nonlinear inputs; ``sense`` (Q, R) and ``direct`` (Q, M) to the
     quantities they depend on; ``show`` (P, R) and ``show_direct`` (P, M) to the outputs.
     """
     count = _OCTAVES * PER_OCTAVE + 1
-    length = window * 2.0 ** ((np.arange(count) - (count - 1)) / PER_OCTAVE)
+    longest = 2.0 ** np.ceil(np.log2(window))  # the same lengths whatever the window
+    length = longest * 2.0 ** ((np.arange(count) - (count - 1)) / PER_OCTAVE)
     outputs, inputs = show_direct.shape
     quantities = direct.shape[0]
     return Steps(

@@ -36,7 +36,7 @@ from budget.engine.statespace import StateSpace, state_space
 Floats = NDArray[np.float64]
 
 EVENTS = ("on-low", "on-high", "surge")
-STEPS = 12_000  # of one run, an event counting for four: some ten seconds
+STEPS = 20_000  # of one run, an event counting for four: some ten seconds
 INFINITE, NO_POINT, NEAR_ON, NEAR_OFF = "infinite current", "no operating point", "near turn_on", "near turn_off"
 NOT_FINISHED, CHATTER, ASSUMED, NO_CAPACITOR = "not finished", "chatter", "turn_on assumed", "no input capacitor"
 _CONDITION = 1e7  # of the modes; above it the elements are set apart by 1e-6 of themselves

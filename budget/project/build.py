@@ -522,6 +522,11 @@ def _check_filter(values: dict[str, Any], raw: Tree, out: Reading) -> None:
 
 
 def _check_converter(values: dict[str, Any], raw: Tree, out: Reading) -> None:
+    held = ("hold_up", "hold_up_to")
+    given = [k for k in held if k in raw]
+    if len(given) == 1:
+        missing = next(k for k in held if k not in raw)
+        out.fault((missing,), "is missing; hold_up and hold_up_to go together, both or none.")
     noise = [k for k in ("chop", "ripple", "spectrum") if k in raw]
     for extra in noise[1:]:
         out.fault((extra,), f"stands beside {noise[0]}; one description of the differential noise was expected.")

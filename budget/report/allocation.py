@@ -58,7 +58,7 @@ def why_none(found: Allocation) -> list[str]:
             "filter current": f"filter {short.subject} would carry {value} at best, {limit} are wanted"
             + (f" (case {short.case})" if short.case else ""),
             "operating point": f"the bus cannot carry case {short.case}, however the converters are placed",
-            "contradiction": "these cannot be together: " + ", ".join(" ".join(c) for c in short.constraints),
+            "contradiction": "these cannot be together: " + ", ".join(_wish(c) for c in short.constraints),
             "constraints": "the constraints leave no allocation at all",
             "no filters": "there is no filter that may carry anything",
             "not found": "none was found before the time was over",
@@ -76,7 +76,24 @@ def _relaxation(change: Relaxation) -> str:
     if change.code == "load":
         share = (change.needed or 0.0) * 100
         return f"it would do with converter {change.subject} at {share:.0f} % of its present loads"
-    return f"it would do without: {' '.join(change.constraint)}"
+    return f"it would do without: {_wish(change.constraint)}"
+
+
+def _wish(name: tuple[str, ...]) -> str:
+    """A constraint, by its name tuple, in words."""
+    code, *ids = name
+    words_of = {
+        "keep": "{} stays",
+        "banned": "{} not behind {}",
+        "apart": "{} and {} apart",
+        "together": "{} and {} together",
+        "no rating": "{} has no rating",
+        "rating zero": "{} has no rating left",
+        "converters": "{} converters",
+    }
+    if code == "most":
+        return f"the most converters behind {ids[0]}" if ids and ids[0] else "the most converters behind each filter"
+    return words_of[code].format(*ids) if code in words_of else " ".join(name)
 
 
 def as_text(found: Allocation, project: Project) -> str:

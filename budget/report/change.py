@@ -56,7 +56,8 @@ def describe(old: Result | None, new: Result | None, limit: int = 3) -> str:
 
 
 def _name(row: CheckRow) -> str:
-    return f"{row.subject} {words.short(row.check)}"
+    name = words.short(row.check)
+    return name if name.startswith(f"{row.subject} ") else f"{row.subject} {name}"
 
 
 def _values(one: CheckRow, two: CheckRow) -> str:
@@ -75,6 +76,8 @@ def _state(one: CheckRow, two: CheckRow) -> str:
     text = _values(one, two) or _name(two)
     if two.status == "fail":
         return f"{text}, {_FAILS.get(two.check, _NOW['fail'])}"
+    if two.status == "ok" and one.status == "thin":
+        return f"{text}, now with the wanted margin"
     if two.status == "ok":
         return f"{text}, {_OKAYS.get(two.check, _NOW['ok'])}"
     if one.status == "fail" and two.status == "thin":

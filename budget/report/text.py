@@ -34,7 +34,7 @@ def as_text(name: str, result: Result, warnings: Sequence[str], *, colour: bool 
     lines = [_headline(name, result, colour), _scope(result), ""]
     for title, head, rows in _sections(result):
         if rows:
-            lines += [title, *_columns(head, rows, colour), ""]
+            lines += [title, *columns(head, rows, colour), ""]
     if warnings:
         lines += ["Warnings", *(f"  {words.clean(w)}" for w in warnings), ""]
     lines += words.CAUTION
@@ -70,7 +70,7 @@ def _tone(text: str, status: str) -> str:
     return f"{_TONES[status]}{text}{_END}"
 
 
-def _columns(head: tuple[str, ...], rows: list[tuple[str, ...]], colour: bool) -> list[str]:
+def columns(head: tuple[str, ...], rows: list[tuple[str, ...]], colour: bool) -> list[str]:
     used = [i for i in range(len(head)) if any(row[i] for row in rows)]
     widths = {i: max(len(head[i]), *(_width(row[i]) for row in rows)) for i in used}
 
@@ -95,22 +95,22 @@ def _width(text: str) -> int:
 
 def as_markdown(name: str, result: Result, warnings: Sequence[str]) -> str:
     """The report of one file as markdown."""
-    lines = [f"# {_escape(result.project.title or name)}", ""]
-    lines += [f"**{result.status}**: {words.summary(result.checks)}; {_escape(_scope(result))}.", ""]
+    lines = [f"# {escape(result.project.title or name)}", ""]
+    lines += [f"**{result.status}**: {words.summary(result.checks)}; {escape(_scope(result))}.", ""]
     for title, head, rows in _sections(result):
         if not rows:
             continue
         lines += [f"## {title}", "", "| " + " | ".join(head) + " |"]
         lines.append("|" + "|".join("---:" if h in _RIGHT else "---" for h in head) + "|")
-        lines += ["| " + " | ".join(_escape(cell.strip()) for cell in row) + " |" for row in rows]
+        lines += ["| " + " | ".join(escape(cell.strip()) for cell in row) + " |" for row in rows]
         lines.append("")
     if warnings:
-        lines += ["## Warnings", "", *(f"- {_escape(w)}" for w in warnings), ""]
+        lines += ["## Warnings", "", *(f"- {escape(w)}" for w in warnings), ""]
     lines += ["> " + line for line in words.CAUTION]
     return "\n".join(lines) + "\n"
 
 
-def _escape(text: str) -> str:
+def escape(text: str) -> str:
     """The user's text as markdown that shows it as it is, in a table as well; the backslash goes first."""
     text = words.clean(text)
     for sign in "\\|`*_<>[]&~#":

@@ -9,7 +9,9 @@ from __future__ import annotations
 import contextlib
 import sys
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from itertools import islice
+from typing import Any
 
 from rich.segment import Segment
 from rich.style import Style
@@ -25,6 +27,7 @@ from budget.ui.desk import Desk, Job, Work
 from budget.ui.paint import Line, frame
 
 LATE = 0.05  # seconds after which results that have not come look stale
+FAST = 2  # stages that follow an edit at once: DC and emissions
 WATCH = 2.0  # seconds between looks at the file on disk
 
 STYLES: dict[str, Style] = {
@@ -91,37 +94,44 @@ class Finished(Message):
 
 
 class Worker:
-    """One thread that calculates the newest snapshot; a newer one replaces one that waits."""
+    """Calculates the newest snapshot: the fast stages in one thread, the slow ones behind them in another.
+
+    A slow stage that cannot be stopped in the middle so never keeps the fast results of a newer edit waiting.
+    """
 
     def __init__(self, post: Callable[[Message], object]) -> None:
         self._post = post
-        self._wanted: Snapshot | None = None
+        self._newest: Snapshot | None = None
         self._told = 0.0
-        self._wake = threading.Condition()
-        self._thread = threading.Thread(target=self._run, name="calculate", daemon=True)
-        self._thread.start()
+        self._slow = Mailbox("slow stages", self._rest)
+        self._fast = Mailbox("fast stages", self._begin)
 
     def want(self, snapshot: Snapshot) -> None:
-        with self._wake:
-            self._wanted = snapshot
-            self._wake.notify()
+        self._newest = snapshot
+        self._fast.put(snapshot)
 
-    def _run(self) -> None:
-        while True:
-            with self._wake:
-                while self._wanted is None:
-                    self._wake.wait()
-                snapshot, self._wanted = self._wanted, None
-            try:
-                for outcome in stages(snapshot, self._newer_waits, self._progress):
-                    self._send(Calculated(outcome))
-                    if self._newer_waits():
-                        break  # what is left of this one is of no use
-            except Exception as error:  # the sheet must stay open whatever the calculation does
-                self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+    def _begin(self, snapshot: Snapshot) -> None:
+        def results() -> Iterator[Outcome]:  # so that an error before the first stage is one of a stage too
+            yield from stages(snapshot, lambda: self._newest is not snapshot, self._progress)
 
-    def _newer_waits(self) -> bool:
-        return self._wanted is not None
+        rest = results()
+        if self._step(snapshot, rest, FAST):
+            self._slow.put((snapshot, rest))
+
+    def _rest(self, item: tuple[Snapshot, Iterator[Outcome]]) -> None:
+        self._step(*item, None)
+
+    def _step(self, snapshot: Snapshot, results: Iterator[Outcome], count: int | None) -> bool:
+        """Send the next ``count`` stages; whether the rest is still wanted."""
+        try:
+            for outcome in islice(results, count):
+                self._send(Calculated(outcome))
+                if self._newest is not snapshot:
+                    return False
+        except Exception as error:  # the sheet must stay open whatever the calculation does
+            self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+            return False
+        return True
 
     def _progress(self, share: float) -> None:
         if share - self._told >= 0.1 or share < self._told:  # a word now and then; each costs the terminal bytes
@@ -131,6 +141,29 @@ class Worker:
     def _send(self, message: Message) -> None:
         with contextlib.suppress(Exception):  # the program may be closing
             self._post(message)
+
+
+class Mailbox:
+    """A thread with one place for work: the newest item; one that was not taken in time is let go."""
+
+    def __init__(self, name: str, work: Callable[[Any], object]) -> None:
+        self._item: Any = None
+        self._work = work
+        self._wake = threading.Condition()
+        threading.Thread(target=self._run, name=name, daemon=True).start()
+
+    def put(self, item: object) -> None:
+        with self._wake:
+            self._item = item
+            self._wake.notify()
+
+    def _run(self) -> None:
+        while True:
+            with self._wake:
+                while self._item is None:
+                    self._wake.wait()
+                item, self._item = self._item, None
+            self._work(item)
 
 
 class Screenful(Widget, can_focus=True):
@@ -154,7 +187,12 @@ class Screenful(Widget, can_focus=True):
         width, height = self.size
         if not width or not height:
             return
-        new = frame(self.desk, width, height)
+        try:
+            new = frame(self.desk, width, height)
+        except Exception as error:  # a view that cannot be made must not take the others with it
+            self.desk.view_name, self.desk.mode = "sheet", None
+            self.desk.say(f"this view failed, a fault of this program ({type(error).__name__}: {error})", "fail")
+            new = frame(self.desk, width, height)
         old, self.lines = self.lines, new
         if len(old) != len(new):
             self.refresh()
@@ -172,12 +210,22 @@ class Screenful(Widget, can_focus=True):
         event.stop()
         event.prevent_default()
         character = event.character if event.is_printable else None
-        self.desk.key(event.key, character)
+        self.guard(lambda: self.desk.key(event.key, character))
         self.sync()
+
+    def guard(self, work: Callable[[], object]) -> None:
+        """Do something of the desk; an error of ours is told, and nothing that was typed is lost by it."""
+        try:
+            work()
+        except Exception as error:
+            self.desk.mode = None
+            self.desk.say(
+                f"a fault of this program ({type(error).__name__}: {error}); the project is as it was", "fail"
+            )
 
     def on_paste(self, event: Paste) -> None:
         event.stop()
-        self.desk.paste(event.text)
+        self.guard(lambda: self.desk.paste(event.text))
         self.sync()
 
 

@@ -297,8 +297,6 @@ class Desk:
                 self.say(self.told)
         if outcome.complete:
             self.label = self.told = ""
-            self.before = outcome.result
-            self.built_before = outcome.built
         return True
 
     def _left_out(self, outcome: Outcome) -> str:
@@ -320,7 +318,10 @@ class Desk:
         return True
 
     def changed(self, label: str) -> None:
-        self.label = label
+        self.label, self.told = label, ""
+        outcome = self.session.outcome  # still that of before the edit, as far as it has come
+        self.before = outcome.result if outcome else None
+        self.built_before = outcome.built if outcome else None
         self.say(f"{label}: calculating")
         self.calculate()
 

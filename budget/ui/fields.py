@@ -9,6 +9,7 @@ from budget.project import edits, schema
 from budget.project.document import Path
 from budget.project.problems import place
 from budget.project.schema import Field
+from budget.report import words
 from budget.ui.sheet import Context, rows_of, value_cell
 from budget.ui.view import LEFT, RIGHT, Cell, Column, Row, Section, View
 
@@ -49,7 +50,30 @@ def sections(context: Context, base: Path, specs: tuple[Field, ...], head: str =
             plain.append(_line(spec.key, Cell(text, None, RIGHT, "pale", mark, item=path), spec.help, path))
         else:
             plain.append(_line(spec.title, value_cell(context, path, _align(spec)), spec.help, path))
+            if spec.key == "hold_up_to":
+                plain += _hold_up(context, base)
     return (*parts, Section(first, tuple(plain))) if plain else tuple(parts)
+
+
+def _hold_up(context: Context, base: Path) -> list[Row]:
+    """What hold-up needs at the input of a converter: the largest capacitance over the cases, calculated."""
+    ident = doc.get(context.session.document, (*base, "id"))
+    result = context.session.result
+    needs = [h for h in result.hold_up if h.id == ident] if result else []
+    if not needs:
+        return []
+    worst = max(needs, key=lambda h: float("inf") if h.capacitance is None else h.capacitance)
+    text = words.farads(worst.capacitance) or "out of reach"
+    info = "; ".join(f"{h.case}: {words.farads(h.capacitance) or 'out of reach'}" for h in needs)
+    cell = Cell(text, None, RIGHT, "", "", f"needed at its input, from the low line, by case: {info}", calculated=True)
+    return [
+        _line(
+            "hold up needs",
+            cell,
+            f"Calculated: input capacitance for that time (case {worst.case}).",
+            (*base, "=hold_up"),
+        )
+    ]
 
 
 def _align(spec: Field) -> str:

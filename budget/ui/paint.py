@@ -151,6 +151,7 @@ def _rows(
     """The visible lines of a view; a view of one section keeps its heading in sight."""
     flat = view.flat()
     out: list[Line] = []
+    placed: dict[tuple[int, int], tuple[Slot, ...]] = {}
     one = len(view.sections) == 1
     if one and flat:
         out.append(_heading(flat[0][0], width, left))
@@ -160,7 +161,9 @@ def _rows(
         section, row = flat[index]
         current = index == at
         offset = left if current or one else 0
-        slots = layout(section, width, offset)
+        if (id(section), offset) not in placed:
+            placed[id(section), offset] = layout(section, width, offset)
+        slots = placed[id(section), offset]
         if row is None:
             out.append(_heading(section, width, offset))
         else:

@@ -6,7 +6,7 @@ from typing import Any
 
 from budget.report import words
 from budget.ui.plot import Plot, Trace
-from budget.ui.sheet import Context, words_only
+from budget.ui.sheet import Context, stale, words_only
 from budget.ui.spectrum import nothing, shown, shown_result
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
@@ -56,7 +56,8 @@ def plan(context: Context) -> View:
     if scan is not None:
         summary = scan_words(scan)
     sections = (Section(_MEET, tuple(meet)), Section(_BEAT, tuple(beats)))
-    return View("plan", "frequency plan", sections, _picture(scan) if scan is not None else None, summary)
+    title = stale(context, result) + "frequency plan" + (f", {found[1].limit.name}" if found is not None else "")
+    return View("plan", title, sections, _picture(scan) if scan is not None else None, summary)
 
 
 def _row(

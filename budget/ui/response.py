@@ -9,7 +9,7 @@ from budget.project import document as doc
 from budget.report import words
 from budget.ui.plot import Plot, Trace
 from budget.ui.sheet import Context, words_only
-from budget.ui.spectrum import shown
+from budget.ui.spectrum import shown, waiting
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -40,7 +40,7 @@ def response(context: Context) -> View:
         return _only(
             "no filter here: on the sheet (s) go to a filter or a converter behind one, then z"
             if result
-            else "~ calculating"
+            else waiting(context)
         )
     if part.attenuation:
         return _table_filter(part, context)

@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from budget.engine.lines import Lines
 
 MOST = 1000  # lines of the table; the picture has all
+FAINT = -100.0  # dB; less is what rounding left of nothing, and no number to show
 COLUMNS = (
     Column("line", 9, most=14),
     Column("at", 10, RIGHT),
@@ -58,13 +59,16 @@ def worst_row(result: Result, name: str) -> Emission | None:
     return min(with_margin, key=lambda row: row.margin or 0.0, default=rows[0] if rows else None)
 
 
+def waiting(context: Context) -> str:
+    """Why a view has no result yet, or will have none."""
+    return "no results: see the bad cells (b)" if context.session.complete else "~ calculating"
+
+
 def nothing(context: Context) -> str:
     """Why there is no spectrum, and what to do."""
     result = shown_result(context)
-    if result is None:
-        return "~ calculating" if context.session.outcome is None else "no results"
-    if result.emissions is None:
-        return "~ calculating"
+    if result is None or result.emissions is None:
+        return waiting(context)
     return "no limit set is chosen: name one in the rules (r), emissions, such as CE102"
 
 
@@ -174,7 +178,7 @@ def _summary(result: Result, limit: str, case: str, line: str) -> str:
 
 
 def _number(value: float | None) -> str:
-    return "" if value is None or value < -400.0 else f"{value:.1f}"
+    return "" if value is None or value < FAINT else f"{value:.1f}"
 
 
 def _row(entry: dict[str, Any], k: int, unit: str, bare: bool) -> Row:

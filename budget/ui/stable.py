@@ -10,6 +10,7 @@ from budget.report import words
 from budget.report.numbers import corner_index
 from budget.ui.plot import Plot, Trace
 from budget.ui.sheet import Context, stale, words_only
+from budget.ui.spectrum import waiting
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -52,8 +53,8 @@ def stable(context: Context) -> View:
     """The view: impedances over frequency, the filters' closest approach, and the modes from the least damped on."""
     result = shown_result(context)
     if result is None or result.stability is None:
-        text = "~ calculating" if context.session.outcome is None or result is None else "no results"
-        return View("stable", "stability", (Section((Column("", 60),), (Row(("none",), (Cell(text),)),)),))
+        row = Row(("none",), (Cell(waiting(context)),))
+        return View("stable", "stability", (Section((Column("", 60),), (row,)),))
     from budget.engine.model import LINES
 
     c, k = shown_corner(context, result)

@@ -111,6 +111,12 @@ def _offer(desk: Desk, generation: int, choices: list[tuple[str, Document]], non
     desk.pick("take a change? Esc leaves all as it is", [(c[0], c) for c in choices], take)
 
 
+def _no_less(value: float, kind: quantity.Kind) -> str:
+    """A solved value as it is shown and entered: rounded, but never to less than what was solved for."""
+    text = quantity.show(value, kind)
+    return text if quantity.parse(text, kind).si >= value else quantity.show(value * 1.001, kind)
+
+
 def _help_switch_on(desk: Desk) -> None:
     found = switchon.shown_run(desk.context())
     if found is None or found[0] is not desk.session.result:
@@ -132,15 +138,15 @@ def _help_switch_on(desk: Desk) -> None:
         choices = []
         ohm, second, ampere = (quantity.KINDS[name] for name in ("resistance", "time", "current"))
         if more.value is not None:
-            text = f"add {quantity.show(more.value, ohm)} to {target}: peak {quantity.show(more.peak, ampere)}"
+            text = f"add {_no_less(more.value, ohm)} to {target}: peak {quantity.show(more.peak, ampere)}"
             text += "" if more.starts else ", but then not every converter starts"
             changed = _with_resistance(document, shelves, target, more.value, result)
             if changed is not None:
                 choices.append((text, changed))
         if rise.value is not None:
-            text = f"rise over {quantity.show(rise.value, second)}: peak {quantity.show(rise.peak, ampere)}"
+            text = f"rise over {_no_less(rise.value, second)}: peak {quantity.show(rise.peak, ampere)}"
             text += "" if rise.starts else ", but then not every converter starts"
-            choices.append((text, doc.put(document, ("bus", "rise"), quantity.show(rise.value, second))))
+            choices.append((text, doc.put(document, ("bus", "rise"), _no_less(rise.value, second))))
         why = {
             "no limit": f"no inrush_peak is entered for {target}",
             "within": f"the peak of {target} is within its limit",
@@ -156,7 +162,7 @@ def _with_resistance(
     """The document with a resistance added in the feed, or in the first series element of a filter."""
     ohm = quantity.KINDS["resistance"]
     if target == "bus":
-        return doc.put(document, ("bus", "resistance"), quantity.show(result.project.bus.resistance + extra, ohm))
+        return doc.put(document, ("bus", "resistance"), _no_less(result.project.bus.resistance + extra, ohm))
     index = next((i for i, r in rows_of(document, "filter") if r.get("id") == target), None)
     part = next((f for f in result.project.filters if f.id == target), None)
     if index is None or part is None:
@@ -165,7 +171,7 @@ def _with_resistance(
     if element is None:
         return None
     path: Path = ("filter", index, "dm", element, "R")
-    return edits.enter(document, shelves, path, quantity.show(part.dm[element].R + extra, ohm))
+    return edits.enter(document, shelves, path, _no_less(part.dm[element].R + extra, ohm))
 
 
 def _help_stability(desk: Desk) -> None:
@@ -187,13 +193,13 @@ def _help_stability(desk: Desk) -> None:
     def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:
         from budget.engine.cure import damping_for
 
-        return damping_for(project, operating, name, wanted)
+        return damping_for(project, operating, name, wanted + 0.02)  # so that a rounded value still reaches it
 
     def done(found: Any) -> None:
         choices = []
         if found.C is not None and found.R is not None:
             c, r = (
-                quantity.show(found.C, quantity.KINDS["capacitance"]),
+                _no_less(found.C, quantity.KINDS["capacitance"]),
                 quantity.show(found.R, quantity.KINDS["resistance"]),
             )
             text = f"add {c} with {r} behind {name}: margin {found.margin_db:.1f} dB"

@@ -8,6 +8,7 @@ from budget import quantity
 from budget.report import words
 from budget.ui.plot import SYMBOLS, Plot, Trace
 from budget.ui.sheet import Context, stale, words_only
+from budget.ui.spectrum import waiting
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -58,8 +59,8 @@ def switch_on(context: Context) -> View:
     """The view: a picture over time, and bus, filters and converters with their peaks against the limits."""
     found = shown_run(context)
     if found is None:
-        waits = shown_result(context) is None or context.session.result is None or context.session.result.inrush is None
-        text = "~ calculating" if waits else "nothing to calculate: no bus, or no case"
+        result = shown_result(context)
+        text = waiting(context) if result is None or result.inrush is None else "nothing to calculate: there is no case"
         return View("switchon", "switch-on", (Section((Column("", 60),), (Row(("none",), (Cell(text),)),)),))
     result, run = found
     title = f"{run.event} in {run.case}"

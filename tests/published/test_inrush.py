@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import pytest
 from scipy.integrate import quad, solve_ivp
 
-from budget.engine.model import Branch, Bus, Case, Filter, Project, Rules
+from budget.engine.model import Branch, Bus, Case, Converter, Filter, Lead, Output, Project, Rules
 from budget.engine.transient import FilterRun, Run, inrush
 from tests.dense_network import Reference
 from tests.transient_projects import random_project
@@ -138,18 +139,48 @@ def test_two_equal_sections_without_loss_pass_twice_the_source() -> None:
     assert 2.2 < top < 2.3417
 
 
-@pytest.mark.parametrize(("seed", "event"), [(0, "surge"), (4, "on-high"), (9, "on-low"), (13, "on-low")])
+@pytest.mark.parametrize(
+    ("seed", "event"), [(1, "on-low"), (10, "on-high"), (16, "surge"), (19, "surge"), (30, "on-low"), (36, "on-high")]
+)
 def test_against_a_stiff_integrator(seed: int, event: str) -> None:
     """Independent: nodal equations integrated by scipy's Radau, thresholds as its events; converters start and trip."""
     project = random_project(seed)
+    project = replace(project, rules=Rules(inrush_window=2e-3), bus=replace(project.bus, surge_time=0.5e-3))
     run = inrush(project, only=[(0, event)]).runs[0]
-    found = Reference(project).run(0, event, rtol=1e-7)
-    assert run.bus_peak == pytest.approx(found["bus_peak"], rel=5e-4)
-    assert run.bus_i2t == pytest.approx(found["bus_i2t"], rel=5e-4)
-    assert [f.peak for f in run.filters] == pytest.approx(found["filter_peak"].tolist(), rel=5e-4)
-    assert [f.i2t for f in run.filters] == pytest.approx(found["filter_i2t"].tolist(), rel=5e-4)
-    assert [f.peak_voltage for f in run.filters] == pytest.approx(found["output_peak"].tolist(), rel=5e-4)
-    assert [c.peak_voltage for c in run.converters] == pytest.approx(found["terminal_peak"].tolist(), rel=5e-4)
-    assert [c.runs_at is None for c in run.converters] == [t is None for t in found["runs_at"]]
+    found = Reference(project).run(0, event, rtol=1e-6)
+    assert run.bus_peak == pytest.approx(found["bus_peak"], rel=2e-4)
+    assert run.bus_i2t == pytest.approx(found["bus_i2t"], rel=2e-4)
+    assert [f.peak for f in run.filters] == pytest.approx(found["filter_peak"].tolist(), rel=2e-4)
+    assert [f.i2t for f in run.filters] == pytest.approx(found["filter_i2t"].tolist(), rel=2e-4)
+    assert [f.peak_voltage for f in run.filters] == pytest.approx(found["output_peak"].tolist(), rel=2e-4)
+    assert [c.peak_voltage for c in run.converters] == pytest.approx(found["terminal_peak"].tolist(), rel=2e-4)
     for part, start in zip(run.converters, found["runs_at"], strict=True):
-        assert start is None or part.runs_at == pytest.approx(start, rel=5e-4)
+        assert part.runs_at is None if start is None else part.runs_at == pytest.approx(start, rel=2e-4)
+
+
+def test_a_system_that_is_unstable_is_followed_although_it_starts_at_rest() -> None:
+    """A constant power P on L and C oscillates where P/(C v^2) > R/L (Middlebrook's condition; here derived).
+
+    Steps long enough to make the mode die away in the numbers would leave it at rest.
+    """
+    for ohms, grows in ((0.01, True), (0.2, False)):
+        dm = (Branch("series", L=1e-6, R=0.01), Branch("shunt", C=300e-6))
+        load = Converter(
+            "C",
+            100.0,
+            (Output("o", 10.0, 10.0),),
+            ((1.0, 1.0),),
+            filter="F",
+            turn_on=20.0,
+            turn_off=18.0,
+            soft_start=1e-3,
+            lead=Lead(R=ohms, L=1e-6),
+            input=(Branch("shunt", C=3e-6),),
+        )
+        bus = Bus(28.0, 28.0, 28.0, resistance=0.02, rise=1e-3)
+        run = inrush(
+            Project(bus, (Filter("F", dm=dm),), (load,), (Case("full"),), Rules(inrush_window=3e-3)), limit=3000
+        )
+        top = run.runs[0].converters[0].peak_voltage
+        assert top is not None
+        assert (top > 31.0) == grows

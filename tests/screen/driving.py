@@ -73,6 +73,7 @@ output = [
 efficiency = [["20 %", "84 %"], ["60 %", "91 %"], ["100 %", "92 %"]]
 min_input = "16 V"
 max_input = "40 V"
+max_surge = "60 V"
 lead = { R = "5 mohm", L = "300 nH" }
 input = [{ series = { L = "1 uH", R = "2 mohm" } }, { shunt = { C = "10 uF", R = "150 mohm" } }]
 frequency = "300 kHz"

@@ -914,6 +914,11 @@ def follow_all(session: Session) -> None:
             press(desk, "down")
         press(desk, "enter")
         assert desk.view_name != "checks"
+        if "n adds it" in desk.here()[1].text:  # where there is none yet, n makes it
+            press(desk, "n")
+            assert desk.here()[1].path is not None, n
+            press(desk, "u")
+            continue
         assert desk.here()[1].path is not None, n
         press(desk, "enter")
         assert isinstance(desk.mode, (Edit, Pick))

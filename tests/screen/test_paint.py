@@ -17,7 +17,7 @@ from rich.cells import cell_len
 from budget.session import Session, calculate
 from budget.ui.desk import VIEWS, Desk
 from budget.ui.paint import SMALLEST, frame, plain
-from tests.screen.driving import TEXTS, desk_of, key_of, press, screen, session_of, shown, small, typed
+from tests.screen.driving import TEXTS, demo, desk_of, key_of, press, screen, session_of, shown, small, typed
 
 GOLDEN = Path(__file__).parent / "golden"
 SIZES = ((80, 24), (160, 48))
@@ -38,6 +38,10 @@ def _wrong(desk: Desk) -> None:
     press(desk, "enter")
 
 
+def _table_filter(desk: Desk) -> None:
+    desk.subject, desk.view_name = ("filter", 2), "response"
+
+
 SCENES: dict[str, tuple[str, str | Callable[[Desk], None]]] = {
     **{f"view {view}": ("small", "") for view in VIEWS},
     "converter fields": ("small", "down down f"),
@@ -55,12 +59,27 @@ SCENES: dict[str, tuple[str, str | Callable[[Desk], None]]] = {
     "broken faults": ("broken", "b down down"),
     "empty sheet": ("empty", ""),
     "empty loads": ("empty", "l"),
+    "small unfiltered": ("small", "a B down down"),
+    "small table filter": ("small", _table_filter),
+    "small voltages": ("small", "J A L"),
+    "heron emissions": ("heron", "a down down"),
+    "heron plan": ("heron", "y down"),
+    "heron filter": ("heron", "down z down"),
+    "heron filter common": ("heron", "down z A"),
+    "heron switch-on": ("heron", "J L"),
+    "heron voltages": ("heron", "J A"),
+    "heron stability": ("heron", "Y"),
+    "ferry emissions": ("ferry", "a A"),
+    "ferry plan": ("ferry", "y"),
+    "ferry filter": ("ferry", "down z"),
+    "ferry switch-on": ("ferry", "J down"),
+    "ferry stability": ("ferry", "Y"),
 }
 
 
 def scene(name: str, ascii_only: bool) -> Desk:
     text, keys = SCENES[name]
-    desk = small(text, ascii_only=ascii_only)
+    desk = small(text, ascii_only=ascii_only) if text in TEXTS else demo(text, ascii_only=ascii_only)[0]
     if name.startswith("view "):
         desk.view_name = name.removeprefix("view ")
     elif isinstance(keys, str):
@@ -114,16 +133,16 @@ def test_fail_thin_and_no_data_are_words() -> None:
     assert "ok" in row_text(desk, "FB")
     assert "left out" in row_text(small("broken"), "FA")
     press(desk, "k")
-    states = {line.split()[0] for line in screen(desk)[2:20] if line.strip()}
+    states = {line.split()[0] for line in screen(desk, 80, 90)[2:85] if line.strip()}
     assert {"FAIL", "thin", "no", "ok"} <= states
 
 
 def test_every_span_in_a_tone_that_warns_has_a_word_or_a_mark() -> None:
     marks = ("FAIL", "thin", "!", "%", "no results", "error", "warning", "calculating", "cannot", "changed", "unsaved")
     for name in SCENES:
-        if name in ("view help", "view spectrum"):  # cautions are words themselves; a limit line is drawn as one
-            continue
         desk = scene(name, True)
+        if name == "view help" or desk.view().plot is not None:  # cautions are words; a limit line is drawn as one
+            continue
         for width, height in SIZES:
             for line in frame(desk, width, height):
                 for text, tone in line:
@@ -295,3 +314,30 @@ def test_a_session_without_results_paints_every_view() -> None:
     for view in VIEWS:
         desk.view_name = view
         assert len(screen(desk)) == 24
+
+
+# -- pictures
+
+
+@pytest.mark.parametrize(
+    "name", ["heron emissions", "heron filter", "heron voltages", "heron stability", "small voltages"]
+)
+def test_curves_are_told_apart_by_letters_not_by_colour(name: str) -> None:
+    desk = scene(name, True)
+    plot = desk.view().plot
+    assert plot is not None
+    drawn = [t for t in plot.traces if t.symbol.isalpha()]
+    assert len(drawn) > 1
+    assert len({t.symbol for t in drawn}) == len(drawn)
+    picture = "\n".join(line[8:] for line in screen(desk, 80, 24)[1:12])
+    seen = {t.symbol for t in drawn if t.symbol in picture}
+    assert len(seen) >= min(len(drawn), 2)
+    told = "\n".join(cell.text for _, row in desk.lines() if row for cell in row.cells) + desk.view().summary
+    assert all(f"{t.symbol} " in told for t in drawn)
+
+
+def test_a_walk_through_the_table_leaves_the_curves_where_they_are() -> None:
+    desk = scene("heron emissions", True)
+    before = screen(desk)[1:12]
+    press(desk, "down down up up")
+    assert screen(desk)[1:12] == before
