@@ -206,7 +206,7 @@ def test_energy_is_kept(feed: float, henry: float, farad: float, bent: float | N
     assert given_energy == pytest.approx(lost + stored + taken, rel=1.5e-2)  # trapezoids between the points
 
 
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=8, deadline=None)
 @given(
     st.lists(
         st.tuples(st.floats(1e-7, 3e-5), st.floats(1e-6, 2e-4), st.floats(0.01, 0.5), st.floats(2.0, 50.0)),

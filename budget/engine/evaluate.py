@@ -12,7 +12,7 @@ from budget.engine.inrush import inrush_checks
 from budget.engine.model import LINES, Project
 from budget.engine.operating import Operating, operating_points
 from budget.engine.stability import Stability, stability, stability_checks
-from budget.engine.transient import Inrush, inrush
+from budget.engine.transient import NEAR_OFF, NEAR_ON, NOT_FINISHED, Inrush, inrush
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,7 +85,15 @@ def with_inrush(
     rows = inrush_checks(project, found)
     names = {row.check for row in rows}
     checks = in_order((*(row for row in result.checks if row.check not in names), *rows))
-    return replace(result, checks=checks, status=worst_status(checks), inrush=found)
+    told = tuple(
+        (code, who, run.case, run.event)
+        for run in found.runs
+        for code, who in run.remarks
+        if code in (NEAR_ON, NEAR_OFF, NOT_FINISHED)
+    )
+    kept = tuple(code for code in result.warnings if code[0] not in (NEAR_ON, NEAR_OFF, NOT_FINISHED))
+    warnings = (*kept, *told)
+    return replace(result, checks=checks, status=worst_status(checks), inrush=found, warnings=warnings)
 
 
 def evaluate_dc(project: Project, lines: tuple[int, ...] = (0, 1, 2)) -> Result:

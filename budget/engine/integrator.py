@@ -47,7 +47,7 @@ _GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
 _CONTRACTS = 0.15  # repetition instead of Newton
 _SWEEPS = 12
 _WARY, _GROWN = 1.5, 3.0  # the loads' push on a mode is taken this much larger; growth e^3 over the window counts
-_STRICT = 3e-3  # of the tolerance, where a mode grows and multiplies every error
+_STRICT, _GROWING = 3e-3, 0.01  # of the tolerance, while a mode that grows is below this share of every output
 _EVENT = 4  # steps that an event counts for in the limit
 _JUMP = 1e-13  # of the window: a step this short that the defect still rejects holds a jump, and is taken
 _BAND = 0.01  # of a threshold: within it the outcome is a coin toss
@@ -309,11 +309,12 @@ class Batch:
         scale[:, : self.meters] = np.maximum(amps, 0.02 * most[:, None])
         return scale
 
-    def _growth(self) -> tuple[Floats, Bools]:
-        """The longest step (m,) [s] that follows modes that the loads make grow, and whether there are any.
+    def _growth(self, seen: Floats) -> tuple[Floats, Bools]:
+        """The longest step (m,) [s] that follows modes that the loads make grow; and whether one is still out of sight.
 
         Below the tolerance a mode is stepped over and dies away in the numbers, which must not happen to one that grows
-        in fact. To first order a load of the slope di/dv at its end moves the mode k by feedback_k di/dv.
+        in fact; and while it is small, errors grow with it. To first order a load of the slope di/dv at its end moves
+        the mode k by feedback_k di/dv. ``seen`` (m, R): share of the outputs' scales that each mode has now.
         """
         n = self.loads
         volts = self.y[:, self.quantities][:, :n]
@@ -322,8 +323,8 @@ class Batch:
         growth = self.rate.real + _WARY * shift.real
         risky = growth * self.span > _GROWN
         fastest = np.where(risky, np.abs(self.rate + shift), 0.0).max(axis=1, initial=0.0)
-        grows: Bools = fastest > 0.0
-        return 1.0 / np.maximum(fastest, 1e-300), grows
+        hidden: Bools = np.logical_or.reduce(risky & (seen < _GROWING), axis=1)
+        return 1.0 / np.maximum(fastest, 1e-300), hidden
 
     def advance(self) -> None:
         """One step of every member that still runs."""
@@ -336,7 +337,7 @@ class Batch:
         rings = seen > resolve
         reach = np.where(rings, (resolve / (_QUARTIC * np.where(rings, seen, 1.0))) ** 0.2, np.inf)
         bound = (reach / np.maximum(speed, 1e-300)).min(axis=1)
-        limit, grows = self._growth()
+        limit, grows = self._growth(seen)
         bound = np.minimum(np.minimum(bound, limit), tables.length[-1])
         tolerance = np.where(grows, _STRICT, 1.0) * self.tolerance
         instant = np.minimum(self.stop, self.ph.timer.min(axis=1, initial=np.inf))

@@ -243,7 +243,7 @@ def stability_rows(project: Project, found: Stability) -> list[Row]:
             solved = bool(found.solved[c, k])
             filters = [
                 {"id": part.id, "impedance_db": _number(found.impedance_db[c, k, f])}
-                for f, part in enumerate(project.filters)
+                for f, part in enumerate(project.filters if solved else ())
             ]
             rows.append(
                 {

@@ -303,16 +303,35 @@ def _state(enabled: bool, outcome: Outcome, j: int) -> str:
 
 
 def as_json(found: Inrush) -> list[dict[str, Any]]:
-    """The part ``inrush`` of the machine-readable result, in SI units; what has no value is None."""
+    """The part ``inrush`` of the machine-readable result, in SI units; what has no value is None.
+
+    So is every number of a run that was given up before its window ended.
+    """
     return [
         {
             "case": run.case,
             "event": run.event,
-            "bus": {"peak": run.bus_peak, "i2t": run.bus_i2t},
+            "bus": {"peak": known(run.bus_peak), "i2t": known(run.bus_i2t)},
             "filters": [
-                {"id": f.id, "peak": f.peak, "i2t": f.i2t, "peak_voltage": f.peak_voltage} for f in run.filters
+                {
+                    "id": f.id,
+                    "peak": known(f.peak),
+                    "i2t": known(f.i2t),
+                    "peak_voltage": known(f.peak_voltage),
+                }
+                for f in run.filters
             ],
-            "converters": [{"id": c.id, "peak_voltage": c.peak_voltage, "runs_at": c.runs_at} for c in run.converters],
+            "converters": [
+                {"id": c.id, "peak_voltage": known(c.peak_voltage), "runs_at": known(c.runs_at)} for c in run.converters
+            ],
         }
-        for run in found.runs
+        for run, known in ((run, _whole if run.finished else _nothing) for run in found.runs)
     ]
+
+
+def _whole(value: float | None) -> float | None:
+    return value
+
+
+def _nothing(_: float | None) -> None:
+    """A run that was given up has no numbers of its whole window."""

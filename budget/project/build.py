@@ -434,6 +434,7 @@ def _filter(values: dict[str, Any]) -> model.Filter:
         "dm": _ladder(values["dm"]),
         "cm": _ladder(values["cm"]),
         "attenuation": values["attenuation"] or (),
+        "resistance": values["resistance"] or 0.0,
         "max_surge": values["max_surge"] if values["max_surge"] is not None else values["max_voltage"],
     }
     return model.Filter(**_only(model.Filter, values))

@@ -214,6 +214,10 @@ def _check_branch(place: str, values: dict[str, Any], out: Reading, at: Path) ->
         out.fault((*at, "C"), "is missing; a shunt without C would short the line. A capacitance was expected.")
     if values["Rp"] is not None and values["L"] is None and not any(p.path == (*at, "L") for p in out.problems):
         out.fault((*at, "Rp"), "stands without L; Rp lies across the inductance, so L was expected beside it.")
+    if values["Cp"] is not None and values["L"] is None and not any(p.path == (*at, "L") for p in out.problems):
+        out.fault(
+            (*at, "Cp"), "stands without L; it is taken as a capacitor in series, at high frequency.", error=False
+        )
     if place == "shunt" and values["saturation"] is not None:
         out.fault((*at, "saturation"), "is for series elements; none was expected in a shunt.")
 

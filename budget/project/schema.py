@@ -181,7 +181,12 @@ FILTER_TABLE = Table(
                 Field("cm", "level", "Common-mode insertion loss.", required=True),
             ),
         ),
-        _not_negative("resistance", "resistance", "Loop DC resistance of a filter given as a table.", default=0.0),
+        _not_negative(
+            "resistance",
+            "resistance",
+            "Loop DC resistance of a filter given as a table.",
+            otherwise="needed with a table",
+        ),
         NOTE,
     ),
     many=True,

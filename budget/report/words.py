@@ -230,4 +230,8 @@ def engine_warning(code: tuple[str, ...]) -> str:
     """A warning of the engine as a sentence."""
     if code[0] == "beyond data":
         return f"converter {code[1]}, case {code[2]}: the load lies beyond the last efficiency point; that was held."
+    if code[0] in ("near turn_on", "near turn_off"):
+        return f"converter {code[1]}, case {code[2]}, {code[3]}: {REMARKS[code[0]]}."
+    if code[0] == "not finished":
+        return f"case {code[2]}, {code[3]}: the calculation was given up before its window ended; it has no numbers."
     return " ".join(code)

@@ -19,6 +19,7 @@ from budget.ui.view import RIGHT, Cell, Row, Section, View
 Span = tuple[str, str]  # text, tone
 Line = list[Span]
 
+OWN_CORNER = frozenset({"spectrum", "switchon", "stable"})  # their titles name the corner
 SIDE = 130  # from this width on there is a second pane at the right
 SIDE_WIDTH = 52
 LEAST_BELOW = 6  # free lines below the sheet from which on the checks stand there
@@ -103,7 +104,8 @@ def _title(desk: Desk) -> Line:
     session = desk.session
     name = desk.view().title if desk.view_name != "sheet" else session.title
     state = _state(session, desk)
-    tail: Line = [(" | ", "pale"), (desk.corner_title(), ""), (" | ", "pale"), *state]
+    corner = [] if desk.view_name in OWN_CORNER else [(" | ", "pale"), (desk.corner_title(), "")]
+    tail: Line = [*corner, (" | ", "pale"), *state]
     room = desk.width - 11 - sum(_size(text) for text, _ in tail)
     name = name if _size(name) <= room else set_cell_size(name, max(0, room - 2)) + ".."
     return [(" budget ", "bar"), (f" {name}{' *' if session.dirty else ''}", "head"), *tail]
@@ -257,13 +259,14 @@ def _picture(desk: Desk, width: int, height: int) -> list[Line]:
     assert picture is not None
     row, _ = desk.here()
     picture = replace(picture, cursor=row.mark if row else None)
-    if width >= SIDE:
+    least = max(sum(c.width + 1 for c in section.columns) for section in desk.view().sections)
+    if width >= SIDE and (least <= SIDE_WIDTH + 8 or height < 30):
         main = width - SIDE_WIDTH - 1
         bar = "|" if desk.ascii_only else "\u2502"
         left = plot.draw(picture, main, height, ascii_only=desk.ascii_only)
         right = _grid(desk, SIDE_WIDTH, height)
         return [[*_fit(one, main, desk.ascii_only), (bar, "pale"), *two] for one, two in zip(left, right, strict=True)]
-    table = min(8, max(4, height // 3))
+    table = min(8 if height < 30 else 18, max(4, height // 3))
     return [*plot.draw(picture, width, height - table, ascii_only=desk.ascii_only), *_grid(desk, width, table)]
 
 

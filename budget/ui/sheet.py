@@ -56,7 +56,7 @@ class Options:
     common: bool = False  # the filter view: common mode in place of differential
     run: int | None = None  # the switch-on view: which case and event; None is the worst
     voltages: bool = False
-    log_time: bool = False
+    log_time: bool = True
     filter: int = 0  # the stability view
     scan: Any = None
     allocation: Any = None  # the last proposal of an allocation

@@ -337,6 +337,25 @@ def test_a_stage_that_fails_leaves_the_sheet_open_with_a_sentence(gates: Gates, 
     pilot(check)
 
 
+def test_a_view_that_fails_gives_way_to_the_sheet_with_a_sentence(monkeypatch: pytest.MonkeyPatch) -> None:
+    from budget.ui.desk import VIEWS
+
+    def broken(_: object) -> object:
+        raise ZeroDivisionError("made for the test")
+
+    monkeypatch.setitem(VIEWS, "spectrum", broken)
+
+    async def check(app: BudgetApp, hand: Pilot[int]) -> None:
+        await until(hand, lambda: app.desk.session.complete)
+        await hand.press("a")
+        await until(hand, lambda: "this view failed, a fault of this program" in lines(app)[-2])
+        assert lines(app)[2].startswith("bus")
+        await hand.press("J")
+        assert "switchon" in app.desk.view_name
+
+    pilot(check)
+
+
 def test_a_job_runs_aside_shows_its_progress_and_gives_its_answer() -> None:
     from budget.ui.desk import Work
 
