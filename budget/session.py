@@ -75,7 +75,7 @@ def stages(
     if built.project is None:
         yield Outcome(snapshot.generation, built, None)
         return
-    result = evaluate.evaluate_dc(built.project)
+    result = evaluate.carried(evaluate.evaluate_dc(built.project), snapshot.previous)
     yield Outcome(snapshot.generation, built, result, complete=False)
     result = evaluate.with_emissions(result, snapshot.previous)
     yield Outcome(snapshot.generation, built, result, complete=False)

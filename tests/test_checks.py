@@ -11,7 +11,8 @@ import pytest
 from hypothesis import given, settings
 
 from budget.engine.checks import CheckRow, worst_status
-from budget.engine.evaluate import Result, evaluate
+from budget.engine.evaluate import Result
+from budget.engine.evaluate import evaluate_dc as evaluate
 from budget.engine.model import Bus, Case, Converter, Filter, Load, Project, Rules
 from tests.dc_trees import converter, table_filter, tree, trees
 

@@ -201,7 +201,10 @@ def test_usage_errors(budget: Run, arguments: tuple[str, ...]) -> None:
 
 
 def test_a_mistyped_command_is_told_from_a_file(budget: Run) -> None:
-    assert "'chekc' is no command; the commands are check and new" in budget("chekc", HERON)[2]
+    assert (
+        "'chekc' is no command; the commands are check, new, allocate, reach, sweep, compare"
+        in budget("chekc", HERON)[2]
+    )
 
 
 @pytest.mark.parametrize("arguments", [("--help",), ("check", "-h"), ("new", "--help")], ids=" ".join)

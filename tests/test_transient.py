@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 
 from budget.engine.inrush import inrush_checks, needed_resistance, needed_rise
 from budget.engine.model import Branch, Bus, Case, Converter, Filter, Lead, Load, Output, Project, Rules
-from budget.engine.modes import modes, phi
+from budget.engine.modes import modes, phi, solve_quietly
 from budget.engine.transient import CancelledError, Run, as_json, inrush
 from budget.engine.waves import thinned
 
@@ -508,6 +508,15 @@ def test_modes_give_back_the_matrix(size: int, seed: int) -> None:
     found = modes(a * weight / weight[:, None], weight)
     back = ((found.right * found.rate) @ found.left).real
     assert weight[:, None] * back / weight == pytest.approx(a, abs=1e-9 * found.condition)
+
+
+@settings(max_examples=20)
+@given(st.integers(1, 130), st.integers(0, 10_000))
+def test_small_systems_are_solved_by_halves(size: int, seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    matrix = np.eye(size) + rng.normal(size=(2, size, size)) / (3.0 * size)
+    right = rng.normal(size=(2, size, 2))
+    assert matrix @ solve_quietly(matrix, right) == pytest.approx(right, abs=1e-10)
 
 
 @given(st.integers(4, 60), st.integers(0, 10_000))

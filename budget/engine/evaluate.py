@@ -62,6 +62,28 @@ def with_emissions(result: Result, previous: Result | None = None) -> Result:
     return replace(result, checks=checks, status=worst_status(checks), emissions=found)
 
 
+def carried(result: Result, previous: Result | None) -> Result:
+    """The result with the check rows of stages to come taken from ``previous``, until these stages replace them.
+
+    So a view does not lose them for a moment after every edit. Rows of subjects and limit sets that are gone stay out.
+    """
+    if previous is None:
+        return result
+    project = result.project
+    known = {row.check for row in result.checks}
+    subjects = {"bus", *(f.id for f in project.filters), *(c.id for c in project.converters)}
+    asked = {f"emission {limit.name}" for limit in project.checked}
+    kept = (
+        row
+        for row in previous.checks
+        if row.check not in known
+        and row.subject in subjects
+        and (not row.check.startswith("emission ") or row.check in asked)
+    )
+    checks = in_order((*result.checks, *kept))
+    return replace(result, checks=checks, status=worst_status(checks))
+
+
 def with_stability(result: Result) -> Result:
     """The result with the stability of every corner and its check rows."""
     project = result.project

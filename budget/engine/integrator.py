@@ -31,7 +31,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from budget.engine.events import Logic, Phase, Segment, initial
-from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps, step_weights
+from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps, solve_quietly, step_weights
 from budget.engine.statespace import StateSpace, saturation
 from budget.engine.waves import Waves
 
@@ -45,6 +45,7 @@ _RESOLVE = 2.0  # tolerances: a mode that rings by less at every output is not f
 _QUARTIC = 3e-5  # error of the quartic through five points is this times (rate h)^5 of the amplitude
 _GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
 _CONTRACTS = 0.15  # repetition instead of Newton
+_WEAK = 0.03  # inputs that are repeated beside Newton
 _SWEEPS = 12
 _WARY, _GROWN = 1.5, 3.0  # the loads' push on a mode is taken this much larger; growth e^3 over the window counts
 _STRICT, _GROWING = 3e-3, 0.01  # of the tolerance, while a mode that grows is below this share of every output
@@ -144,7 +145,8 @@ class Batch:
         self.jump = window * _JUMP
         self.span = window
         share = np.where(self.rate.imag > 0.0, 0.5, 1.0)  # of a pair one mode is kept
-        self.feedback = shown[q][: self.loads] * driven[:, 1 : 1 + self.loads].T * share  # (N, R) of 1/s per A/V
+        feedback = shown[q][: self.loads] * driven[:, 1 : 1 + self.loads].T * share  # (N, R) of 1/s per A/V
+        self.feedback = _as_real(feedback)
         self.decay = np.exp(self.rate * self.tables.length[:: 2 * PER_OCTAVE, None])  # (times, R) for a look ahead
         self.waves = Waves(len(members), self.watch)
         self.outcomes: list[Outcome | None] = [None] * len(members)
@@ -275,16 +277,19 @@ class Batch:
             size = np.abs(found)
             off = np.abs(gap) > 0.02 * self.tolerance * size + least
             if newton is None:
-                newton = (np.abs(slope) * spread).max(axis=1, initial=0.0) > _CONTRACTS
+                strength = np.abs(slope) * spread
+                newton = strength.max(axis=1, initial=0.0) > _CONTRACTS
                 some = bool(newton.any())
+                # The others hardly feel what they do: small systems, and far quicker than the whole.
+                strong = np.flatnonzero((strength[newton] > _WEAK).any(axis=0))
             done = ~off.any(axis=1)
             if some:
                 which = np.flatnonzero(newton & ~done)
                 if which.size:
-                    matrix = -slope[which][:, :, None] * loop[which]
-                    matrix[:, np.arange(g.shape[1]), np.arange(g.shape[1])] += 1.0
+                    cut = np.ix_(which, strong)
+                    matrix = np.eye(strong.size) - slope[cut][:, :, None] * loop[np.ix_(which, strong, strong)]
                     with suppress(np.linalg.LinAlgError):  # a fold: repetition moves off it
-                        gap[which] = np.linalg.solve(matrix, gap[which][:, :, None])[:, :, 0]
+                        gap[cut] = solve_quietly(matrix, gap[cut][:, :, None])[:, :, 0]
             g = g + gap
             if done.all():
                 break
@@ -319,7 +324,7 @@ class Batch:
         n = self.loads
         volts = self.y[:, self.quantities][:, :n]
         slope = np.where(volts > self.logic.floor, -self.g[:, :n] / np.maximum(volts, self.logic.floor), 0.0)
-        shift = slope @ self.feedback
+        shift = (slope @ self.feedback).view(np.complex128)
         growth = self.rate.real + _WARY * shift.real
         risky = growth * self.span > _GROWN
         fastest = np.where(risky, np.abs(self.rate + shift), 0.0).max(axis=1, initial=0.0)

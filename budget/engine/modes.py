@@ -27,6 +27,8 @@ Indices = NDArray[np.intp]
 
 PER_OCTAVE = 4  # step lengths
 NODES = (0.25, 0.5, 0.75, 1.0)  # of a step, where values are exact
+_QUIET = 200_000  # multiplications in one product: common linear algebra libraries start threads above some 260 000
+_SMALL = 40  # unknowns
 _OCTAVES = 50  # from the shortest step to the window
 _SERIES = 18  # terms of phi_3 inside the unit circle: 1/21! is below rounding
 
@@ -38,7 +40,7 @@ class Modes:
     rate: Complex  # (R,) 1/s
     right: Complex  # (K, R)
     left: Complex  # (R, K)
-    condition: float  # of the eigenvectors in energy coordinates
+    condition: float  # of the eigenvectors in energy coordinates, by Frobenius norms; 1 at best
 
     def seen(self, matrix: Floats) -> Complex:
         """Rows ``matrix`` (Y, K) of states as rows (Y, R) of modes; ratio of the row's unit to that of a state."""
@@ -71,7 +73,7 @@ def modes(A: Floats, weight: Floats) -> Modes:  # noqa: N803
     left = np.zeros((rate.size, weight.size), dtype=np.complex128)
     try:
         inverse = np.linalg.inv(basis / basis_scale)
-        condition = float(np.linalg.norm(basis / basis_scale, 2) * np.linalg.norm(inverse, 2))
+        condition = float(np.linalg.norm(basis / basis_scale) * np.linalg.norm(inverse)) / weight.size
         inverse = inverse / basis_scale[:, None]
         left += inverse[: rate.size]
         left[paired] -= 1j * inverse[rate.size :]
@@ -116,6 +118,23 @@ def step_weights(rate: Complex, length: Floats, theta: Floats) -> Complex:
     return np.stack((p0, once, twice, start, middle, 2.0 * second - first), axis=2)
 
 
+def solve_quietly(matrix: Floats, right: Floats) -> Floats:
+    """Solve ``matrix`` (m, N, N) times x = ``right`` (m, N, J), ratios, for m small systems by halves.
+
+    Linear algebra libraries start threads from some hundred unknowns on, which then cost far more than they save; the
+    halves are not pivoted against each other, so that the diagonal blocks must be regular. Raises ``LinAlgError``.
+    """
+    size = matrix.shape[1]
+    if size <= _SMALL:
+        return np.asarray(np.linalg.solve(matrix, right), dtype=np.float64)
+    half = size // 2
+    upper = solve_quietly(matrix[:, :half, :half], np.concatenate((matrix[:, :half, half:], right[:, :half]), axis=2))
+    across, first = upper[:, :, : size - half], upper[:, :, size - half :]
+    below = matrix[:, half:, :half]
+    second = solve_quietly(matrix[:, half:, half:] - below @ across, right[:, half:] - below @ first)
+    return np.concatenate((first - across @ second, second), axis=1)
+
+
 @dataclass(slots=True)
 class Steps:
     """Tables over the step lengths ``length`` (J,) [s], rising; see :func:`make_steps`.
@@ -145,15 +164,24 @@ class Steps:
         self.weights[missing] = made
         count_q, count_m = self.direct.shape
         for row, w in zip(missing.tolist(), made, strict=True):
-            loop = self.loop[row].reshape(2, count_q, 2, count_m)
+            pushed = (self.sense * w[node, source] for node in (1, 3) for source in (4, 5))
+            found = self._driven(np.concatenate((*pushed, self.show * w[3, 1])))
+            loop = found[: 4 * count_q].reshape(2, 2, count_q, count_m).transpose(0, 2, 1, 3).copy()
             for node in range(2):
-                for source in range(2):
-                    part = (self.sense * w[2 * node + 1, 4 + source]) @ self.drive
-                    loop[node, :, source] = part.real
                 loop[node, :, node] += self.direct
+            self.loop[row] = loop.reshape(2 * count_q, 2 * count_m)
             self.spread[row] = np.abs(self.loop[row]).sum(axis=1)
-            self.defect[row] = np.abs(((self.show * w[3, 1]) @ self.drive).real + self.show_direct)
+            self.defect[row] = np.abs(found[4 * count_q :] + self.show_direct)
         self.known[missing] = True
+
+    def _driven(self, rows: Complex) -> Floats:
+        """Real part of rows (Y, R) times ``drive``, (Y, M), in pieces so small that no threads are started for them."""
+        width = 2 * rows.shape[1]
+        pairs = np.stack((rows.real, -rows.imag), axis=-1).reshape(rows.shape[0], width)
+        drive = np.stack((self.drive.real, self.drive.imag), axis=1).reshape(width, self.drive.shape[1])
+        piece = max(1, _QUIET // max(1, drive.size))
+        parts = [pairs[k : k + piece] @ drive for k in range(0, pairs.shape[0], piece)]
+        return np.concatenate(parts) if parts else np.zeros((0, self.drive.shape[1]))
 
 
 def make_steps(

@@ -27,6 +27,7 @@ from budget.ui.desk import Desk, Job, Work
 from budget.ui.paint import Line, frame
 
 LATE = 0.05  # seconds after which results that have not come look stale
+PAUSE = 0.03  # seconds between two stages: painting and calculating at once would make both late
 FAST = 2  # stages that follow an edit at once: DC and emissions
 WATCH = 2.0  # seconds between looks at the file on disk
 
@@ -103,11 +104,13 @@ class Worker:
         self._post = post
         self._newest: Snapshot | None = None
         self._told = 0.0
+        self._moved = threading.Event()  # a newer snapshot has come
         self._slow = Mailbox("slow stages", self._rest)
         self._fast = Mailbox("fast stages", self._begin)
 
     def want(self, snapshot: Snapshot) -> None:
         self._newest = snapshot
+        self._moved.set()
         self._fast.put(snapshot)
 
     def _begin(self, snapshot: Snapshot) -> None:
@@ -126,7 +129,8 @@ class Worker:
         try:
             for outcome in islice(results, count):
                 self._send(Calculated(outcome))
-                if self._newest is not snapshot:
+                self._moved.clear()
+                if self._newest is not snapshot or self._moved.wait(PAUSE):  # the screen comes first
                     return False
         except Exception as error:  # the sheet must stay open whatever the calculation does
             self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
