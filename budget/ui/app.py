@@ -7,6 +7,7 @@ the one before; only the spans that differ are sent to the terminal.
 from __future__ import annotations
 
 import contextlib
+import gc
 import sys
 import threading
 from collections.abc import Callable, Iterator
@@ -367,6 +368,7 @@ class BudgetApp(App[int], inherit_bindings=False):
 def show(session: Session, *, ascii_only: bool = False) -> int:
     """Run the sheet until the user leaves; returns the exit status."""
     sys.setswitchinterval(0.001)  # a key must not wait for a calculation
+    gc.set_threshold(20_000, 20, 50)  # nor for a full collection, which few of our objects need: they have no cycles
     app = BudgetApp(Desk(session, ascii_only))
     status = app.run(mouse=False)
     return status if status is not None else (app.return_code or 0)
