@@ -127,6 +127,11 @@ class Session:
     def result(self) -> Result | None:
         return self.outcome.result if self.outcome else None
 
+    def latest(self, part: str) -> Result | None:
+        """The latest result with ``part`` ("emissions", "stability", "inrush"): from before while that is in work."""
+        result = self.result
+        return result if result is not None and getattr(result, part) is not None else self.full
+
     @property
     def title(self) -> str:
         title = get(self.document, ("project", "title"))

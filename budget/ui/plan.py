@@ -7,7 +7,7 @@ from typing import Any
 from budget.report import words
 from budget.ui.plot import Plot, Trace
 from budget.ui.sheet import Context, stale, words_only
-from budget.ui.spectrum import nothing, shown, shown_result
+from budget.ui.spectrum import nothing, shown
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 _MEET = (
@@ -28,7 +28,7 @@ _BEAT = (
 
 def plan(context: Context) -> View:
     """Meetings of lines by pair of clocks, then beats; above them the scan of one clock once that was asked for."""
-    found, result = shown(context), shown_result(context)
+    found, result = shown(context), context.session.latest("emissions")
     if result is None or result.emissions is None:
         row = Row(("none",), (Cell(nothing(context)),))
         return View("plan", "frequency plan", (Section((Column("", 60, most=100),), (row,)),))

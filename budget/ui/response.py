@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING, Any
 
 from budget import quantity
@@ -144,14 +145,8 @@ def _damping(part: Filter, damper: Any, best: Any) -> Row:
     info = f"{name}: {show(best.entered)} entered, {show(best.resistance)} gives the lowest peak ({best.method})"
     texts = (name, show(best.entered), show(best.resistance), show(best.entered_peak), show(best.peak), best.method)
     cells = tuple(Cell(t, align=RIGHT if 0 < i < 5 else "left", info=info) for i, t in enumerate(texts))
-    mark = (best.frequency, 20 * _log10(best.peak)) if best.frequency and best.peak else None
+    mark = (best.frequency, 20 * math.log10(best.peak)) if best.frequency and best.peak else None
     return Row(("damping", damper.index), cells, mark=mark)
-
-
-def _log10(value: float) -> float:
-    import math
-
-    return math.log10(value)
 
 
 def _table_filter(part: Filter, context: Context) -> View:

@@ -201,9 +201,7 @@ class _Maker:
         for row in context.once("checks", (result, corner), lambda: _checks(result, corner)) if result else ():
             self.checks.setdefault(row.subject, []).append(row)
         self.outcome = self.session.outcome is not None
-        from budget.ui.spectrum import shown_result
-
-        made_of = (shown_result(context), corner, context.options)
+        made_of = (self.session.latest("emissions"), corner, context.options)
         self.emission: _Emission | None = context.once("emission", made_of, lambda: _emission(context))
 
     def bus(self) -> Row:

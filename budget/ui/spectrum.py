@@ -31,15 +31,9 @@ COLUMNS = (
 )
 
 
-def shown_result(context: Context) -> Result | None:
-    """The latest result that has emissions: the present one, or the one before while that is in work."""
-    result = context.session.result
-    return result if result is not None and result.emissions is not None else context.session.full
-
-
 def shown(context: Context) -> tuple[Result, Lines, tuple[int, int]] | None:
     """The result, limit set and corner that the emission views are about; None where there are none."""
-    result = shown_result(context)
+    result = context.session.latest("emissions")
     if result is None or result.emissions is None or not result.emissions.spectra:
         return None
     lines = result.emissions.spectra[context.options.limit % len(result.emissions.spectra)]
@@ -66,7 +60,7 @@ def waiting(context: Context) -> str:
 
 def nothing(context: Context) -> str:
     """Why there is no spectrum, and what to do."""
-    result = shown_result(context)
+    result = context.session.latest("emissions")
     if result is None or result.emissions is None:
         return waiting(context)
     return "no limit set is chosen: name one in the rules (r), emissions, such as CE102"

@@ -31,12 +31,6 @@ _FILTERS = (
 )
 
 
-def shown_result(context: Context) -> Result | None:
-    """The latest result that has the stability: the present one, or the one before while that is in work."""
-    result = context.session.result
-    return result if result is not None and result.stability is not None else context.session.full
-
-
 def shown_corner(context: Context, result: Result) -> tuple[int, int]:
     """The chosen corner, else the one with the smallest margin."""
     at = corner_index(result, context.corner)
@@ -51,7 +45,7 @@ def shown_corner(context: Context, result: Result) -> tuple[int, int]:
 
 def stable(context: Context) -> View:
     """The view: impedances over frequency, the filters' closest approach, and the modes from the least damped on."""
-    result = shown_result(context)
+    result = context.session.latest("stability")
     if result is None or result.stability is None:
         row = Row(("none",), (Cell(waiting(context)),))
         return View("stable", "stability", (Section((Column("", 60),), (row,)),))
@@ -163,7 +157,7 @@ def csv_stability(context: Context) -> str:
     import csv
     import io
 
-    result = shown_result(context)
+    result = context.session.latest("stability")
     if result is None or result.stability is None:
         return ""
     import numpy as np

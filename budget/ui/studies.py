@@ -17,7 +17,7 @@ from budget.project.store import free_name, write_text
 from budget.ui import stable, switchon
 from budget.ui.desk import Desk, Work
 from budget.ui.sheet import BOTH, CM, DM, rows_of
-from budget.ui.spectrum import csv_lines, shown_result
+from budget.ui.spectrum import csv_lines
 
 if TYPE_CHECKING:
     from budget.engine.evaluate import Result
@@ -47,7 +47,7 @@ def next_one(desk: Desk) -> None:
     if desk.view_name == "stable":
         desk.options = replace(options, filter=options.filter + 1)
         return
-    result = shown_result(context)
+    result = context.session.latest("emissions")
     count = len(result.emissions.spectra) if result and result.emissions else 0
     if count < 2:
         raise ProjectError("there is no other limit set; the rules (r) name them under emissions.")
@@ -272,7 +272,7 @@ def take_candidate(desk: Desk) -> None:
 
 def scan_clock(desk: Desk) -> None:
     """Ask for a clock and a range, and find the worst margin over it in the background."""
-    result = shown_result(desk.context())
+    result = desk.session.latest("emissions")
     if result is None or result.emissions is None or not result.emissions.spectra:
         raise ProjectError("there are no emissions yet; name a limit set in the rules (r), emissions.")
     names = [clock.name for clock in result.emissions.spectra[0].clocks if clock.frequency]
@@ -286,7 +286,7 @@ def scan_clock(desk: Desk) -> None:
 
     def start(name: str, text: str) -> None:
         low, high = frequency_range(text)
-        shown = shown_result(desk.context()) or result
+        shown = desk.session.latest("emissions") or result
         assert shown is not None
 
         def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:

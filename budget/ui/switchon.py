@@ -28,15 +28,9 @@ COLUMNS = (
 )
 
 
-def shown_result(context: Context) -> Result | None:
-    """The latest result that has the switch-on: the present one, or the one before while that is in work."""
-    result = context.session.result
-    return result if result is not None and result.inrush is not None else context.session.full
-
-
 def shown_run(context: Context) -> tuple[Result, Run] | None:
     """The case and event shown: the chosen one, else the one of the worst check."""
-    result = shown_result(context)
+    result = context.session.latest("inrush")
     if result is None or result.inrush is None or not result.inrush.runs:
         return None
     runs = result.inrush.runs
@@ -59,7 +53,7 @@ def switch_on(context: Context) -> View:
     """The view: a picture over time, and bus, filters and converters with their peaks against the limits."""
     found = shown_run(context)
     if found is None:
-        result = shown_result(context)
+        result = context.session.latest("inrush")
         text = waiting(context) if result is None or result.inrush is None else "nothing to calculate: there is no case"
         return View("switchon", "switch-on", (Section((Column("", 60),), (Row(("none",), (Cell(text),)),)),))
     result, run = found
