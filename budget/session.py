@@ -14,10 +14,12 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path as FilePath
 from typing import TYPE_CHECKING, Any
 
+from budget import trials
 from budget.project import edits, store
 from budget.project.build import Built, Cache, Shelf, build
 from budget.project.document import Document, Path, Tree, drop, from_data, get, put
 from budget.project.problems import Problem, ProjectError, place, printable
+from budget.trials import REFERENCE, Shelved, Trial
 
 if TYPE_CHECKING:
     from budget.engine.evaluate import Result
@@ -44,6 +46,7 @@ class Snapshot:
     problems: tuple[Problem, ...]
     cache: Cache
     previous: Result | None = None
+    lacking: tuple[Trial, ...] = ()  # held states whose results are still to be calculated
 
 
 @dataclass(frozen=True, slots=True)
@@ -93,6 +96,17 @@ def calculate(snapshot: Snapshot) -> Outcome:
     return deque(stages(snapshot), maxlen=1)[0]
 
 
+def asides(
+    snapshot: Snapshot, cancelled: Callable[[], bool] | None = None, progress: Callable[[float], None] | None = None
+) -> Iterator[tuple[Document, Outcome]]:
+    """The results of held states that have none yet: those read from a file, or left before theirs were there."""
+    for trial in snapshot.lacking:
+        alone = Snapshot(0, trial.document, trial.shelves, trial.problems, Cache(), snapshot.previous)
+        found = deque(stages(alone, cancelled, progress), maxlen=1)
+        if found and found[0].complete:
+            yield trial.document, found[0]
+
+
 @dataclass(slots=True)
 class Session:
     document: Document
@@ -107,6 +121,13 @@ class Session:
     outcome: Outcome | None = None
     full: Result | None = None  # the last complete result; a later one may be in work
     cache: Cache = field(default_factory=Cache)
+    reference: Trial | None = None  # what every view shows its change against
+    trials: tuple[Trial, ...] = ()
+    notes: tuple[str, ...] = ()  # what was found at the start, for the first message
+    strange_trials: bool = False  # the file of trials could not be read; it is put aside before one is written
+    # Told what was just done, for a journal: "edit", "undo", "redo", "reload", "trials", "saved", "moved" (to another
+    # file); and "saving" before a file is written.
+    tell: Callable[[str], None] = lambda _: None
 
     @property
     def dirty(self) -> bool:
@@ -142,7 +163,16 @@ class Session:
         return self.path.name if self.path else "unsaved project"
 
     def snapshot(self) -> Snapshot:
-        return Snapshot(self.generation, self.document, self.shelves, self.file_problems, self.cache, self.full)
+        lacking = {id(t.document): t for t in self.held() if not t.complete and t.document is not self.document}
+        return Snapshot(
+            self.generation,
+            self.document,
+            self.shelves,
+            self.file_problems,
+            self.cache,
+            self.full,
+            tuple(lacking.values()),
+        )
 
     def accept(self, outcome: Outcome) -> bool:
         """Take a result if it belongs to the present document; an older one is let go."""
@@ -151,6 +181,7 @@ class Session:
         self.outcome = outcome
         if outcome.complete:
             self.full = outcome.result
+        self.fill(self.document, outcome)
         return True
 
     def apply(self, label: str, document: Document, spot: Any) -> bool:
@@ -160,21 +191,37 @@ class Session:
         self.done.append(Step(label, self.document, spot))
         self.undone.clear()
         self._show(document)
+        self.tell("edit")
         return True
 
     def undo(self, spot: Any) -> Step | None:
-        return self._back(self.done, self.undone, spot)
+        return self._back("undo", self.done, self.undone)
 
     def redo(self, spot: Any) -> Step | None:
-        return self._back(self.undone, self.done, spot)
+        return self._back("redo", self.undone, self.done)
 
-    def _back(self, source: list[Step], target: list[Step], spot: Any) -> Step | None:
+    def _back(self, what: str, source: list[Step], target: list[Step]) -> Step | None:
         if not source:
             return None
         step = source.pop()
         target.append(Step(step.label, self.document, step.spot))
         self._show(step.document)
+        self.tell(what)
         return step
+
+    def resume(
+        self,
+        document: Document,
+        done: list[Step],
+        undone: list[Step],
+        saved: Document | None,
+        fingerprint: store.Fingerprint | None,
+    ) -> None:
+        """Go on where an earlier session stood: its document and history, and the file as that session knew it."""
+        self.done[:], self.undone[:] = done, undone
+        self.document, self.saved, self.fingerprint = document, saved, fingerprint
+        self.generation += 1
+        self._read_shelves()
 
     def _show(self, document: Document) -> None:
         names = get(self.document, ("shelf_files",))
@@ -187,14 +234,110 @@ class Session:
         if self.path is not None:
             self.shelves, self.file_problems = store.read_shelves(self.document.data, self.path)
 
+    # -- trials
+
+    def held(self) -> tuple[Trial, ...]:
+        """The reference, if there is one, and all trials."""
+        return (*([self.reference] if self.reference else ()), *self.trials)
+
+    def fill(self, document: Document, outcome: Outcome) -> bool:
+        """Give held states of this document their results; whether there was one that lacked them."""
+
+        def filled(trial: Trial) -> Trial:
+            return replace(trial, outcome=outcome) if trial.document is document and not trial.complete else trial
+
+        before = self.held()
+        self.reference = filled(self.reference) if self.reference else None
+        self.trials = tuple(filled(trial) for trial in self.trials)
+        return any(a is not b for a, b in zip(before, self.held(), strict=True))
+
+    def present(self, name: str) -> Trial:
+        """The project as it stands, with its results as far as they are there."""
+        outcome = self.outcome if self.fresh else None
+        return Trial(name, self.document, self.shelves, self.file_problems, trials.now(), outcome)
+
+    def hold(self) -> str:
+        """Make the present the reference; returns a note for the user, "" mostly."""
+        self.reference = self.present(REFERENCE)
+        return self._write_trials()
+
+    def keep(self) -> str:
+        """End the comparison: the present stays, the reference is let go."""
+        self.reference = None
+        return self._write_trials()
+
+    def drop(self, spot: Any) -> str:
+        """Go back to the reference exactly, with its results, as one step of history, and let it go."""
+        trial = self.reference
+        if trial is None:
+            raise ProjectError("no reference is held.")
+        self._take(f"back to {trial.name}", trial, spot)
+        return self.keep()
+
+    def hold_as(self, name: str) -> str:
+        """Hold the present as a trial; one of the same name is replaced."""
+        name = trials.checked(name)
+        if name == REFERENCE:
+            raise ProjectError(f"'{REFERENCE}' is what the changes are shown against; another name was expected.")
+        others = tuple(t for t in self.trials if t.name != name)
+        if len(others) >= trials.MOST:
+            raise ProjectError(f"there are {trials.MOST} trials already; remove one first.")
+        place = next((k for k, t in enumerate(self.trials) if t.name == name), len(others))
+        self.trials = (*others[:place], self.present(name), *others[place:])
+        return self._write_trials()
+
+    def switch(self, name: str, spot: Any) -> None:
+        """Make a trial the present, as one step of history."""
+        self._take(f"trial {name}", self.trial(name), spot)
+
+    def refer_to(self, name: str) -> str:
+        """Make a trial the reference."""
+        self.reference = self.trial(name)
+        return self._write_trials()
+
+    def forget(self, name: str) -> str:
+        """Remove a trial."""
+        gone = self.trial(name)
+        self.trials = tuple(t for t in self.trials if t is not gone)
+        return self._write_trials()
+
+    def trial(self, name: str) -> Trial:
+        found = trials.named(self.held(), name)
+        if found is None:
+            raise ProjectError(f"there is no trial '{printable(name, 40)}'.")
+        return found
+
+    def _take(self, label: str, trial: Trial, spot: Any) -> None:
+        if not self.apply(label, trial.document, spot):
+            return
+        self.shelves, self.file_problems = trial.shelves, trial.problems
+        if trial.outcome is not None:  # nothing has to be calculated again
+            self.accept(replace(trial.outcome, generation=self.generation))
+
+    def _write_trials(self) -> str:
+        """Write the trials beside the project; a sentence for the user where they live in this session only."""
+        self.tell("trials")
+        if self.path is None:
+            return ""
+        try:
+            if self.strange_trials:
+                trials.put_aside(self.path)
+                self.strange_trials = False
+            trials.write(self.path, Shelved(self.trials, self.reference))
+        except ProjectError as error:
+            return f"{error} The trials live in this session only."
+        return ""
+
     # -- the file
 
     def save(self, *, over: bool = False) -> tuple[str, ...]:
         """Write to the session's own file; returns notes for the user. Raises as ``store.save``."""
         if self.path is None:
             raise ProjectError("this project has no file yet; save it under a name.")
+        self.tell("saving")
         saved = store.save(self.document, self.path, self.fingerprint, over=over)
         self.fingerprint, self.saved = saved.fingerprint, self.document
+        self.tell("saved")
         return saved.notes
 
     def save_as(self, path: FilePath, *, over: bool = False) -> tuple[str, ...]:
@@ -208,9 +351,13 @@ class Session:
             raise store.ChangedOnDiskError(f"{printable(str(path), 200)} exists already; nothing was written.")
         if self.path is not None and self.path.parent.resolve() != path.parent.resolve():
             store.copy_shelves(names, self.path.parent, path.parent)
+        self.tell("saving")
         saved = store.save(self.document, path, None, over=over)
         self.path, self.fingerprint, self.saved = path, saved.fingerprint, self.document
+        self.tell("moved")
         self._read_shelves()
+        if self.held():
+            return (*saved.notes, *filter(None, [self._write_trials()]))
         return saved.notes
 
     def copy_to(self, path: FilePath) -> None:
@@ -230,6 +377,7 @@ class Session:
         self.generation += 1
         self.shelves, self.file_problems, self.fingerprint = loaded.shelves, loaded.problems, loaded.fingerprint
         self.saved = loaded.document
+        self.tell("reload")
 
     # -- the cells
 
@@ -246,7 +394,7 @@ class Session:
 def open_file(path: FilePath) -> Session:
     """A session on an existing file; raises ProjectError, a sentence, where it cannot be used at all."""
     loaded = store.load(path)
-    return Session(
+    session = Session(
         loaded.document,
         path,
         loaded.shelves,
@@ -254,6 +402,19 @@ def open_file(path: FilePath) -> Session:
         loaded.fingerprint,
         saved=loaded.document,
     )
+    try:
+        shelved = trials.read(path)
+    except ProjectError as error:
+        session.notes, session.strange_trials = (str(error),), True
+        return session
+
+    def own(trial: Trial) -> Trial:  # one that is the project as it stands shares its results
+        same = trial.document.data == loaded.document.data
+        return replace(trial, document=loaded.document, shelves=loaded.shelves) if same else trial
+
+    session.trials = tuple(own(trial) for trial in shelved.trials)
+    session.reference = own(shelved.reference) if shelved.reference else None
+    return session
 
 
 def open_demo() -> Session:

@@ -28,12 +28,12 @@ _EQUAL = 1e-12  # of an input; the two texts mean one number
 
 @dataclass(frozen=True, slots=True)
 class Variant:
-    """One of the two: what it is called, the file's data and what was calculated from it."""
+    """One of the two: what it is called, the file's data and what was calculated from it (None: nothing yet)."""
 
     name: str
     document: Document
     shelves: tuple[Shelf, ...]
-    result: Result
+    result: Result | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,21 +107,28 @@ class Comparison:
 
 
 def compare(before: Variant, after: Variant) -> Comparison:
-    """Everything that differs between two projects; both should be calculated to the same depth.
+    """Everything that differs between two calculated projects; both should be calculated to the same depth.
 
     A check that only one of the two calculated is "new" or "gone", and so is that of a subject only one of them has.
     """
+    assert before.result is not None
+    assert after.result is not None
     return Comparison(
         before.name,
         after.name,
         (before.result.status, after.result.status),
-        tuple(_inputs(before, after)),
+        inputs(before, after),
         tuple(sorted(_changes(before.result, after.result), key=_severity)),
         tuple(_energy(before.result, after.result)),
     )
 
 
 # -- inputs ----------------------------------------------------------------------------------------------------------
+
+
+def inputs(before: Variant, after: Variant) -> tuple[Input, ...]:
+    """What differs in what was entered."""
+    return tuple(_inputs(before, after))
 
 
 def _inputs(before: Variant, after: Variant) -> Iterator[Input]:

@@ -13,7 +13,7 @@ from budget.project import edits, schema, starter
 from budget.project.document import Path
 from budget.project.problems import ProjectError, place
 from budget.project.store import ChangedOnDiskError, free_name
-from budget.ui import lists, studies
+from budget.ui import lists, studies, trying
 from budget.ui.desk import Desk, command_items
 from budget.ui.sheet import rows_of
 from budget.ui.view import Cell, Row
@@ -508,7 +508,9 @@ def view_sheet(desk: Desk) -> None:
 
 
 def go_back(desk: Desk) -> None:
-    """To where a cell led from, else to the sheet."""
+    """End the calculation that runs; with none, go to where a cell led from, else to the sheet."""
+    if desk.stop_job():
+        return
     if desk.back:
         desk.stand_at(desk.back.pop())
     else:
@@ -660,8 +662,16 @@ def view_response(desk: Desk) -> None:
     desk.view_name = "response"
 
 
+# What a command does in one view in place of what it does elsewhere.
+OF_VIEW: dict[tuple[str, str], Action] = {
+    ("trials", "edit"): trying.switch,
+    ("trials", "new"): trying.hold_as,
+    ("trials", "remove"): trying.forget,
+}
 ACTIONS: dict[str, Action] = {
     **studies.ACTIONS,
+    "hold": trying.hold,
+    "view_trials": _show("trials"),
     **{name: _move(name) for name in ("up", "down", "left", "right", "first", "last", "page_up", "page_down")},
     **{f"view_{name}": _show(name) for name in ("rules", "loads", "checks", "limits", "shelf", "project")},
     "view_sheet": view_sheet,

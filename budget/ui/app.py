@@ -23,7 +23,8 @@ from textual.message import Message
 from textual.strip import Strip
 from textual.widget import Widget
 
-from budget.session import Outcome, Session, Snapshot, stages
+from budget.project.document import Document
+from budget.session import Outcome, Session, Snapshot, asides, stages
 from budget.ui.desk import Desk, Job, Work
 from budget.ui.paint import Line, frame
 
@@ -58,6 +59,15 @@ class Calculated(Message):
         self.outcome = outcome
 
 
+class Aside(Message):
+    """The results of a held state, from the worker."""
+
+    def __init__(self, document: Document, outcome: Outcome) -> None:
+        super().__init__()
+        self.document = document
+        self.outcome = outcome
+
+
 class Trouble(Message):
     """The worker met an error that is a fault of this program."""
 
@@ -84,6 +94,14 @@ class Progress(Message):
         self.fraction = fraction
 
 
+class Later(Message):
+    """Something that a job wants done in the thread of the screen."""
+
+    def __init__(self, do: Callable[[], None]) -> None:
+        super().__init__()
+        self.do = do
+
+
 class Finished(Message):
     """A longer calculation is done, or has failed with ``error``."""
 
@@ -93,6 +111,7 @@ class Finished(Message):
         self.work = work
         self.found = found
         self.error = error
+        self.stopped = False
 
 
 class Worker:
@@ -123,7 +142,16 @@ class Worker:
             self._slow.put((snapshot, rest))
 
     def _rest(self, item: tuple[Snapshot, Iterator[Outcome]]) -> None:
-        self._step(*item, None)
+        if self._step(*item, None):
+            self._aside(item[0])
+
+    def _aside(self, snapshot: Snapshot) -> None:
+        """What held states still lack, when nothing else is left to calculate."""
+        try:
+            for document, outcome in asides(snapshot, lambda: self._newest is not snapshot):
+                self._send(Aside(document, outcome))
+        except Exception as error:
+            self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
 
     def _step(self, snapshot: Snapshot, results: Iterator[Outcome], count: int | None) -> bool:
         """Send the next ``count`` stages; whether the rest is still wanted."""
@@ -285,6 +313,7 @@ class BudgetApp(App[int], inherit_bindings=False):
         self.desk.clip = self.copy_to_clipboard
         self.desk.calculate = self.start_calculation
         self.desk.start_job = self.start_job
+        self.desk.later = self.later
         self.set_interval(WATCH, self.look_at_file)
         self.call_after_refresh(self.begin)  # numpy and pint are loaded by the worker, behind the first paint
 
@@ -309,6 +338,10 @@ class BudgetApp(App[int], inherit_bindings=False):
         if self.desk.accept(event.outcome):
             self.board.sync()
 
+    def on_aside(self, event: Aside) -> None:
+        if self.desk.session.fill(event.document, event.outcome):
+            self.board.sync()
+
     def on_staged(self, event: Staged) -> None:
         self.desk.share = event.share
         if self.desk.pending:
@@ -322,11 +355,13 @@ class BudgetApp(App[int], inherit_bindings=False):
     def start_job(self, work: Work) -> None:
         """Run a longer calculation in a thread of its own; a newer one takes its place."""
         self.job_number += 1
-        number = self.job_number
-        self.desk.job = Job(work.label)
+        number, job = self.job_number, Job(work.label)
+        if self.desk.job is not None:
+            self.desk.job.stop = True
+        self.desk.job = job
 
         def cancelled() -> bool:
-            return self.job_number != number
+            return job.stop
 
         def progress(fraction: float) -> None:
             self.post_message(Progress(number, fraction))
@@ -335,11 +370,16 @@ class BudgetApp(App[int], inherit_bindings=False):
             try:
                 message = Finished(number, work, work.run(cancelled, progress))
             except Exception as error:  # the sheet must stay open whatever the calculation does
-                message = Finished(number, work, None, f"{type(error).__name__}: {error}")
+                message = Finished(number, work, None, "" if job.stop else f"{type(error).__name__}: {error}")
+            message.stopped = job.stop
             with contextlib.suppress(Exception):
                 self.post_message(message)
 
         threading.Thread(target=run, name="job", daemon=True).start()
+
+    def later(self, do: Callable[[], None]) -> None:
+        with contextlib.suppress(Exception):  # the program may be closing
+            self.post_message(Later(do))
 
     def on_progress(self, event: Progress) -> None:
         if event.number == self.job_number and self.desk.job is not None:
@@ -347,13 +387,19 @@ class BudgetApp(App[int], inherit_bindings=False):
             self.board.sync()
 
     def on_finished(self, event: Finished) -> None:
-        if event.number != self.job_number:
-            return
-        self.desk.job = None
-        if event.error:
-            self.desk.say(f"{event.work.label} failed, a fault of this program ({event.error})", "fail")
-        else:
-            event.work.done(event.found)
+        work, current = event.work, event.number == self.job_number
+        if current:
+            self.desk.job = None
+        if event.error and current:
+            self.desk.say(f"{work.label} failed, a fault of this program ({event.error})", "fail")
+        elif not event.error and (work.keeps or (current and not event.stopped)):
+            self.board.guard(lambda: work.done(event.found))
+        elif current:
+            self.desk.say(f"stopped: {work.label}")
+        self.board.sync()
+
+    def on_later(self, event: Later) -> None:
+        self.board.guard(event.do)
         self.board.sync()
 
     def look_at_file(self) -> None:

@@ -64,7 +64,7 @@ COMMANDS: tuple[Command, ...] = (
     Command("corner", ("o",), "choose the case and line that are shown", "show", "corner", rank=22),
     Command("worst", ("O",), "show the worst over all cases and lines", "show"),
     Command("view_sheet", ("s", "f2"), "the sheet: bus, filters, converters", "show"),
-    Command("go_back", ("escape",), "back to where you came from, else to the sheet", "show"),
+    Command("go_back", ("escape",), "stop a calculation; else back to where you came from, or to the sheet", "show"),
     Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields", rank=20),
     Command("view_rules", ("r", "f4"), "the rules: wanted margins", "show"),
     Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads", rank=21),
@@ -103,6 +103,8 @@ COMMANDS: tuple[Command, ...] = (
     Command(
         "scan_clock", ("M",), "move one clock over a range, find the best place", "show", "move clock", (PLAN,), rank=5
     ),
+    Command("hold", ("K",), "hold the present as reference; then keep it or drop back", "try", "reference", rank=30),
+    Command("view_trials", ("T",), "trials: states held by name, side by side", "try", "trials", rank=31),
     Command("view_limits", ("i", "f7"), "emission limit lines of your own", "show"),
     Command("view_shelf", ("h", "f8"), "shelf of reusable parts", "show"),
     Command("view_project", ("t", "f9"), "title, author, shelf files", "show"),
@@ -115,7 +117,14 @@ COMMANDS: tuple[Command, ...] = (
 )
 
 BY_KEY: dict[str, Command] = {key: command for command in COMMANDS for key in command.keys}
-GROUPS = {"move": "Moving", "edit": "Editing", "rows": "Rows", "show": "Showing", "file": "File and program"}
+GROUPS = {
+    "move": "Moving",
+    "edit": "Editing",
+    "rows": "Rows",
+    "show": "Showing",
+    "try": "Trying",
+    "file": "File and program",
+}
 
 # Characters that start typing into a cell at once.
 STARTS_NUMBER = frozenset("0123456789.+-(")
@@ -153,10 +162,19 @@ def keys_text(command: Command) -> str:
     return " or ".join(key_text(key) for key in command.keys)
 
 
+# What a command is called on the hint line of a view where it does something of its own.
+OWN_HINTS: dict[str, dict[str, str]] = {
+    "trials": {"edit": "switch to", "new": "hold as", "remove": "remove", "hold": "make reference"},
+    "allocation": {"edit": "take"},
+}
+
+
 def hints(view: str) -> list[tuple[str, str]]:
     """(key, word) for the hint line of a view, most useful first."""
-    fitting = [c for c in COMMANDS if c.hint and (ALL in c.where or view in c.where)]
-    return [(key_text(c.keys[0]), c.hint) for c in sorted(fitting, key=lambda c: c.rank)]
+    own = OWN_HINTS.get(view, {})
+    first = [(key_text(c.keys[0]), own[c.name]) for c in COMMANDS if c.name in own]
+    fitting = [c for c in COMMANDS if c.hint and c.name not in own and (ALL in c.where or view in c.where)]
+    return first + [(key_text(c.keys[0]), c.hint) for c in sorted(fitting, key=lambda c: c.rank)]
 
 
 def markdown_table() -> str:

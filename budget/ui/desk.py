@@ -8,7 +8,7 @@ a list to choose from, a question. So a burst of keys always lands where the use
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 from budget.engine.model import LINES
@@ -19,7 +19,22 @@ from budget.project.problems import ProjectError
 from budget.report import change
 from budget.report.numbers import Corner
 from budget.session import Outcome, Session
-from budget.ui import allocation, commands, fields, layout, lists, plan, response, sheet, spectrum, stable, switchon
+from budget.trials import Trial
+from budget.ui import (
+    allocation,
+    changes,
+    commands,
+    fields,
+    layout,
+    lists,
+    plan,
+    response,
+    sheet,
+    spectrum,
+    stable,
+    switchon,
+    trying,
+)
 from budget.ui.commands import COMMANDS, SHEET
 from budget.ui.sheet import Cells, Context, Options
 from budget.ui.view import Cell, Row, Section, View
@@ -40,9 +55,11 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "switchon": switchon.switch_on,
     "stable": stable.stable,
     "allocation": allocation.allocation,
+    "trials": trying.trials_view,
     "help": lists.help_view,
 }
-FORMS = frozenset({"fields", "rules", "limits", "project", "loads"})  # the first column only names the others
+FORMS = frozenset({"fields", "rules", "limits", "project", "loads", "trials"})  # the first column only names the others
+NOT_COMPARED = frozenset({"help", "allocation", "trials", "reach", "map", "faults"})
 OF_ONE = frozenset({"fields", "response"})  # views of one row, the subject
 LONGEST = 2000  # characters of one cell; more is cut when pasted
 
@@ -107,17 +124,53 @@ class Ask:
 
 @dataclass(frozen=True, slots=True)
 class Work:
-    """A longer calculation for another thread: ``run(cancelled, progress)``, and what to do with what it gives."""
+    """A longer calculation for another thread: ``run(cancelled, progress)``, and what to do with what it gives.
+
+    ``cancelled`` says that the user stopped it or that a newer one took its place. What it gives then is let go, unless
+    it ``keeps`` what it has found so far: then ``done`` gets that in any case.
+    """
 
     label: str
     run: Callable[[Callable[[], bool], Callable[[float], None]], Any]
     done: Callable[[Any], None]
+    keeps: bool = False
 
 
 @dataclass(slots=True)
 class Job:
     label: str
     fraction: float = 0.0
+    stop: bool = False  # it was asked to end
+
+
+@dataclass(slots=True)
+class Then:
+    """The reference as a session of its own, and the views made of it."""
+
+    session: Session
+    views: dict[Any, View]
+    cells: Cells
+
+
+def was(trial: Trial) -> Session:
+    """A held state as a session, for views to be made of."""
+    outcome = trial.outcome
+    full = outcome.result if outcome else None
+    return Session(
+        trial.document,
+        None,
+        trial.shelves,
+        trial.problems,
+        generation=outcome.generation if outcome else 0,
+        outcome=outcome,
+        full=full,
+        reference=trial,
+    )
+
+
+def bad_cells(outcome: Outcome | None) -> frozenset[Path]:
+    """The cells that cannot be read."""
+    return frozenset(edits.cell_of(p.path) for p in outcome.built.errors) if outcome else frozenset()
 
 
 @dataclass(slots=True)
@@ -142,25 +195,31 @@ class Desk:
     leave: Callable[[], None] = lambda: None
     clip: Callable[[str], None] = lambda _: None
     actions: dict[str, Callable[[Desk], None]] = field(default_factory=dict)
+    of_view: dict[tuple[str, str], Callable[[Desk], None]] = field(default_factory=dict)  # instead, in one view
     label: str = ""  # of the last edit, told with what it changed
     told: str = ""  # what was told of it so far; later stages of the results may tell more
     options: Options = field(default_factory=Options)
     share: float = 0.0  # how far the longest stage of the results has come
     job: Job | None = None  # a longer calculation that was asked for, and its progress
     start_job: Callable[[Work], None] = lambda _: None
+    later: Callable[[Callable[[], None]], None] = lambda do: do()  # from a job's thread: do it in that of the screen
     before: Any = None  # the result before it
     built_before: Built | None = None
     cells: Cells = field(default_factory=dict)
     memo: dict[str, tuple[tuple[Any, ...], Any]] = field(default_factory=dict)
     _stamp: Any = None
     _views: dict[tuple[str, Path], View] = field(default_factory=dict)
+    _then: Then | None = None  # the views of the reference
     _flat_of: View | None = None
     _lines: list[tuple[Section, Row | None]] = field(default_factory=list)
 
     def __post_init__(self) -> None:
-        from budget.ui.actions import ACTIONS
+        from budget.ui.actions import ACTIONS, OF_VIEW
 
-        self.actions = ACTIONS
+        self.actions, self.of_view = ACTIONS, OF_VIEW
+        held = self.session.reference
+        notes = [*self.session.notes, *([f"{held.name}, held {held.when}, is still the reference"] if held else [])]
+        self.say(" ".join(notes), "thin" if self.session.notes else "")
 
     # -- what is shown
 
@@ -172,12 +231,10 @@ class Desk:
         return self.cursors[where]
 
     def context(self, subject: Path | None = None) -> Context:
-        outcome = self.session.outcome
-        bad = frozenset(edits.cell_of(p.path) for p in outcome.built.errors) if outcome else frozenset()
         return Context(
             self.session,
             self.corner,
-            bad,
+            bad_cells(self.session.outcome),
             subject or self.subject,
             self.ascii_only,
             self.options,
@@ -194,14 +251,33 @@ class Desk:
 
     def make(self, name: str, subject: Path) -> View:
         """A view by its name, from the cache unless something it shows has changed."""
-        stamp = (self.session.generation, id(self.session.outcome), self.corner, self.options)
+        reference = self.session.reference
+        stamp = (self.session.generation, id(self.session.outcome), self.corner, self.options, id(reference))
         if self._stamp != stamp:
             self._stamp = stamp
             self._views.clear()
         key = (name, subject if name in OF_ONE else ())
         if key not in self._views:
-            self._views[key] = VIEWS[name](self.context(subject))
+            self._views[key] = self._compared(name, subject, VIEWS[name](self.context(subject)))
         return self._views[key]
+
+    def _compared(self, name: str, subject: Path, view: View) -> View:
+        """The view with its changes against the reference, if one is held and the view shows the project."""
+        reference = self.session.reference
+        if reference is None or name in NOT_COMPARED or reference.document is self.session.document:
+            return view
+        then = self._then
+        if then is None or then.session.reference is not reference:
+            then = self._then = Then(was(reference), {}, {})
+        there = changes.same_row(subject, self.session.document, reference.document)
+        if there is None:
+            return view
+        key = (name, there, self.corner, self.options)
+        if key not in then.views:
+            context = self.context(there)
+            bad = bad_cells(reference.outcome)
+            then.views[key] = VIEWS[name](replace(context, session=then.session, bad=bad, cells=then.cells, memo={}))
+        return changes.against(view, then.views[key], self.session.document, reference.document)
 
     def lines(self) -> list[tuple[Section, Row | None]]:
         self.view()
@@ -317,6 +393,14 @@ class Desk:
         self.changed(label)
         return True
 
+    def stop_job(self) -> bool:
+        """Ask the calculation that runs to end; False if none runs, or it was asked already."""
+        if self.job is None or self.job.stop:
+            return False
+        self.job.stop = True
+        self.say(f"stopping: {self.job.label}")
+        return True
+
     def changed(self, label: str) -> None:
         self.label, self.told = label, ""
         outcome = self.session.outcome  # still that of before the edit, as far as it has come
@@ -345,7 +429,7 @@ class Desk:
     def run(self, name: str) -> None:
         """Carry out a command; what it cannot do is said on the message line."""
         try:
-            self.actions[name](self)
+            self.of_view.get((self.view_name, name), self.actions[name])(self)
         except ProjectError as error:
             self.say(str(error), "fail")
 
@@ -468,7 +552,7 @@ class Desk:
     def move(self, where: str) -> None:
         lines, cursor = self.lines(), self.cursor
         at = self.row_index()
-        rows = [i for i, (_, row) in enumerate(lines) if row is not None]
+        rows = [i for i, (_, row) in enumerate(lines) if row is not None and not row.rides]
         if not rows:
             return
         row = lines[at][1]
@@ -555,6 +639,10 @@ class Desk:
         if isinstance(self.mode, Ask):
             return [(commands.key_text(k), label) for k, (label, _) in self.mode.options.items()] + [("Esc", "go back")]
         pairs = commands.hints(self.view_name)
+        if self.job is not None and not self.job.stop:
+            return [("Esc", "stop"), *pairs]
+        if self.session.reference is not None and self.view_name != "trials":
+            pairs = [("K", "keep or drop"), *pairs]
         return pairs if self.view_name == SHEET else [("Esc", "back"), *pairs]
 
 

@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import textwrap
+from dataclasses import replace
 
 from budget.project import edits, schema
 from budget.project.document import Path
 from budget.report import words
 from budget.ui import commands
-from budget.ui.sheet import Context, behind, rows_of, value_cell, words_only
+from budget.ui.sheet import Context, behind, rank, rows_of, value_cell, words_only
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 
@@ -38,7 +39,7 @@ def loads(context: Context) -> View:
 
 
 def _in_case(cell: Cell, index: int) -> Cell:
-    return Cell(cell.text, cell.path, RIGHT, cell.tone, cell.mark, cell.info, item=("case", index))
+    return replace(cell, align=RIGHT, item=("case", index))
 
 
 def checks(context: Context) -> View:
@@ -59,11 +60,14 @@ def checks(context: Context) -> View:
             (", ".join(w for w in (row.case, row.line) if w), "left"),
             (words.note(row), "left"),
         )
-        cells = tuple(
+        cells = [
             Cell(words_only(t), None, align, row.status if not k else "", "", info, leads=lead, calculated=True)
             for k, (t, align) in enumerate(texts)
-        )
-        rows.append(Row(("check", row.check, row.subject), cells))
+        ]
+        cells[0] = replace(cells[0], rank=rank(row))
+        kind = {"ratio": "%", "dB": "dB"}.get(row.margin_unit, "")
+        cells[5] = replace(cells[5], value=row.margin if kind else None, kind=kind)
+        rows.append(Row(("check", row.check, row.subject), tuple(cells)))
     if not rows:
         rows.append(Row(("none",), (Cell("~" if context.session.outcome is None else "nothing to check"),)))
     columns = (
@@ -72,7 +76,7 @@ def checks(context: Context) -> View:
         Column("of", 8, most=14),
         Column("value", 8, RIGHT),
         Column("limit", 8, RIGHT),
-        Column("margin", 11, RIGHT),
+        Column("margin", 11, RIGHT, sense=1),
         Column("where", 16, most=24),
         Column("note", 20, most=60),
     )

@@ -11,7 +11,7 @@ from budget.project.problems import place
 from budget.report import words
 from budget.session import Session
 from budget.ui import plot
-from budget.ui.desk import Ask, Desk, Edit, Pick
+from budget.ui.desk import NOT_COMPARED, Ask, Desk, Edit, Pick
 from budget.ui.layout import Slot, layout
 from budget.ui.sheet import words_only
 from budget.ui.view import RIGHT, Cell, Row, Section, View
@@ -19,7 +19,7 @@ from budget.ui.view import RIGHT, Cell, Row, Section, View
 Span = tuple[str, str]  # text, tone
 Line = list[Span]
 
-OWN_CORNER = frozenset({"spectrum", "switchon", "stable"})  # their titles name the corner
+OWN_CORNER = frozenset({"spectrum", "switchon", "stable", "trials"})  # their titles name the corner
 SIDE = 130  # from this width on there is a second pane at the right
 SIDE_WIDTH = 52
 LEAST_BELOW = 6  # free lines below the sheet from which on the checks stand there
@@ -105,6 +105,8 @@ def _title(desk: Desk) -> Line:
     name = desk.view().title if desk.view_name != "sheet" else session.title
     state = _state(session, desk)
     corner = [] if desk.view_name in OWN_CORNER else [(" | ", "pale"), (desk.corner_title(), "")]
+    if session.reference is not None and desk.view_name not in NOT_COMPARED:
+        corner += [(" | ", "pale"), (f"vs {words_only(session.reference.name)}", "thin")]
     tail: Line = [*corner, (" | ", "pale"), *state]
     room = desk.width - 11 - sum(_size(text) for text, _ in tail)
     name = name if _size(name) <= room else set_cell_size(name, max(0, room - 2)) + ".."
@@ -312,7 +314,10 @@ def _info(desk: Desk) -> list[Line]:
         return [[("", "")], [("", "")]]
     summary = desk.view().summary
     if summary:
-        return [[(cell.info, "")], [(_split(summary, desk.width)[0], "head")]]
+        info = "; ".join(part for part in (cell.change, cell.info) if part)
+        return [[(info, "")], [(_split(summary, desk.width)[0], "head")]]
+    if cell.path is None and cell.change:
+        return [[(_split(cell.info or cell.text, desk.width)[0], "")], [_changed(cell)]]
     if cell.path is None:
         second = "Enter goes to what it follows from" if cell.leads else ""
         first, rest = _split(cell.info or cell.text, desk.width)
@@ -324,7 +329,14 @@ def _info(desk: Desk) -> list[Line]:
     if problem:
         first, rest = _split(f"{where}: ! {problem}", desk.width)
         return [[(first, "fail")], [(rest, "") if rest else (_second(spec, cell), "pale")]]
-    return [[(f"{where}: ", "head"), (help_text, "")], [(_second(spec, cell), "pale")]]
+    last = _changed(cell) if cell.change else (_second(spec, cell), "pale")
+    return [[(f"{where}: ", "head"), (help_text, "")], [last]]
+
+
+def _changed(cell: Cell) -> Span:
+    """What became of a cell against the reference."""
+    tone = "fail" if cell.change.endswith("worse") else "ok" if cell.change.endswith("better") else "head"
+    return f"against the reference: {cell.change}", tone
 
 
 def _split(text: str, width: int) -> tuple[str, str]:

@@ -15,7 +15,7 @@ _MEET = (
     Column("orders", 8),
     Column("from", 11, RIGHT),
     Column("to", 11, RIGHT),
-    Column("pairs of lines", 14, RIGHT),
+    Column("pairs of lines", 14, RIGHT, sense=-1),
 )
 _BEAT = (
     Column("beat, |n f1 - m f2|", 21, most=26),

@@ -194,7 +194,8 @@ class _Canvas:
         for column, (low, high) in extent.items():
             for level in range(low, high + 1):
                 self.put(column, level, trace.symbol, trace.tone)
-            self.tops.setdefault((column, high), []).append((trace.symbol, trace.tone))
+            if trace.tone != "pale":  # what is faint never covers the others
+                self.tops.setdefault((column, high), []).append((trace.symbol, trace.tone))
 
     def _places(self, trace: Trace) -> Iterator[tuple[int, int] | None]:
         """Column and level of each point of a curve, at the edge where it lies outside; None where it has none.

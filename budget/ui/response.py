@@ -21,13 +21,13 @@ _PEAKS = (
     Column("resonance of", 24, most=30),
     Column("at", 11, RIGHT),
     Column("value", 11, RIGHT),
-    Column("above its surroundings", 22, RIGHT),
+    Column("above its surroundings", 22, RIGHT, sense=-1),
 )
 _DAMPING = (
     Column("damping", 24, most=30),
     Column("entered", 11, RIGHT),
     Column("best", 11, RIGHT),
-    Column("peak now", 11, RIGHT),
+    Column("peak now", 11, RIGHT, sense=-1),
     Column("peak best", 11, RIGHT),
     Column("how found", 12, most=70),
 )

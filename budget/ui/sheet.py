@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 from budget import quantity
@@ -27,13 +27,13 @@ BAR = 5
 COLUMNS = (
     Column("name", 16, most=30, wide=24),
     Column("out W", 6, RIGHT),
-    Column("in W", 6, RIGHT),
-    Column("in A", 6, RIGHT),
-    Column("of allowed", 11, RIGHT),
+    Column("in W", 6, RIGHT, sense=-1),
+    Column("in A", 6, RIGHT, sense=-1),
+    Column("of allowed", 11, RIGHT, sense=-1),
     Column("at V", 6, RIGHT),
-    Column("heat W", 6, RIGHT),
+    Column("heat W", 6, RIGHT, sense=-1),
     Column("worst check", 16, most=34, wide=26),
-    Column("emits dB", 8, RIGHT),
+    Column("emits dB", 8, RIGHT, sense=-1),
     Column("rated", 7, RIGHT),
     Column("filter", 7),
     Column("load", 7, RIGHT),
@@ -84,11 +84,21 @@ class Context:
         return old[1]
 
 
+KIND_OF = {"W": "power", "A": "current", "V": "voltage"}
+_LEVEL = {"ok": 0, "no data": 1, "thin": 2, "fail": 3}
+
+
+def rank(row: CheckRow) -> float:
+    """A number that tells whether a check came out better: by its state first, then by its margin."""
+    margin = row.margin if row.margin is not None else 0.0
+    return -1e6 * _LEVEL[row.status] + max(-1e5, min(1e5, margin))
+
+
 def figure(value: float | None, unit: str) -> str:
     """A number for a column whose heading names the unit: only the prefix stays with it."""
     if value is None:
         return ""
-    number, scaled = quantity.show_parts(value, quantity.KINDS[{"W": "power", "A": "current", "V": "voltage"}[unit]])
+    number, scaled = quantity.show_parts(value, quantity.KINDS[KIND_OF[unit]])
     return number + scaled.removesuffix(unit)
 
 
@@ -129,8 +139,6 @@ def _checks(result: Result, corner: Corner | None) -> tuple[CheckRow, ...]:
     at = corner_index(result, corner)
     if at is None:
         return result.checks
-    from dataclasses import replace
-
     from budget.engine.evaluate import evaluate_dc
 
     one = replace(result.project, cases=(result.project.cases[at[0]],))
@@ -296,11 +304,10 @@ class _Maker:
                 if key == "heat" and self.numbers and index is not None:
                     info += f": {self.numbers.heat.get((kind, index), '')}"
             text = figure(number.value, unit) if number else self.none()
-            cells[key] = Cell(text, align=RIGHT, info=info, leads=lead, calculated=True)
+            value, of = (number.value if number else None), KIND_OF[unit]
+            cells[key] = Cell(text, align=RIGHT, info=info, leads=lead, calculated=True, value=value, kind=of)
         if volts:
-            cells["voltage"] = Cell(
-                cells["voltage"].text, align=RIGHT, info=cells["voltage"].info, leads=volts, calculated=True
-            )
+            cells["voltage"] = replace(cells["voltage"], leads=volts)
         current = found.get("current")
         share = Cell("", align=RIGHT, calculated=True)
         if current and allowed is not None:
@@ -312,6 +319,7 @@ class _Maker:
             if kind != "converter":
                 lead = (*path, "rating" if kind == "bus" else "rated_current")
             share = Cell(bar(ratio, self.context.ascii_only), None, RIGHT, tone, "", info, leads=lead, calculated=True)
+            share = replace(share, value=ratio, kind="%")
         elif not self.outcome:
             share = Cell(PENDING, align=RIGHT, calculated=True)
         return cells["out"], cells["taken"], cells["current"], share, cells["voltage"], cells["heat"]
@@ -332,7 +340,8 @@ class _Maker:
         lacking = sum(r.status == "no data" for r in rows)
         if lacking and row.status != "no data":
             info += f"; {lacking} without data"
-        return Cell(words.verdict(row), None, "left", row.status, "", info, text, leads=lead, calculated=True)
+        cell = Cell(words.verdict(row), None, "left", row.status, "", info, text, leads=lead, calculated=True)
+        return replace(cell, rank=rank(row))
 
     def emits(self, kind: str, ident: Any) -> Cell:
         """What a row adds to the reading of the receiver at its worst tuning."""
@@ -347,7 +356,8 @@ class _Maker:
         info = f"{what} at {words.frequency(found.frequency)}, {found.where}" + (
             f": {level:.1f} {found.unit}" if level is not None else ": not seen there"
         )
-        return Cell(f"{level:.1f}" if level is not None else "-", None, RIGHT, "", "", info, calculated=True)
+        text = f"{level:.1f}" if level is not None else "-"
+        return Cell(text, None, RIGHT, "", "", info, calculated=True, value=level, kind="dB")
 
     def typed(self, path: Path, align: str = RIGHT) -> Cell:
         return value_cell(self.context, path, align)
@@ -444,30 +454,37 @@ def _value_cell(context: Context, path: Path, align: str, bad: bool) -> Cell:
     if value is None or value == "":
         tone, text = "pale", default_text(spec)
         info = "not entered" + (f"; taken as {text}" if text else "")
-    elif not bad:
-        shown = scaled(spec, value)
-        text = text if shown is None else shown
+    stands = spec.default if value is None or value == "" else value
+    found = None if bad or stands is None else reading(spec, stands)
+    if found is not None and tone != "pale":
+        text = found[0]
     if lent:
         info += "; from the shelf"
-    return Cell(text, path, align, tone, "!" if bad else "", info)
+    number, kind = found[1:] if found else (None, "")
+    return Cell(text, path, align, tone, "!" if bad else "", info, value=number, kind=kind)
 
 
 def scaled(spec: Any, value: Any) -> str | None:
     """A stored value in engineering units, None where it is no quantity or cannot be read."""
+    found = reading(spec, value)
+    return found[0] if found else None
+
+
+def reading(spec: Any, value: Any) -> tuple[str, float | None, str] | None:
+    """A stored value in engineering units, with its number and kind; None if it is no quantity or cannot be read."""
     from budget.project import read, schema
 
     try:
         if spec is schema.LOAD:
-            kind, number = read.read_load(value)
-            if kind == "off":
-                return "off"
-            return quantity.show(number, quantity.KINDS["power" if kind == "power" else "ratio"])
+            sort, number = read.read_load(value)
+            kind = "power" if sort == "power" else "ratio"
+            return "off" if sort == "off" else quantity.show(number, quantity.KINDS[kind]), number, kind
         cell = spec.fields[-1] if spec.kind == schema.CURVE and not isinstance(value, list) else spec
         if cell.kind in quantity.KINDS:
             number = read.quantity_value(cell, value)
             if cell.kind == "time" and number >= 60.0:
-                return f"{number / 3600:.4g} h" if number >= 3600.0 else f"{number / 60:.4g} min"
-            return quantity.show(number, quantity.KINDS[cell.kind])
+                return f"{number / 3600:.4g} h" if number >= 3600.0 else f"{number / 60:.4g} min", number, "time"
+            return quantity.show(number, quantity.KINDS[cell.kind]), number, cell.kind
     except ValueError:
         return None
     return None

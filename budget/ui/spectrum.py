@@ -22,10 +22,10 @@ FAINT = -100.0  # dB; less is what rounding left of nothing, and no number to sh
 COLUMNS = (
     Column("line", 9, most=14),
     Column("at", 10, RIGHT),
-    Column("margin", 7, RIGHT),
-    Column("level", 6, RIGHT),
-    Column("DM", 6, RIGHT),
-    Column("CM", 6, RIGHT),
+    Column("margin", 7, RIGHT, sense=1),
+    Column("level", 6, RIGHT, sense=-1),
+    Column("DM", 6, RIGHT, sense=-1),
+    Column("CM", 6, RIGHT, sense=-1),
     Column("limit", 6, RIGHT),
     Column("from", 12, most=30),
 )

@@ -19,7 +19,7 @@ if TYPE_CHECKING:
 MODES = 24
 _MODES = (
     Column("mode at", 12, RIGHT),
-    Column("damping", 9, RIGHT),
+    Column("damping", 9, RIGHT, sense=1),
     Column("who takes part most", 40, most=90),
 )
 _FILTERS = (
@@ -27,7 +27,7 @@ _FILTERS = (
     Column("source peak", 12, RIGHT),
     Column("at", 11, RIGHT),
     Column("loads", 11, RIGHT),
-    Column("apart", 9, RIGHT),
+    Column("apart", 9, RIGHT, sense=1),
 )
 
 

@@ -17,11 +17,11 @@ if TYPE_CHECKING:
 
 COLUMNS = (
     Column("", 11, most=26),
-    Column("peak A", 8, RIGHT),
+    Column("peak A", 8, RIGHT, sense=-1),
     Column("limit", 8, RIGHT),
-    Column("i2t", 13, RIGHT),
+    Column("i2t", 13, RIGHT, sense=-1),
     Column("limit", 10, RIGHT),
-    Column("peak V", 8, RIGHT),
+    Column("peak V", 8, RIGHT, sense=-1),
     Column("limit", 8, RIGHT),
     Column("starts", 9, RIGHT),
     Column("at the end", 10, most=16),

@@ -29,6 +29,10 @@ class Cell:
     item: Path | None = None
     leads: Path | None = None  # the cell that Enter leads to
     calculated: bool = False  # looks stale while results are pending
+    value: float | None = None  # the number behind the text, of ``kind`` (of quantity.KINDS, "%" or "dB")
+    kind: str = ""
+    rank: float | None = None  # where worse and better do not follow from the number: the larger is better
+    change: str = ""  # in words, against the reference
 
 
 @dataclass(frozen=True, slots=True)
@@ -40,6 +44,7 @@ class Row:
     item: Path | None = None
     depth: int = 0
     mark: tuple[float, float] | None = None  # the point of the view's picture that this row is about
+    rides: bool = False  # belongs to the row above; the cursor passes it by
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,6 +54,7 @@ class Column:
     align: str = LEFT
     most: int = 0  # may grow up to this width where there is room
     wide: int = 0  # its width on a wide screen
+    sense: int = 0  # 1 where more is better, -1 where less is, 0 where neither
 
 
 @dataclass(frozen=True, slots=True)
