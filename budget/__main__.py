@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import sys
 
@@ -13,7 +14,15 @@ def main() -> None:
     """Run the command line and leave with its exit status."""
     from budget.cli import run
 
-    sys.exit(run(sys.argv[1:]))
+    status = run(sys.argv[1:])
+    if "budget.ui.app" in sys.modules:
+        # The sheet has threads that may be busy for long. All is closed and written by now; the interpreter's own way
+        # out could wait for ever for a lock that one of them holds, or die of a terminal that is gone.
+        for stream in (sys.stdout, sys.stderr):
+            with contextlib.suppress(OSError, ValueError):
+                stream.flush()
+        os._exit(status)
+    sys.exit(status)
 
 
 if __name__ == "__main__":

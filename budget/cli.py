@@ -5,20 +5,24 @@ from __future__ import annotations
 import argparse
 import contextlib
 import io
+import locale
 import os
 import shlex
+import signal
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, NoReturn
 
 from budget import __version__
+from budget.glossary import for_terminal
 
 if TYPE_CHECKING:
     from budget.engine.evaluate import Result
     from budget.engine.model import Project
 
 OK, FAILED, UNUSABLE = 0, 1, 2
+CHECKING = 60.0  # s for the slow checks of proposed allocations
 COMMANDS = ("check", "new", "allocate", "reach", "sweep", "compare")
 FORMATS = ("text", "json", "markdown", "csv")
 
@@ -33,7 +37,8 @@ examples:
   budget reach bus.toml PATH      how far one cell can go before a check fails
   budget compare A B              what differs, in inputs and results
   budget new bus.toml             write a commented project to start from
-
+"""
+_CAUTION = """
 Results are estimates. Work on powered or charged hardware only as local codes and licensed practice require.
 """
 _ALLOCATE_EXAMPLES = """\
@@ -60,20 +65,25 @@ def run(arguments: Sequence[str]) -> int:
         return _run(list(arguments))
     except KeyboardInterrupt:
         return 130
+    except Exception as error:
+        from budget.keeping import log
+
+        _say(f"budget: a fault of this program{log.told(error)}.")
+        return UNUSABLE
 
 
 def _run(arguments: list[str]) -> int:
     command = arguments[0] if arguments else ""
     if command == "check":
-        return _check(_check_parser().parse_intermixed_args(arguments[1:]))
+        return _check(_options(_check_parser(), arguments[1:], mixed=True))
     if command == "allocate":
-        return _allocate(_allocate_parser().parse_args(arguments[1:]))
+        return _allocate(_options(_allocate_parser(), arguments[1:]))
     if command in ("reach", "sweep", "compare"):
         return _study(command, arguments[1:])
     if command == "new":
         return _new(_new_parser().parse_args(arguments[1:]))
     parser = _sheet_parser()
-    options = parser.parse_args(arguments)
+    options = _options(parser, arguments)
     if len(options.files) > 1:
         commands = ", ".join(COMMANDS)
         parser.error(f"the sheet opens one file, and '{options.files[0]}' is no command; the commands are {commands}")
@@ -94,16 +104,41 @@ class _Parser(argparse.ArgumentParser):
         _print(self.format_help())
 
 
+def _options(parser: argparse.ArgumentParser, arguments: list[str], *, mixed: bool = False) -> argparse.Namespace:
+    """What a command that reads projects is told; from where their shelf files may come is said here for all of them.
+
+    With ``mixed`` options may stand between the files.
+    """
+    parser.add_argument(
+        "--shelf-from",
+        action="append",
+        default=[],
+        metavar="FOLDER",
+        help="also read shelf files below this folder, not only below the project's own; may be given again",
+    )
+    options = parser.parse_intermixed_args(arguments) if mixed else parser.parse_args(arguments)
+    from budget.project import permit
+    from budget.project.problems import ProjectError
+
+    try:
+        permit.allow(options.shelf_from)
+    except ProjectError as error:
+        parser.error(f"argument --shelf-from: {error}")
+    return options
+
+
 def _sheet_parser() -> argparse.ArgumentParser:
     parser = _Parser(
         prog="budget",
         usage="budget [FILE] | budget check FILE... | budget new FILE",
         description="Lay out a DC bus, its EMI filters and the converters behind them, and see what the choice costs.",
-        epilog=_EXAMPLES,
+        epilog=f"{_EXAMPLES}\n{for_terminal()}\n{_CAUTION}",
         formatter_class=argparse.RawDescriptionHelpFormatter,
     )
     parser.add_argument("files", metavar="FILE", nargs="*", help="the project to open; without it, a copy of the demo")
-    parser.add_argument("--ascii", action="store_true", help="draw with ASCII signs only (default in a C locale)")
+    parser.add_argument(
+        "--ascii", action="store_true", help="draw with ASCII signs only (default where the locale is not UTF-8)"
+    )
     parser.add_argument("--version", action="store_true", help="print the version and leave")
     return parser
 
@@ -152,10 +187,33 @@ def _allocate_parser() -> argparse.ArgumentParser:
     parser.add_argument(
         "--ban", action="append", default=[], metavar="CV,FL", help="a converter not behind this filter"
     )
-    parser.add_argument("--most", type=int, metavar="N", help="at most so many converters behind each filter")
-    parser.add_argument("--time", type=float, default=10.0, metavar="S", help="seconds to search (default: 10)")
+    parser.add_argument(
+        "--most",
+        action="append",
+        default=[],
+        metavar="N or FL,N",
+        help="at most so many converters behind each filter, or behind this one",
+    )
+    parser.add_argument(
+        "--time",
+        type=_seconds,
+        default=10.0,
+        metavar="S",
+        help="seconds to search (default: 10), the checks of what was found not counted, which take a minute at most; "
+        "Ctrl+C stops before with the best so far",
+    )
     parser.add_argument("--format", choices=("text", "json"), default="text", help="how to print (default: text)")
     return parser
+
+
+def _seconds(text: str) -> float:
+    seconds = float(text)
+    if not 0.0 < seconds < 1e9:
+        raise ValueError
+    return seconds
+
+
+_seconds.__name__ = "number of seconds"  # as argparse calls it
 
 
 def _new_parser() -> argparse.ArgumentParser:
@@ -322,7 +380,7 @@ def _study(command: str, arguments: list[str]) -> int:
         )
 
     parser, run_it = STUDIES[command]
-    options = parser(make).parse_args(arguments)
+    options = _options(parser(make), arguments)
     try:
         status, text = run_it(options)
     except ProjectError as error:
@@ -340,19 +398,15 @@ def _allocate(options: argparse.Namespace) -> int:
     except ProjectError as error:
         _say(f"budget: {error}")
         return UNUSABLE
-    from budget.engine.allocate import allocate, as_json
-    from budget.engine.placing import Constraints
+    from budget.engine.allocate import allocate
+    from budget.engine.candidates import all_checks, as_json
+    from budget.engine.placing import constraints_of
 
-    pairs = {name: [tuple(text.split(",")) for text in getattr(options, name)] for name in ("apart", "together", "ban")}
-    wrong = next((text for name in pairs for text in getattr(options, name) if text.count(",") != 1), None)
-    if wrong is not None:
-        _say(f"budget: '{wrong}' is not a pair; two ids with a comma between were expected.")
-        return UNUSABLE
-    wishes = Constraints(
-        tuple(options.keep), tuple(pairs["apart"]), tuple(pairs["together"]), tuple(pairs["ban"]), options.most
-    )
     try:
-        found = allocate(project, options.goal, wishes, time_limit=max(0.1, options.time))
+        wishes = constraints_of(_wishes(options))
+        with _stoppable() as stopped:
+            finish = all_checks(CHECKING, stopped)
+            found = allocate(project, options.goal, wishes, time_limit=options.time, cancelled=stopped, finish=finish)
     except ValueError as error:
         _say(f"budget: {options.file}: {error}.")
         return UNUSABLE
@@ -369,6 +423,46 @@ def _allocate(options: argparse.Namespace) -> int:
     return OK if found.candidates else FAILED
 
 
+def _wishes(options: argparse.Namespace) -> list[tuple[str, ...]]:
+    """What is asked of an allocation, by the names of ``placing``; raises ValueError with a sentence."""
+    names: list[tuple[str, ...]] = [("keep", who) for who in options.keep]
+    for name, code in (("apart", "apart"), ("together", "together"), ("ban", "banned")):
+        for text in getattr(options, name):
+            pair = tuple(part.strip() for part in text.split(","))
+            if len(pair) != 2:
+                raise ValueError(f"'{text}' is not a pair; two ids with a comma between were expected")
+            names.append((code, *pair))
+    for text in options.most:
+        where, _, number = (part.strip() for part in text.rpartition(","))
+        if not (number.isascii() and number.isdigit() and int(number[:9]) > 0):
+            raise ValueError(
+                f"--most {text}: a number of converters from 1 on was expected, or a filter, a comma and it"
+            )
+        names.append(("most", where, str(int(number[:9]))))
+    return names
+
+
+@contextlib.contextmanager
+def _stoppable() -> Iterator[Callable[[], bool]]:
+    """Ctrl+C only says that it is enough; pressed again, it ends the program."""
+    asked: list[int] = []
+
+    def enough(number: int, _: object) -> None:
+        if asked:
+            raise KeyboardInterrupt
+        asked.append(number)
+
+    try:
+        before = signal.signal(signal.SIGINT, enough)
+    except ValueError:  # not the main thread: there is no Ctrl+C to hear of
+        yield lambda: False
+        return
+    try:
+        yield lambda: bool(asked)
+    finally:
+        signal.signal(signal.SIGINT, before)
+
+
 def _sheet(options: argparse.Namespace) -> int:
     from budget.project.problems import ProjectError
     from budget.session import open_demo, open_file
@@ -376,19 +470,38 @@ def _sheet(options: argparse.Namespace) -> int:
     if not all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr)):
         _say("budget: the sheet needs a terminal; 'budget check FILE' prints the results without one.")
         return UNUSABLE
-    try:
-        session = open_file(Path(options.files[0])) if options.files else open_demo()
-    except ProjectError as error:
-        _say(f"budget: {error}")
+    if os.environ.get("TERM") == "dumb":
+        _say(
+            "budget: TERM=dumb says that this terminal cannot place text, as the sheet must. If it can, set TERM, "
+            "such as TERM=xterm; 'budget check FILE' prints the results on any."
+        )
         return UNUSABLE
+    path = Path(options.files[0]) if options.files else None
+    try:
+        session = open_file(path) if path is not None else open_demo()
+    except ProjectError as error:
+        from budget.keeping.recover import without_file
+
+        left = without_file(path) if path is not None else None
+        if left is None:
+            _say(f"budget: {error}")
+            return UNUSABLE
+        session = left
+        session.notes = (str(error).partition("\n")[0],)
     os.environ.setdefault("ESCDELAY", "300")  # before textual: split escape sequences over SSH are keys, not Escape
     os.environ.setdefault("TEXTUAL_FPS", "240")  # else a result that follows an edit waits up to 17 ms for its paint
     from budget.ui.app import show
 
-    return show(session, ascii_only=options.ascii or _ascii_locale())
+    return show(session, ascii_only=options.ascii or _ascii_terminal())
 
 
-def _ascii_locale() -> bool:
-    """Whether the locale is C or POSIX: Python then turns UTF-8 mode on by itself."""
-    asked = os.environ.get("PYTHONUTF8") == "1" or "utf8" in sys._xoptions
-    return bool(sys.flags.utf8_mode) and not asked
+def _ascii_terminal() -> bool:
+    """Whether only ASCII is safe: the locale is not one of UTF-8, or the terminal is of a sort that has no more.
+
+    In the C or POSIX locale, also for want of the one that was asked for, Python turns its UTF-8 mode on by itself;
+    what it says of the encoding then means nothing.
+    """
+    if os.environ.get("PYTHONUTF8") == "1" or "utf8" in sys._xoptions:
+        return False
+    other = sys.flags.utf8_mode or locale.getencoding().lower().replace("-", "") != "utf8"
+    return bool(other) or os.environ.get("TERM", "").startswith("vt")

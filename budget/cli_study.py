@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import argparse
-from collections.abc import Callable
+import contextlib
+import sys
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -21,14 +23,20 @@ examples:
   budget reach bus.toml FL1.dm.0.L --parts dc,emissions --format json
 """
 _SWEEP = """\
-example:
+examples:
   budget sweep bus.toml CV3.output.0.current "1 A" "6 A" 11 bus.low "18 V" "24 V" 7 > map.csv
+  budget sweep bus.toml FL1.dm.0.L 1u 10u 40 CV3.frequency 200k 600k 40 --parts dc,emissions --scheduler tcp://big:8786
+
+Points run on all cores; Ctrl+C stops, and then nothing is printed.
+exit status: 0 the table is there; 2 a file, a cell or a range cannot be used; 130 stopped
 """
+STOPPED = 130
 _COMPARE = """\
 example:
   budget compare before.toml after.toml --format markdown
 
-exit status: 0 nothing got worse; 1 a check got worse; 2 a file cannot be used
+exit status: 0 nothing got worse; 1 the state of a check got worse, or it fails by more (with --strict also where a
+margin got smaller); 2 a file cannot be used
 """
 
 Parser = Callable[..., argparse.ArgumentParser]
@@ -57,6 +65,10 @@ def sweep_parser(make: Parser) -> argparse.ArgumentParser:
         parser.add_argument(f"high_{lower}", metavar="HIGH", help="its last value")
         parser.add_argument(f"count_{lower}", metavar="N", type=int, help="how many values")
     _common(parser, ("csv", "json"))
+    parser.add_argument("--aside", action="store_true", help="leave aside the checks that fail as the file stands")
+    parser.add_argument(
+        "--scheduler", metavar="ADDRESS", help="calculate on the workers of this dask scheduler (needs budget[dask])"
+    )
     return parser
 
 
@@ -64,6 +76,7 @@ def compare_parser(make: Parser) -> argparse.ArgumentParser:
     parser = make("budget compare", "What differs between two projects, in inputs and in results.", _COMPARE)
     parser.add_argument("before", metavar="A", help="a project")
     parser.add_argument("after", metavar="B", help="the other one")
+    parser.add_argument("--strict", action="store_true", help="exit 1 also where a margin got smaller")
     parser.add_argument("--format", choices=("text", "markdown", "json"), default="text", help="how to print")
     return parser
 
@@ -118,12 +131,19 @@ def reach(options: argparse.Namespace) -> tuple[int, str]:
 
 def sweep(options: argparse.Namespace) -> tuple[int, str]:
     """Exit status and output of ``budget sweep``; raises ProjectError."""
+    try:
+        return _sweep(options)
+    except KeyboardInterrupt:
+        _tell("budget: stopped; nothing was written.")
+        return STOPPED, ""
+
+
+def _sweep(options: argparse.Namespace) -> tuple[int, str]:
     import json
-    import os
-    from concurrent.futures import ProcessPoolExecutor
 
     from budget.report import study
     from budget.study import paths
+    from budget.study.cluster import workers_of
     from budget.study.sweep import steps
     from budget.study.sweep import sweep as run
 
@@ -135,15 +155,56 @@ def sweep(options: argparse.Namespace) -> tuple[int, str]:
         low, high = (paths.number(cell, getattr(options, f"{end}_{name}")) for end in ("low", "high"))
         axes += [path, steps(cell, low, high, getattr(options, f"count_{name}"))]
     parts = _parts(options.parts)
-    many = len(axes[1]) * len(axes[3]) > 64 or parts != ("dc",)
-    if many and (os.cpu_count() or 1) > 1:
-        with ProcessPoolExecutor() as pool:
-            found = run(loaded.document, loaded.shelves, *axes, parts=parts, executor=pool)
-    else:
-        found = run(loaded.document, loaded.shelves, *axes, parts=parts)
+    with workers_of(options.scheduler) as (executor, workers), _progress() as told:
+        found = run(
+            loaded.document,
+            loaded.shelves,
+            *axes,
+            parts=parts,
+            aside=options.aside,
+            executor=executor,
+            workers=workers,
+            progress=told,
+        )
+    if found.failing:
+        names = ", ".join(f"{row.subject} {row.check}" for row in found.failing)
+        _tell(f"budget: left aside, for it fails already: {names}.")
+    if found.again:
+        _tell(f"budget: the workers of {found.again} points were lost; the points were calculated again.")
     if options.format == "json":
         return 0, json.dumps(study.sweep_json(found), indent=1, allow_nan=False) + "\n"
     return 0, study.sweep_csv(found)
+
+
+def _tell(text: str) -> None:
+    with contextlib.suppress(OSError, AttributeError):
+        print(text, file=sys.stderr, flush=True)
+
+
+@contextlib.contextmanager
+def _progress() -> Iterator[Callable[[float], None] | None]:
+    """A bar on standard error while something runs, wiped afterwards; only where that is a terminal."""
+    if sys.stderr is None or not sys.stderr.isatty():
+        yield None
+        return
+    shown = -1
+
+    def tell(share: float) -> None:
+        nonlocal shown
+        percent = int(share * 100.0)
+        if percent != shown:
+            shown = percent
+            line = f"\r[{'#' * (percent // 4):.<25}] {percent:3} %"
+            with contextlib.suppress(OSError):
+                sys.stderr.write(line)
+                sys.stderr.flush()
+
+    try:
+        yield tell
+    finally:
+        with contextlib.suppress(OSError):
+            sys.stderr.write("\r" + " " * 33 + "\r" if shown >= 0 else "")
+            sys.stderr.flush()
 
 
 def compare(options: argparse.Namespace) -> tuple[int, str]:
@@ -153,7 +214,7 @@ def compare(options: argparse.Namespace) -> tuple[int, str]:
     from budget.study.compare import compare as find
 
     found = find(_variant(options.before), _variant(options.after))
-    status = 1 if found.worse else 0
+    status = 1 if found.worse or (options.strict and found.lower) else 0
     if options.format == "json":
         return status, dumps([report.as_json(found)]) + "\n"
     text = report.as_markdown(found) if options.format == "markdown" else report.as_text(found)

@@ -8,6 +8,7 @@ go.
 from __future__ import annotations
 
 import os
+import stat
 from collections import deque
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
@@ -15,6 +16,7 @@ from pathlib import Path as FilePath
 from typing import TYPE_CHECKING, Any
 
 from budget import trials
+from budget.keeping import lock as locks
 from budget.project import edits, store
 from budget.project.build import Built, Cache, Shelf, build
 from budget.project.document import Document, Path, Tree, drop, from_data, get, put
@@ -34,6 +36,14 @@ class Step:
     label: str
     document: Document
     spot: Any
+
+
+HISTORY = 2000  # steps that can be undone; a long session must not grow for ever
+
+
+def shorten(done: list[Step]) -> None:
+    """Let the oldest steps of a long history go."""
+    del done[: max(0, len(done) - HISTORY)]
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,6 +72,10 @@ class Outcome:
     complete: bool = True
 
 
+class ReadOnlyError(ProjectError):
+    """The file is not written to by this session, which was opened read-only."""
+
+
 def stages(
     snapshot: Snapshot, cancelled: Callable[[], bool] | None = None, progress: Callable[[float], None] | None = None
 ) -> Iterator[Outcome]:
@@ -82,7 +96,10 @@ def stages(
     yield Outcome(snapshot.generation, built, result, complete=False)
     result = evaluate.with_emissions(result, snapshot.previous)
     yield Outcome(snapshot.generation, built, result, complete=False)
-    result = evaluate.with_stability(result)
+    try:
+        result = evaluate.with_stability(result, cancelled)
+    except CancelledError:
+        return
     yield Outcome(snapshot.generation, built, result, complete=False)
     try:
         result = evaluate.with_inrush(result, cancelled, progress)
@@ -125,6 +142,11 @@ class Session:
     trials: tuple[Trial, ...] = ()
     notes: tuple[str, ...] = ()  # what was found at the start, for the first message
     strange_trials: bool = False  # the file of trials could not be read; it is put aside before one is written
+    read_only: str = ""  # who has the file, where this session must not write to it
+    locking: bool = False  # whether a lock says that the file is open here; see ``claim``
+    lock: locks.Lock | None = None
+    holder: locks.Holder | None = None  # the other session that has the file
+    recovered: Any = None  # work of a session that was cut off, while it waits for an answer
     # Told what was just done, for a journal: "edit", "undo", "redo", "reload", "trials", "saved", "moved" (to another
     # file); and "saving" before a file is written.
     tell: Callable[[str], None] = lambda _: None
@@ -189,6 +211,7 @@ class Session:
         if document is self.document:
             return False
         self.done.append(Step(label, self.document, spot))
+        shorten(self.done)
         self.undone.clear()
         self._show(document)
         self.tell("edit")
@@ -319,6 +342,8 @@ class Session:
         self.tell("trials")
         if self.path is None:
             return ""
+        if self.read_only:
+            return f"{printable(self.name, 30)} is open read-only: the trials live in this session only."
         try:
             if self.strange_trials:
                 trials.put_aside(self.path)
@@ -334,6 +359,7 @@ class Session:
         """Write to the session's own file; returns notes for the user. Raises as ``store.save``."""
         if self.path is None:
             raise ProjectError("this project has no file yet; save it under a name.")
+        self._may_write()
         self.tell("saving")
         saved = store.save(self.document, self.path, self.fingerprint, over=over)
         self.fingerprint, self.saved = saved.fingerprint, self.document
@@ -349,16 +375,92 @@ class Session:
             )
         if not over and os.path.lexists(path):
             raise store.ChangedOnDiskError(f"{printable(str(path), 200)} exists already; nothing was written.")
-        if self.path is not None and self.path.parent.resolve() != path.parent.resolve():
-            store.copy_shelves(names, self.path.parent, path.parent)
-        self.tell("saving")
-        saved = store.save(self.document, path, None, over=over)
+        taken = self._lock_of(path)
+        try:
+            if self.path is not None and not store.same_place(self.path.parent, path.parent):
+                store.copy_shelves(names, self.path.parent, path.parent)
+            self.tell("saving")
+            saved = store.save(self.document, path, None, over=over)
+        except BaseException:
+            if taken is not None and taken is not self.lock:
+                taken.release()
+            raise
+        if taken is not self.lock:
+            self.release()
+            self.lock, self.holder, self.read_only = taken, None, ""
         self.path, self.fingerprint, self.saved = path, saved.fingerprint, self.document
         self.tell("moved")
         self._read_shelves()
         if self.held():
             return (*saved.notes, *filter(None, [self._write_trials()]))
         return saved.notes
+
+    # -- who else has it open
+
+    def claim(self) -> bool:
+        """Say by a lock that this session has the file; False where another has it: then it is read-only here."""
+        self.locking = True
+        self.release()
+        if self.path is None:
+            return True
+        found = locks.take(self.path, self.holder)
+        if isinstance(found, locks.Holder):
+            self._give_way(found)
+            return False
+        late = bool(self.read_only)
+        self.lock, self.holder, self.read_only = found, None, ""
+        if late:
+            self._join_trials()
+        return True
+
+    def release(self) -> None:
+        """Let the lock go; at the end of the session."""
+        if self.lock is not None:
+            self.lock.release()
+            self.lock = None
+
+    def lost(self) -> bool:
+        """Notice that another session has taken the file over, while this one could not say that it lives."""
+        if self.lock is None or self.lock.lost is None:
+            return False
+        self._give_way(self.lock.lost)
+        return True
+
+    def _join_trials(self) -> None:
+        """The session that had the file may have written trials: they come beside those held here meanwhile."""
+        assert self.path is not None
+        try:
+            theirs = trials.read(self.path)
+        except ProjectError:
+            self.strange_trials = True  # it is put aside before ours are written
+        else:
+            self.trials, complete = trials.joined(self.trials, theirs.trials)
+            self.strange_trials = self.strange_trials or not complete
+            self.reference = self.reference or theirs.reference
+        self._write_trials()
+
+    def _give_way(self, holder: locks.Holder) -> None:
+        self.release()
+        self.holder, self.read_only = holder, holder.told()
+
+    def _may_write(self) -> None:
+        """Raise ReadOnlyError where another session has the file, also if that has changed since it was opened."""
+        if self.lock is not None and self.lock.check() is not None:
+            self.lost()
+        if self.read_only and not self.claim():
+            raise ReadOnlyError(f"{self.read_only}; {printable(self.name, 30)} was not saved.")
+
+    def _lock_of(self, path: FilePath) -> locks.Lock | None:
+        """The lock for saving to ``path``; raises ProjectError where another session has that file."""
+        if not self.locking:
+            return None
+        if self.path is not None and store.same_place(path, self.path):
+            self._may_write()
+            return self.lock
+        found = locks.take(path)
+        if isinstance(found, locks.Holder):
+            raise ProjectError(f"{printable(path.name, 30)}: {found.told()}; nothing was written.")
+        return found
 
     def copy_to(self, path: FilePath) -> None:
         """Write a copy beside; the session stays with its own file."""
@@ -367,11 +469,25 @@ class Session:
     def changed_on_disk(self) -> bool:
         return self.path is not None and self.fingerprint is not None and store.changed(self.path, self.fingerprint)
 
+    def on_disk(self) -> str:
+        """What has become of the file since it was read or written last, as the end of a sentence; "" for nothing."""
+        if self.path is None or not self.changed_on_disk():
+            return ""
+        try:
+            mode = os.stat(self.path).st_mode
+        except OSError:
+            folder = os.path.isdir(self.path.parent)
+            return "was removed or renamed by someone else" if folder else "cannot be found: its folder is gone"
+        if stat.S_ISDIR(mode):
+            return "is a folder now"
+        return "was changed on disk by someone else" if stat.S_ISREG(mode) else "is no ordinary file any more"
+
     def reload(self, spot: Any) -> None:
         """Take what the file holds now, as one step of history that can be undone."""
         assert self.path is not None
         loaded = store.load(self.path)
         self.done.append(Step("reload", self.document, spot))
+        shorten(self.done)
         self.undone.clear()
         self.document = loaded.document
         self.generation += 1

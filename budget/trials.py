@@ -141,6 +141,14 @@ def _trial(row: Any, path: FilePath, source: FilePath) -> Trial:
     return Trial(name, parsed.document, parsed.shelves, parsed.problems, str(row.get("held", "")))
 
 
+def joined(ours: Sequence[Trial], theirs: Sequence[Trial]) -> tuple[tuple[Trial, ...], bool]:
+    """Our trials and behind them those of another session; False where one of theirs has no place beside ours."""
+    known = {trial.name: trial.document.data for trial in ours}
+    more = [trial for trial in theirs if trial.name not in known][: max(0, MOST - len(ours))]
+    kept = {**known, **{trial.name: trial.document.data for trial in more}}
+    return (*ours, *more), all(kept.get(trial.name) == trial.document.data for trial in theirs)
+
+
 def put_aside(path: FilePath) -> None:
     """Rename a file of trials that could not be read, so that a new one does not replace it."""
     source = file_of(path)

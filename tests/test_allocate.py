@@ -3,8 +3,12 @@
 from __future__ import annotations
 
 import itertools
+import json
 import math
+import signal
 from dataclasses import replace
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -12,14 +16,20 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.optimize import LinearConstraint, milp
 
-from budget.engine.allocate import Candidate, allocate, as_json, moved, smallest_margin
-from budget.engine.evaluate import evaluate_dc, with_emissions
+from budget.cli import run
+from budget.engine.allocate import allocate
+from budget.engine.candidates import Candidate, all_checks, as_json, judged, moved, ranked, so_far, with_checks
+from budget.engine.evaluate import Result, evaluate_dc, with_emissions, with_stability
 from budget.engine.feed import filter_currents, least_currents
 from budget.engine.model import Branch, Bus, Case, Chop, LimitLine, Load, Project, Rules
 from budget.engine.operating import operating_points
 from budget.engine.partition import Split, splits
-from budget.engine.placing import Constraints, Task, task_of, wanted_current
+from budget.engine.placing import Constraints, Task, constraints_of, task_of, wanted_current
+from budget.engine.quiet import smallest_margin
+from budget.report import allocation as report
 from tests.dc_trees import converter, table_filter
+
+DEMO = str(Path(__file__).parent.parent / "projects" / "ferry.toml")
 
 
 def headroom(project: Project) -> float | None:
@@ -114,7 +124,9 @@ def constrained(draw: st.DrawFn) -> tuple[Project, Constraints]:
         apart=draw(pairs),
         together=draw(pairs),
         banned=tuple(draw(st.lists(st.tuples(st.sampled_from(ids), st.sampled_from(filters)), max_size=2))),
-        most=draw(st.one_of(st.none(), st.integers(1, 4), st.just(((filters[0], 2),)))),
+        most=draw(
+            st.one_of(st.none(), st.integers(1, 4), st.just(((filters[0], 2),)), st.just((("", 3), (filters[0], 1))))
+        ),
     )
 
 
@@ -122,14 +134,15 @@ def obeys(project: Project, given: Constraints, homes: tuple[str, ...]) -> bool:
     at = dict(zip([c.id for c in project.converters], homes, strict=True))
     was = {c.id: c.filter for c in project.converters}
     most = given.most if isinstance(given.most, tuple) else ()
+    filters = [f.id for f in project.filters]
     if isinstance(given.most, int):
-        most = tuple((f.id, given.most) for f in project.filters)
+        most = (("", given.most),)
     return (
         all(at[k] == was[k] for k in given.keep)
         and all(at[a] != at[b] for a, b in given.apart)
         and all(at[a] == at[b] for a, b in given.together)
         and all(at[c] != f for c, f in given.banned)
-        and all(list(at.values()).count(f) <= n for f, n in most)
+        and all(list(at.values()).count(f) <= n for where, n in most for f in ([where] if where else filters))
     )
 
 
@@ -354,8 +367,14 @@ def test_even_is_what_a_mixed_integer_solver_finds(seed: int) -> None:
         ),
         (Constraints(banned=(("C1", "F0"), ("C1", "F1"))), {("banned", "C1", "F0"), ("banned", "C1", "F1")}),
         (Constraints(keep=("C3",)), {("keep", "C3"), ("not allocated", "C3")}),
-        (Constraints(most=1), {("most", ""), ("converters", "4")}),
-        (Constraints(keep=("C0", "C1"), most=(("F0", 1),)), {("most", "F0"), ("keep", "C0"), ("keep", "C1")}),
+        (Constraints(most=1), {("most", "", "1"), ("converters", "4")}),
+        (Constraints(most=(("", 2), ("F1", 1))), {("most", "", "2"), ("most", "F1", "1"), ("converters", "4")}),
+        (Constraints(most=0), {("most", "", "0")}),
+        (
+            Constraints(together=(("C0", "C1"), ("C1", "C2")), most=2),
+            {("most", "", "2"), ("together", "C0", "C1", "C2")},
+        ),
+        (Constraints(keep=("C0", "C1"), most=(("F0", 1),)), {("most", "F0", "1"), ("keep", "C0"), ("keep", "C1")}),
     ],
 )
 def test_contradictions_are_named(constraints: Constraints, named: set[tuple[str, ...]]) -> None:
@@ -535,6 +554,55 @@ def test_it_can_be_stopped_and_then_claims_nothing(goal: str, calls: int) -> Non
         assert "stopped" in found.note
 
 
+@settings(max_examples=40, deadline=None)
+@given(projects(), st.sampled_from(["even", "fewest"]), st.integers(0, 30))
+def test_no_allocation_is_better_than_a_stopped_search_says(project: Project, goal: str, calls: int) -> None:
+    """Wherever it is stopped: the gap covers the best that enumeration finds, and what is proved is so."""
+    count = itertools.count()
+    found = allocate(project, goal, cancelled=lambda: next(count) >= calls, finish=evaluate_dc, explain=False)
+    fine = {homes: room for homes, room in everything(project).items() if room >= 0.0}
+    best = found.best
+    if best is None:
+        assert not (found.proved and fine)
+        return
+    assert found.gap is not None
+    if goal == "fewest":
+        least = min(len(set(homes)) for homes in fine)
+        if found.gap_unit == "filters":
+            assert best.filters_used - found.gap <= least
+            return
+        assert best.filters_used == least
+        fine = {homes: room for homes, room in fine.items() if len(set(homes)) == least}
+    assert (best.headroom or 0.0) + found.gap >= max(fine.values()) - 1e-9
+
+
+@pytest.mark.parametrize("goal", ["even", "fewest", "quiet"])
+@pytest.mark.parametrize("size", [(12, 3), (40, 5)])
+def test_what_is_told_while_searching_only_gets_better(goal: str, size: tuple[int, int]) -> None:
+    told: list[tuple[Candidate, float | None]] = []
+    found = allocate(
+        many(*size),
+        goal,
+        time_limit=0.5,
+        finish=evaluate_dc,
+        progress=lambda best, bound: told.append((best, bound)),
+    )
+    assert found.best is not None
+    assert told
+    ranks = [((c.filters_used if goal == "fewest" else 0), -(c.headroom or 0.0)) for c, _ in told]
+    assert ranks == sorted(ranks, reverse=True)
+    assert (found.best.filters_used, found.best.headroom) <= (told[-1][0].filters_used, 1.0)
+    for best, bound in told:
+        shown = so_far(goal, best, bound)
+        assert not shown.proved
+        assert shown.best is best
+        if bound is not None:
+            end = -found.best.filters_used if goal == "fewest" else found.best.headroom or 0.0
+            assert (-bound if goal == "fewest" else bound) >= end - 1e-9
+            assert shown.gap is not None
+            assert "searching" in report.headline(shown)
+
+
 def test_a_first_allocation_is_told_before_the_proof() -> None:
     told: list[Candidate] = []
     found = allocate(many(12, 3), finish=evaluate_dc, progress=lambda best, bound: told.append(best))
@@ -623,6 +691,50 @@ def test_allocations_that_fail_a_check_come_after_those_that_do_not() -> None:
     assert states == sorted(states)
 
 
+def stage_by_stage(count: int) -> list[Result]:
+    """The results of the noisy bus, one more stage each."""
+    result = evaluate_dc(noisy())
+    return [result, with_emissions(result), with_stability(with_emissions(result))][:count]
+
+
+def test_checks_that_were_not_made_are_named() -> None:
+    one = allocate(noisy(), finish=evaluate_dc).candidates[0]
+    assert one.unchecked == ("emissions", "stability", "switch-on")
+    assert Candidate((), 0, None, None, 0).unchecked[0] == "operating points"
+    left = [judged(one, result).unchecked for result in stage_by_stage(3)]
+    assert left == [("emissions", "stability", "switch-on"), ("stability", "switch-on"), ("switch-on",)]
+    assert report.verdict(judged(one, stage_by_stage(3)[2])).endswith("; switch-on not checked")
+    assert report.verdict(one).endswith("; emissions, stability and switch-on not checked")
+    assert report.verdict(Candidate((), 0, None, None, 0)) == "not checked"
+
+
+def test_all_checks_leave_out_what_time_does_not_allow() -> None:
+    quick = replace(noisy(), rules=Rules(inrush_window=1e-4))
+    finished = allocate(quick, candidates=2)
+    assert [c.unchecked for c in finished.candidates] == [(), ()]
+    hurried = allocate(noisy(), candidates=2, finish=all_checks(0.0))
+    assert [c.unchecked for c in hurried.candidates] == [("emissions", "stability", "switch-on")] * 2
+    asked = itertools.count()
+    stopped = allocate(quick, candidates=1, finish=all_checks(cancelled=lambda: next(asked) > 3))
+    assert stopped.candidates[0].unchecked == ("switch-on",)
+
+
+def test_the_order_waits_until_the_same_checks_are_made_of_all() -> None:
+    found = allocate(noisy(), candidates=3, finish=evaluate_dc)
+    first, second, third = found.candidates
+    assert [c.place for c in found.candidates] == [0, 1, 2]
+    result = with_emissions(evaluate_dc(moved(noisy(), first.allocation)))
+    found = with_checks(found, first.allocation, replace(result, status="fail"))
+    assert [c.allocation for c in found.candidates] == [c.allocation for c in (first, second, third)]
+    for one in (second, third):
+        result = with_emissions(evaluate_dc(moved(noisy(), one.allocation)))
+        found = with_checks(found, one.allocation, replace(result, status="ok"))
+    assert [c.allocation for c in found.candidates] == [c.allocation for c in (second, third, first)]
+    assert found.best is not None
+    assert found.best.allocation == first.allocation
+    assert ranked(found.candidates) == found.candidates
+
+
 def test_json_has_what_is_promised() -> None:
     found = allocate(small([1.0, 2.0], [1.0, 1.0], homes=[0, -1]), finish=evaluate_dc)
     data = as_json(found)
@@ -635,3 +747,162 @@ def test_json_has_what_is_promised() -> None:
     assert first["emission_margin"] is None
     assert set(first["worst"]) == {"check", "subject"}
     assert as_json(allocate(small([9.0], [0.1]), finish=evaluate_dc, explain=False))["candidates"] == []
+
+
+KEYS = {"allocation", "filters_used", "headroom", "emission_margin", "moves", "status", "worst"}  # contract 2.8
+
+
+def refuse(name: str) -> float:
+    raise AssertionError(f"{name} is no JSON")
+
+
+@pytest.mark.parametrize("goal", ["even", "fewest", "quiet"])
+def test_the_command_prints_the_json_of_the_contract(goal: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert run(["allocate", DEMO, "--goal", goal, "--format", "json", "--time", "0.5"]) == 0
+    told = capsys.readouterr()
+    assert told.err == ""
+    data = json.loads(told.out, parse_constant=refuse)
+    assert (data["format"], data["goal"]) == (1, goal)
+    assert isinstance(data["proved"], bool)
+    assert data["gap_unit"] in ("headroom", "filters", "dB")
+    assert data["gap"] == 0.0 if data["proved"] else data["gap"] is None or data["gap"] > 0.0
+    for one in data["candidates"]:
+        assert set(one) >= KEYS
+        assert set(one["allocation"]) == {f"CV{k}" for k in range(1, 7)}
+        assert set(one["allocation"].values()) <= {"FL1", "FL2"}
+        assert one["filters_used"] == len(set(one["allocation"].values()))
+        assert one["status"] in ("ok", "thin", "fail")
+        assert set(one["worst"]) == {"check", "subject"}
+        assert one["unchecked"] == []
+    states = [one["status"] == "fail" for one in data["candidates"]]
+    assert states == sorted(states)
+
+
+def test_the_command_prints_the_gap_of_what_is_not_proved(capsys: pytest.CaptureFixture[str]) -> None:
+    assert run(["allocate", DEMO, "--goal", "quiet", "--time", "0.01"]) == 0
+    first = capsys.readouterr().out.splitlines()[0]
+    assert first.startswith("goal quiet: the best found, not proved (the time was over); ")
+    assert "how much better another could be is not known" in first
+
+
+def test_nothing_admissible_is_status_1_and_standard_error_says_by_how_much(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    assert run(["allocate", DEMO, "--most", "2", "--format", "json"]) == 1
+    told = capsys.readouterr()
+    assert json.loads(told.out)["candidates"] == []
+    assert told.err == (
+        "budget: these cannot be together: at most 2 converters behind each filter, there are 6 converters.\n"
+    )
+
+
+@pytest.mark.parametrize(
+    ("options", "said"),
+    [
+        (["--keep", "CVX"], 'there is no converter "CVX": name one of CV1, CV2'),
+        (["--ban", "CV1,FLX"], 'there is no filter "FLX": name one of FL1, FL2'),
+        (["--apart", "CV1"], "'CV1' is not a pair"),
+        (["--together", "CV1,CV2,CV3"], "'CV1,CV2,CV3' is not a pair"),
+        (["--most", "0"], "a number of converters from 1 on was expected"),
+        (["--most", "FL1"], "a number of converters from 1 on was expected"),
+        (["--most", "FL9,2"], 'there is no filter "FL9"'),
+        (["--apart", "CV1,\x1b[31m"], 'there is no converter "?[31m"'),
+    ],
+)
+def test_what_is_asked_wrongly_is_status_2(options: list[str], said: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert run(["allocate", DEMO, *options]) == 2
+    told = capsys.readouterr()
+    assert told.out == ""
+    assert said in told.err
+    assert "Traceback" not in told.err
+
+
+@pytest.mark.parametrize("seconds", ["nan", "0", "-1", "inf", "soon"])
+def test_a_time_that_is_none_is_refused(seconds: str, capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit) as leaving:
+        run(["allocate", DEMO, "--time", seconds])
+    assert leaving.value.code == 2
+    assert "invalid number of seconds value" in capsys.readouterr().err
+
+
+def test_all_wishes_of_the_command_line_are_obeyed(capsys: pytest.CaptureFixture[str]) -> None:
+    wishes = ["--keep", "CV1", "--apart", "CV2, CV3", "--together", "CV4,CV5", "--ban", "CV6,FL2", "--most", "4"]
+    assert run(["allocate", DEMO, *wishes, "--most", "FL1,3", "--format", "json"]) == 0
+    for one in json.loads(capsys.readouterr().out)["candidates"]:
+        at = one["allocation"]
+        assert at["CV1"] == "FL1"
+        assert at["CV2"] != at["CV3"]
+        assert at["CV4"] == at["CV5"]
+        assert at["CV6"] == "FL1"
+        assert list(at.values()).count("FL1") <= 3
+
+
+def test_interrupted_it_stops_with_the_best_so_far(
+    capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Ctrl+C while it searches: the handler that the command sets hears of it, and the old one is back afterwards."""
+    before = signal.getsignal(signal.SIGINT)
+
+    def interrupted(*given: Any, **more: Any) -> Any:
+        signal.raise_signal(signal.SIGINT)
+        return allocate(*given, **more)
+
+    monkeypatch.setattr("budget.engine.allocate.allocate", interrupted)
+    assert run(["allocate", DEMO]) in (0, 1)
+    assert signal.getsignal(signal.SIGINT) is before
+    told = capsys.readouterr()
+    assert "stopped" in told.out or "none was found before the search ended" in told.err
+
+    def twice(*_: Any, **__: Any) -> Any:
+        signal.raise_signal(signal.SIGINT)
+        signal.raise_signal(signal.SIGINT)
+
+    monkeypatch.setattr("budget.engine.allocate.allocate", twice)
+    assert run(["allocate", DEMO]) == 130
+    assert signal.getsignal(signal.SIGINT) is before
+
+
+# --- words ----------------------------------------------------------------------------------------------------------
+
+
+@given(st.floats(1e-12, 100.0))
+def test_a_gap_is_never_told_smaller_than_it_is(gap: float) -> None:
+    one = Candidate((("C0", "F0"),), 3, 0.1, None, 0)
+    text = report.gap(replace(so_far("even", one, 0.2), gap=gap))
+    told = float(text.removeprefix("none can be better by more than ").removesuffix(" % headroom"))
+    assert gap * 100 * (1.0 - 1e-9) <= told <= gap * 100 * 1.11
+
+
+def test_the_gap_in_filters_is_told_as_what_is_needed() -> None:
+    one = Candidate((("C0", "F0"),), 3, 0.1, None, 0)
+    assert report.gap(so_far("fewest", one, 1.0)) == "at least 1 filter is needed"
+    assert report.gap(so_far("fewest", one, 3.0)) == "at least 3 filters are needed"
+
+
+NAMES = [
+    (("keep", "A"), "A stays"),
+    (("apart", "A", "B"), "A and B apart"),
+    (("together", "A", "B", "C"), "A and B and C together"),
+    (("banned", "A", "F"), "A not behind F"),
+    (("most", "", "3"), "at most 3 converters behind each filter"),
+    (("most", "F", "1"), "at most 1 converter behind F"),
+    (("no rating", "F"), "F has no rating"),
+    (("rating zero", "F"), "F has no rating left"),
+    (("not allocated", "A"), "A is behind no filter"),
+    (("converters", "4"), "there are 4 converters"),
+]
+
+
+@pytest.mark.parametrize(("name", "words"), NAMES)
+def test_every_constraint_has_its_words(name: tuple[str, ...], words: str) -> None:
+    assert report.wish(name) == words
+
+
+def test_constraints_come_from_their_names() -> None:
+    names = [("keep", "A"), ("banned", "A", "F"), ("apart", "A", "B"), ("together", "B", "C"), ("most", "", "3")]
+    found = constraints_of([*names, ("most", "F", "1")])
+    assert found == Constraints(("A",), (("A", "B"),), (("B", "C"),), (("A", "F"),), (("", 3), ("F", 1)))
+    assert constraints_of([]) == Constraints()
+    for wrong in (("no rating", "F"), ("keep",), ("apart", "A"), ("most", "F")):
+        with pytest.raises(ValueError, match="names no constraint"):
+            constraints_of([wrong])

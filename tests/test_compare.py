@@ -177,3 +177,16 @@ def test_reports_of_every_kind() -> None:
     assert worst["turned_worse"]
     assert worst["after"]["status"] == "fail"
     assert any(c["verdict"] == "gone" and c["check"].startswith("emission ") for c in data["checks"])
+
+
+def test_strict_counts_a_smaller_margin_as_worse(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    from budget.cli import run
+
+    folder = Path(__file__).parents[1] / "projects"
+    text = (folder / "smallest.toml").read_text()
+    one, two = tmp_path / "one.toml", tmp_path / "two.toml"
+    one.write_text(text)
+    two.write_text(text.replace('current = "1.5 A"', 'current = "1.6 A"'))
+    assert run(["compare", str(one), str(two)]) == 0
+    assert run(["compare", str(one), str(two), "--strict"]) == 1
+    assert "less margin" in capsys.readouterr().out

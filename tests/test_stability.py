@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import tracemalloc
 from dataclasses import replace
 
 import numpy as np
@@ -11,6 +12,9 @@ from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from scipy.optimize import brentq
 
+from budget.engine import loop as loops
+from budget.engine import margin
+from budget.engine.cancel import CancelledError
 from budget.engine.cure import damping_for, mode_table
 from budget.engine.loop import closed, least_damped, open_loop, spectra
 from budget.engine.margin import smallest_factors
@@ -18,6 +22,7 @@ from budget.engine.model import Bus, Case, Filter, Lead, Load, Project
 from budget.engine.operating import operating_points
 from budget.engine.stability import conductances, source_impedances, stability, stability_checks, stability_rows
 from budget.engine.statespace import state_space
+from tests.bench.bench_stability import large
 from tests.test_statespace import Tableau, flt, net, networks, ser, sh, unit
 
 
@@ -84,6 +89,49 @@ def test_margin_against_a_fine_scan(project: Project, watts: list[float], bands:
     if np.isfinite(found):
         assert first_unstable(project, g, found * np.array([0.9, 1.0 - 1e-5])) == np.inf
         assert np.isfinite(first_unstable(project, g, found * np.array([1.0 + 1e-7, 1.0 + 1e-5])))
+
+
+@settings(deadline=None, max_examples=60)
+@given(networks(resist=True), POWERS, BANDS)
+def test_the_way_for_many_loads_finds_the_same(project: Project, watts: list[float], bands: list[float | None]) -> None:
+    project = loaded(project, watts, bands)
+    assume(project.converters)
+    g = np.array(watts[: len(project.converters)]) / 28.0**2 * np.array([[1.0], [0.3]])
+    g[1, 1:] *= 2.0
+    loop = open_loop(project, state_space(project))
+    together = smallest_factors(loop, g)
+    with pytest.MonkeyPatch.context() as patch:
+        for module, name in ((margin, "_WHOLE"), (margin, "_MANY"), (loops, "_WHOLE"), (loops, "_AT_ONCE")):
+            patch.setattr(module, name, 0)
+        alone = smallest_factors(loop, g)
+    assert alone == pytest.approx(together, rel=1e-9)
+
+
+def test_memory_does_not_grow_with_the_square_of_the_converters_times_the_modes() -> None:
+    project = large(60, 12, 3)
+    points = operating_points(project)
+    tracemalloc.start()
+    try:
+        found = stability(project, points)
+        most = tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+    assert np.isfinite(found.margin_db).all()
+    assert most < 48e6  # what each load sees of each mode, as one table: 24 MB; of the walk: 100 MB
+
+
+def test_it_can_be_stopped_between_corners() -> None:
+    project = large(20, 5, 2)
+    points = operating_points(project)
+    asked: list[int] = []
+
+    def cancelled() -> bool:
+        asked.append(1)
+        return len(asked) > 6
+
+    with pytest.raises(CancelledError):
+        stability(project, points, cancelled=cancelled)
+    assert len(asked) == 7
 
 
 def test_an_island_of_instability() -> None:

@@ -11,7 +11,7 @@ from typing import Any
 import pytest
 
 from budget.project import document as doc
-from budget.project import store
+from budget.project import store, toml_load
 from budget.project.problems import ProjectError
 from budget.project.starter import starter
 from budget.project.store import ChangedOnDiskError
@@ -258,7 +258,7 @@ def test_all_faults_of_the_syntax_are_told(path: Path) -> None:
 
 def test_far_too_many_faults(path: Path) -> None:
     path.write_text("[a]\nb = \n" * 5000)
-    assert refused(path).count("\n") <= store.MAX_FAULTS
+    assert refused(path).count("\n") <= toml_load.MAX_FAULTS
 
 
 # -- shelf files

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tracemalloc
 import warnings
 from dataclasses import replace
 from typing import Any
@@ -11,11 +12,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from budget.engine import modes as tables
 from budget.engine.inrush import inrush_checks, needed_resistance, needed_rise
 from budget.engine.model import Branch, Bus, Case, Converter, Filter, Lead, Load, Output, Project, Rules
 from budget.engine.modes import modes, phi, solve_quietly
 from budget.engine.transient import CancelledError, Run, as_json, inrush
-from budget.engine.waves import thinned
+from budget.engine.waves import Waves, thinned
 
 FULL = (Case("full"),)
 
@@ -252,6 +254,98 @@ def test_runs_side_by_side_do_not_see_each_other() -> None:
         alone = only(p, run.event, [c.id for c in cases].index(run.case))
         assert alone.bus_peak == pytest.approx(run.bus_peak, rel=2e-6)
         assert alone.bus_i2t == pytest.approx(run.bus_i2t, rel=2e-6)
+
+
+def several(count: int, filters: int = 2, twins: bool = False) -> Project:
+    """Converters behind saturating filters, all a little different, or in twins."""
+    shares = [1.0 + 0.03 * (k // filters if twins else k) for k in range(count)]
+    parts = tuple(
+        Filter(f"F{k}", dm=(series(L=8e-6, R=0.02, saturation=10.0 + k * (not twins)), shunt(C=80e-6, R=0.08)))
+        for k in range(filters)
+    )
+    units = tuple(
+        part(
+            f"C{k}",
+            power=20.0 * x,
+            filter=f"F{k % filters}",
+            turn_on=17.0 * x**0.2,
+            start_delay=2e-4,
+            soft_start=3e-4 * x,
+            lead=Lead(R=0.01, L=2e-7 * x),
+            input=(shunt(C=20e-6, R=0.05),),
+        )
+        for k, x in enumerate(shares)
+    )
+    surge = {"surge": 45.0, "surge_time": 1e-3, "surge_rise": 1e-4}
+    bus = Bus(24.0, 28.0, 30.0, resistance=0.01, inductance=1e-6, rise=1e-4, **surge)
+    return Project(bus, parts, units, FULL, Rules(inrush_window=2e-3))
+
+
+def test_the_way_for_many_inputs_finds_the_same(monkeypatch: pytest.MonkeyPatch) -> None:
+    p = several(7)
+    few = inrush(p)
+    monkeypatch.setattr(tables, "_MANY", 0)
+    many = inrush(p)
+    for one, other in zip(few.runs, many.runs, strict=True):
+        assert (one.bus_peak or 0.0) > 10.0
+        assert (one.bus_peak, one.bus_i2t) == pytest.approx((other.bus_peak, other.bus_i2t), rel=1e-5)
+        for a, b in zip(one.filters, other.filters, strict=True):
+            assert (a.peak, a.i2t, a.peak_voltage) == pytest.approx((b.peak, b.i2t, b.peak_voltage), rel=1e-5)
+        for c, d in zip(one.converters, other.converters, strict=True):
+            assert c.state == d.state == "running"
+            assert d.peak_voltage == pytest.approx(c.peak_voltage, rel=1e-5)
+            assert (d.runs_at or 0.0) == pytest.approx(c.runs_at or 0.0, rel=1e-7)
+
+
+def test_twins_behind_twin_filters_start_together() -> None:
+    run = only(several(6, twins=True))
+    starts = [c.runs_at for c in run.converters]
+    assert starts[::2] == pytest.approx(starts[1::2], rel=1e-9)
+    assert len({round(t or 0.0, 9) for t in starts}) == 3
+    alone = only(several(6))
+    assert run.steps < alone.steps  # they share their events
+
+
+def test_cases_that_differ_in_names_only_run_once() -> None:
+    p = replace(several(3), cases=(Case("one"), Case("half", load=(("C0", Load("share", 0.5)),)), Case("other")))
+    found = {(run.case, run.event): run for run in inrush(p).runs}
+    assert len(found) == 9
+    for event in ("on-low", "on-high", "surge"):
+        one, half, other = (found[case, event] for case in ("one", "half", "other"))
+        assert replace(other, case="one", wave=one.wave) == one
+        assert one.wave is not None
+        assert other.wave is not None
+        assert other.wave.bus.base is one.wave.bus.base
+        assert half.bus_i2t != one.bus_i2t
+
+
+def test_many_inputs_take_no_table_of_all_pairs_for_each_step() -> None:
+    p = replace(several(110, 10), rules=Rules(inrush_window=1e-4))
+    tracemalloc.start()
+    try:
+        run = only(p, "on-high")
+        most = tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+    assert run.finished
+    assert run.steps > 30
+    # A table is 4 x 110 x 120 numbers, 0.4 MB, for each of some dozens of step lengths.
+    assert most < 40e6
+
+
+def test_waveforms_of_many_runs_stay_small_and_keep_their_peaks() -> None:
+    waves = Waves(36, 281)
+    rng = np.random.default_rng(1)
+    time, values = np.sort(rng.random((36, 1200))), rng.normal(size=(36, 1200, 281))
+    for first in range(0, 1200, 50):
+        waves.add(np.arange(36), time[:, first : first + 50], values[:, first : first + 50])
+    kept = waves.sorted()
+    assert sum(y.nbytes for _, y in kept) <= 36 * 281 * 1000 * 4
+    for (t, y), high, low in zip(kept, values.max(axis=1), values.min(axis=1), strict=True):
+        assert 400 < t.size <= 1000
+        assert (np.diff(t) >= 0.0).all()
+        assert y.max(axis=0) == pytest.approx(high, rel=1e-6)
+        assert y.min(axis=0) == pytest.approx(low, rel=1e-6)
 
 
 @pytest.mark.parametrize("tiny", [{"L": 1e-12}, {"L": 1e-12, "Rp": 1e6}, {"L": 1e-12, "saturation": 1.0}])

@@ -18,80 +18,23 @@ import itertools
 import math
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
 from budget.engine.bounds import fit, root_bound
-from budget.engine.checks import CheckRow
-from budget.engine.descent import improve, neighbours
-from budget.engine.emission import emissions
-from budget.engine.evaluate import Result, evaluate
-from budget.engine.feed import Indices
+from budget.engine.candidates import Allocation, Candidate, Places, all_checks, judged, moved, ranked
+from budget.engine.descent import improve
+from budget.engine.evaluate import Result
 from budget.engine.model import Project
-from budget.engine.operating import operating_points
-from budget.engine.partition import TooWideError
 from budget.engine.placing import Constraints, Task, task_of
-from budget.engine.pool import (
-    SAME,
-    Found,
-    Pool,
-    StoppedError,
-    Watch,
-    exact_shares,
-    filter_classes,
-    obeys,
-    order_of,
-    spread,
-)
+from budget.engine.pool import SAME, Found, Pool, StoppedError, Watch, filter_classes, order_of
+from budget.engine.quiet import Margins, admissible_start, quiet
 from budget.engine.relax import Relaxation, Shortfall, relaxations, shortfall
-from budget.engine.search import Outcome, enumerate_all, even, settle_moves
+from budget.engine.search import Outcome, even, settle_moves
 
 GOALS = ("even", "fewest", "quiet")
 TIME = 10.0  # s
-_QUIET_MOST = 3000  # admissible allocations whose emissions are computed one by one
-_RANK = {"": 0.5, "ok": 0, "no data": 0, "thin": 0, "fail": 1}
-
-
-@dataclass(frozen=True, slots=True)
-class Candidate:
-    """One admissible allocation. ``headroom`` is a ratio, None if no filter in use has a rating; margins in dB.
-
-    ``status`` and ``worst`` (check, subject) come from all checks; "" and None while the search goes on, and where it
-    was stopped before they were made.
-    """
-
-    allocation: tuple[tuple[str, str], ...]  # (converter id, filter id), in project order
-    filters_used: int
-    headroom: float | None
-    emission_margin: float | None
-    moves: int
-    status: str = ""
-    worst: tuple[str, str] | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class Allocation:
-    """What was found. ``best`` is the best candidate by the goal alone; ``candidates`` are ranked with their checks.
-
-    ``gap``: by how much an allocation that was not found could be better at most, in ``gap_unit``: "headroom" (a
-    ratio) or "filters"; None if nothing is known. 0 when ``proved``. ``unrated``: filters without a rating, which take
-    nothing new. ``note`` codes: "no limit set" (``quiet`` has nothing to go by, the headroom decides instead),
-    "stopped" (by time or by the user), "too many" (no complete search was tried).
-    """
-
-    goal: str
-    proved: bool
-    candidates: tuple[Candidate, ...]
-    best: Candidate | None
-    gap: float | None
-    gap_unit: str
-    visited: int  # allocations worked out exactly
-    seconds: float
-    shortfall: Shortfall | None = None
-    relaxations: tuple[Relaxation, ...] = ()
-    unrated: tuple[str, ...] = ()
-    note: tuple[str, ...] = ()
 
 
 def allocate(
@@ -102,49 +45,22 @@ def allocate(
     time_limit: float = TIME,
     cancelled: Callable[[], bool] = lambda: False,
     progress: Callable[[Candidate, float | None], None] = lambda best, bound: None,
-    finish: Callable[[Project], Result] = evaluate,
+    finish: Callable[[Project], Result] | None = None,
     explain: bool = True,
 ) -> Allocation:
     """Search for at most ``time_limit`` [s], or until ``cancelled`` says so; then check the best few completely.
 
-    ``progress`` hears of every better admissible allocation at once, with the headroom that none can exceed, as far as
-    known (None with ``quiet``). The checks of the candidates come on top of the time, and where nothing is admissible
-    the search for what would help, which takes as much time again at most and is left out without ``explain``. Raises
+    ``progress`` hears of every better admissible allocation at once, and of every better bound with the best so far:
+    the headroom that none can exceed, as far as known; with ``fewest`` how many filters none can do with less; None
+    with ``quiet``. The checks of the candidates come on top of the time, and where nothing is admissible the search for
+    what would help, which takes as much time again at most and is left out without ``explain``. ``finish`` makes the
+    checks of a candidate (default: all of them), and stages that it leaves out are said to be unchecked. Raises
     ValueError for an unknown goal or id.
     """
     if goal not in GOALS:
         raise ValueError(f'there is no goal "{goal}": use one of {", ".join(GOALS)}')
     search = _Search(project, goal, constraints or Constraints(), time_limit, cancelled, progress)
-    return search.run(max(1, candidates), finish, explain)
-
-
-def as_json(found: Allocation) -> dict[str, object]:
-    """The result as plain data for a JSON file."""
-    return {
-        "format": 1,
-        "goal": found.goal,
-        "proved": found.proved,
-        "gap": found.gap,
-        "gap_unit": found.gap_unit,
-        "candidates": [
-            {
-                "allocation": dict(c.allocation),
-                "filters_used": c.filters_used,
-                "headroom": c.headroom,
-                "emission_margin": c.emission_margin,
-                "moves": c.moves,
-                "status": c.status,
-                "worst": None if c.worst is None else {"check": c.worst[0], "subject": c.worst[1]},
-            }
-            for c in found.candidates
-        ],
-    }
-
-
-def moved(project: Project, allocation: tuple[tuple[str, str], ...]) -> Project:
-    """The project with its converters behind these filters."""
-    home = dict(allocation)
-    return replace(project, converters=tuple(replace(c, filter=home.get(c.id, c.filter)) for c in project.converters))
+    return search.run(max(1, candidates), finish or all_checks(cancelled=cancelled), explain)
 
 
 class _Search:
@@ -165,7 +81,9 @@ class _Search:
         self.bound: float | None = None
         self.note: list[str] = []
         self.few = 1
-        self.margins: dict[tuple[int, ...], float] = {}
+        self.sought = goal  # the goal that the search goes by
+        self.margins = Margins(project, lambda one, margin: progress(self._candidate(one, margin), None))
+        self.top: tuple[tuple[float, ...], Candidate] | None = None  # the best told so far
 
     def run(self, count: int, finish: Callable[[Project], Result], explain: bool) -> Allocation:
         if not self.project.filters and self.project.converters:
@@ -175,15 +93,15 @@ class _Search:
             return self._nothing(Shortfall("contradiction", constraints=task), proved=True)
         pool = Pool(task, changed=self._better)
         outcome = Outcome(0.0, False)
-        goal = self.goal
-        if goal == "quiet" and not self.project.checked:
+        if self.goal == "quiet" and not self.project.checked:
             self.note.append("no limit set")
-            goal = "even"
+            self.sought = "even"
+        goal = self.sought
         try:
             if goal == "fewest":
                 self._fewest(task, pool, outcome)
             elif goal == "quiet":
-                self._admissible_start(task, pool, outcome)
+                admissible_start(task, pool, self.watch, outcome)
             else:
                 even(task, pool, self.watch, outcome, told=self._told)
         except StoppedError:
@@ -191,7 +109,13 @@ class _Search:
         if pool.share() > 1.0:
             return self._inadmissible(task, pool, outcome, explain)
         if goal == "quiet":
-            return self._finished(*self._quiet(task, pool), None, "dB", pool, count, finish)
+            found, reason = quiet(task, pool, self.watch, self.margins)
+            self.note = []
+            if reason == "stopped":
+                self._stopped()
+            elif reason:
+                self.note.append(reason)
+            return self._finished(found, not reason, None, "dB", pool, count, finish)
         try:
             if outcome.all_ties:
                 pass
@@ -282,6 +206,7 @@ class _Search:
             proved &= not open_
             if proved:
                 self.few = size + 1
+                self._tell()
         if pool.share() <= 1.0:
             self._stopped()
             return
@@ -304,98 +229,6 @@ class _Search:
         rivals.sort(key=lambda rival: rival[0])
         return rivals
 
-    def _admissible_start(self, task: Task, pool: Pool, outcome: Outcome) -> None:
-        """Something admissible for ``quiet`` to start from; the whole search only if there is nothing at once."""
-        for moves in range(3):
-            near = neighbours(task, moves, 2000)
-            if near is not None and near.size:
-                pool.add(near)
-        improve(task, pool, self.watch, 6)
-        if pool.share() > 1.0:
-            even(task, pool, self.watch, outcome)
-
-    def _quiet(self, task: Task, pool: Pool) -> tuple[list[Found], bool]:
-        """Admissible allocations by margin, the largest first, and whether all were looked at."""
-        watch = self.watch
-        known = {f.items: f for f in (*pool.best, *pool.by_moves.values()) if f.share <= 1.0}
-        complete = False
-        try:
-            start = list(known.values())[:5]
-            for one in start:
-                self._margin(one)
-            every = self._admissible(task, watch)
-            if every is not None:
-                for one in every:
-                    known[one.items] = one
-                    watch.check()
-                    self._margin(one)
-                complete = True
-            else:
-                self._climb(task, known, watch)
-        except StoppedError:
-            self._stopped()
-        if not complete and not self.note:
-            self.note.append("too many")
-        if complete:
-            self.note.clear()
-        if not self.margins:
-            self._margin(next(iter(known.values())))
-        found = sorted((known[k] for k in self.margins), key=lambda f: (-round(self.margins[f.items], 9), f.moves,
-                                                                       order_of(f)))  # fmt: skip
-        return found, complete
-
-    def _admissible(self, task: Task, watch: Watch) -> list[Found] | None:
-        """All admissible allocations, equals not counted as one; None if they are many."""
-        found: list[Found] = []
-
-        def take(items: Indices) -> None:
-            shares = exact_shares(task, items)
-            for k in np.flatnonzero(shares <= 1.0).tolist():
-                found.append(_found(task, items[k], float(shares[k])))
-            if len(found) > _QUIET_MOST:
-                raise TooWideError
-
-        try:
-            enumerate_all(task, 1.0, watch, lambda: math.inf, take, distinct=True)
-        except TooWideError:
-            return None
-        return found
-
-    def _climb(self, task: Task, known: dict[tuple[int, ...], Found], watch: Watch) -> None:
-        """Moves and exchanges as long as the margin grows, from the best by margin, then from the next."""
-        done: set[tuple[int, ...]] = set()
-        rng = np.random.default_rng(3)
-        while True:
-            ranked = sorted(self.margins, key=lambda k: -self.margins[k])
-            base = next((k for k in ranked if k not in done), None)
-            if base is None:
-                return
-            done.add(base)
-            block = _around(task, np.array(base))
-            block = block[rng.permutation(block.shape[0])]
-            shares = exact_shares(task, block)
-            best = self.margins[base]
-            for k in np.flatnonzero(shares <= 1.0).tolist():
-                watch.check()
-                one = _found(task, block[k], float(shares[k]))
-                if one.items in self.margins:
-                    continue
-                known[one.items] = one
-                if self._margin(one) > best + 1e-9:
-                    break
-
-    def _margin(self, one: Found) -> float:
-        """The smallest emission margin [dB] over limit sets and corners; inf if nothing is seen, -inf if one fails."""
-        known = self.margins.get(one.items)
-        if known is not None:
-            return known
-        project = moved(self.project, self._ids(one))
-        margin = smallest_margin(project)
-        if not self.margins or margin > max(self.margins.values()):
-            self.progress(self._candidate(one, margin), None)
-        self.margins[one.items] = margin
-        return margin
-
     # --- results --------------------------------------------------------------------------------------------------
 
     def _finished(
@@ -409,26 +242,15 @@ class _Search:
         finish: Callable[[Project], Result],
     ) -> Allocation:
         checked: list[Candidate] = []
-        for one in found[:count]:
-            if checked and self.watch.cancelled():
-                self._stopped()
-                checked.append(self._candidate(one))
-                continue
-            result = finish(moved(self.project, self._ids(one)))
-            margin = _margin_of(result)
-            checked.append(
-                replace(
-                    self._candidate(one, math.inf if margin is None else margin),
-                    status=result.status,
-                    worst=_worst(result),
-                )
-            )
-        ranked = sorted(checked, key=lambda c: _RANK[c.status])  # stable: by goal, then by moves within
+        for place, one in enumerate(found[:count]):
+            candidate = replace(self._candidate(one), place=place)
+            checked.append(judged(candidate, finish(moved(self.project, candidate.allocation))))
+        if self.watch.cancelled():
+            self._stopped()
         return Allocation(
             goal=self.goal,
             proved=proved,
-            candidates=tuple(ranked),
-            best=checked[0] if checked else None,
+            candidates=ranked(tuple(checked)),
             gap=0.0 if proved else gap,
             gap_unit=unit,
             visited=pool.visited,
@@ -455,68 +277,46 @@ class _Search:
             goal=self.goal,
             proved=proved,
             candidates=(),
-            best=None,
             gap=None,
             gap_unit="headroom",
-            visited=0,
             seconds=time.monotonic() - self.begun,
             shortfall=reason,
             unrated=tuple(f.id for f in self.project.filters if f.rated_current is None),
             note=tuple(self.note),
         )
 
-    def _ids(self, one: Found) -> tuple[tuple[str, str], ...]:
+    def _ids(self, one: Found) -> Places:
         filters = self.project.filters
         return tuple((c.id, filters[f].id) for c, f in zip(self.project.converters, one.home, strict=True))
 
-    def _candidate(self, one: Found, margin: float = math.inf) -> Candidate:
+    def _candidate(self, one: Found, margin: float | None = None) -> Candidate:
         rated = any(self.project.filters[f].rated_current is not None for f in one.home)
         headroom = max(0.0, 1.0 - one.share) if rated else None
-        seen = margin if math.isfinite(margin) else None
-        return Candidate(self._ids(one), one.used, headroom, seen, one.moves)
+        seen = self.margins.known.get(one.items, math.inf) if margin is None else margin
+        return Candidate(self._ids(one), one.used, headroom, seen if math.isfinite(seen) else None, one.moves)
 
     def _better(self, one: Found) -> None:
-        if one.share <= 1.0 and self.goal != "quiet":
-            self.progress(self._candidate(one), self.bound)
+        """Tell of an admissible allocation, unless a better one was told before."""
+        if one.share > 1.0 or self.sought == "quiet":
+            return
+        rank = (one.used if self.sought == "fewest" else 0, round(one.share / SAME), one.moves)
+        if self.top is None or rank < self.top[0]:
+            self.top = (rank, self._candidate(one))
+            self._tell()
 
     def _told(self, bound: float) -> None:
         self.bound = 1.0 - bound
+        if self.top is not None:
+            self._tell()
+
+    def _tell(self) -> None:
+        if self.top is not None:
+            self.progress(self.top[1], float(self.few) if self.sought == "fewest" else self.bound)
 
     def _stopped(self) -> None:
-        if "stopped" not in self.note:
-            self.note.append("stopped")
-
-
-def smallest_margin(project: Project) -> float:
-    """The smallest emission margin [dB] over limit sets, cases and lines.
-
-    inf if no line is seen, -inf where a duty leaves no room for the edges or an operating point is missing.
-    """
-    found = emissions(project, operating_points(project))
-    if any(row.failures or not row.solved for row in found.rows):
-        return -math.inf
-    return min((row.margin for row in found.rows if row.margin is not None), default=math.inf)
-
-
-def _margin_of(result: Result) -> float | None:
-    rows = result.emissions.rows if result.emissions else ()
-    return min((row.margin for row in rows if row.margin is not None), default=None)
-
-
-def _worst(result: Result) -> tuple[str, str] | None:
-    """The worst row: by status, and then by margin, 20 dB counting as much as a ratio of 1."""
-    rank = {"fail": 0, "thin": 1, "ok": 2}
-
-    def key(row: CheckRow) -> tuple[int, float]:
-        if row.margin is None:
-            return rank[row.status], -math.inf if row.status == "fail" else math.inf
-        return rank[row.status], row.margin / (20.0 if row.margin_unit == "dB" else 1.0)
-
-    rows = [row for row in result.checks if row.status in rank]
-    if not rows:
-        return None
-    row = min(rows, key=key)
-    return row.check, row.subject
+        why = "stopped" if self.watch.cancelled() else "time over"
+        if "stopped" not in self.note and why not in self.note:
+            self.note.append(why)
 
 
 def _few(found: list[Found], count: int) -> list[Found]:
@@ -533,37 +333,6 @@ def _few(found: list[Found], count: int) -> list[Found]:
             chosen.append(one)
     place = {f.items: k for k, f in enumerate(found)}
     return sorted(chosen, key=lambda f: place[f.items])
-
-
-def _found(task: Task, items: Indices, share: float) -> Found:
-    home = spread(task, items[None])[0]
-    return Found(
-        tuple(home.tolist()),
-        tuple(items.tolist()),
-        share,
-        len(set(home.tolist())),
-        int((home != task.present).sum()),
-    )
-
-
-def _around(task: Task, items: Indices) -> Indices:
-    """Every allocation (A, K) one move or one exchange away."""
-    block = []
-    for k in range(items.size):
-        for f in np.flatnonzero(task.allowed[k]).tolist():
-            if f != items[k]:
-                one = items.copy()
-                one[k] = f
-                block.append(one)
-    for a, b in itertools.combinations(range(items.size), 2):
-        if items[a] != items[b]:
-            one = items.copy()
-            one[a], one[b] = items[b], items[a]
-            block.append(one)
-    if not block:
-        return np.zeros((0, items.size), dtype=np.intp)
-    every = np.array(block, dtype=np.intp)
-    return every[obeys(task, every)]
 
 
 def _restricted(task: Task, chosen: tuple[int, ...]) -> Task:

@@ -53,7 +53,8 @@ def mode_table(
     running = [project.converters[k] for k in network.converters[g > 0.0].tolist()]
     names += [("converter", c.id) for c in running if c.control_bandwidth]
     values = values[(values.imag >= 0.0) & (np.abs(values) > 0.0)]
-    order = np.argsort(-values.real / np.abs(values), kind="stable")[:most]
+    # Equal ones are in order of frequency, equal owners in that of the network, whatever rounding leaves of them.
+    order = np.lexsort((np.abs(values), np.round(-values.real / np.abs(values), 9)))[:most]
     found = []
     for value in values[order].tolist():
         value, right, left = polished(matrix, complex(value))
@@ -65,7 +66,7 @@ def mode_table(
             name = names[k] if k < len(names) else ("converters", "")
             owner = (str(name[0]), "" if name[0] == "bus" else str(name[1]))
             owners[owner] = owners.get(owner, 0.0) + (part / total if total > 0.0 else 0.0)
-        ranked = tuple(sorted(owners.items(), key=lambda item: -item[1]))
+        ranked = tuple(sorted(owners.items(), key=lambda item: -round(item[1], 6)))
         found.append(Mode(abs(value) / (2.0 * np.pi), -value.real / abs(value), ranked))
     return tuple(found)
 

@@ -157,25 +157,28 @@ def levels(project: Project, operating: Operating, lines: Lines, corners: Sequen
     return Levels(dm, cm, level, no_room)
 
 
-def shares(project: Project, operating: Operating, lines: Lines, index: int) -> Floats:
-    """What each converter would put on one line by itself, shape (case C, 3, converter N) [V or A].
+def shares(project: Project, operating: Operating, lines: Lines, chosen: Indices, corner: tuple[int, int]) -> Floats:
+    """What each converter by itself puts on the lines ``chosen`` (n,) in one corner, shape (n, converter N) [V or A].
 
-    |DM| + |CM| where their sum is largest, plus measured lines; 0 in corners without an operating point.
+    |DM| + |CM| where their sum is largest, plus measured lines; 0 in a corner without an operating point.
     """
-    found = np.zeros((*operating.solved.shape, len(project.converters)))
-    case, line = np.nonzero(operating.solved)
-    order = lines.order[index : index + 1].astype(np.float64)
+    found = np.zeros((chosen.size, len(project.converters)))
+    if not operating.solved[corner]:
+        return found
+    case, line = _axes([corner])
+    own: dict[int, Floats] = {}
     with np.errstate(all="ignore"):
-        for k in range(len(project.converters)):
-            own = np.zeros((case.size, lines.points.shape[1]))
-            for source in lines.sources:
-                if source.converter == k and source.start <= index < source.stop:
-                    value, _ = _drawn(project, operating, source, order, case, line)
-                    own += np.abs(value * source.transfer[index - source.start])
-            found[case, line, k] = own.max(axis=1)
+        for source in lines.sources:
+            mine = np.flatnonzero((chosen >= source.start) & (chosen < source.stop))
+            if not mine.size:
+                continue
+            value, _ = _drawn(project, operating, source, lines.order[chosen[mine]].astype(np.float64), case, line)
+            total = own.setdefault(source.converter, np.zeros((chosen.size, lines.points.shape[1])))
+            total[mine] += np.abs(value[0][:, None] * source.transfer[chosen[mine] - source.start])
+    for unit, total in own.items():
+        found[:, unit] = total.max(axis=1)
     for unit, where, amount in zip(lines.probes.converter, lines.probes.line, lines.measured, strict=True):
-        if where == index:
-            found[case, line, unit] += amount * operating.running[case, unit]
+        found[chosen == where, unit] += amount * operating.running[corner[0], unit]
     return np.asarray(np.minimum(np.nan_to_num(found, nan=_BEYOND), _BEYOND), dtype=np.float64)
 
 

@@ -84,10 +84,13 @@ def carried(result: Result, previous: Result | None) -> Result:
     return replace(result, checks=checks, status=worst_status(checks))
 
 
-def with_stability(result: Result) -> Result:
-    """The result with the stability of every corner and its check rows."""
+def with_stability(result: Result, cancelled: Callable[[], bool] | None = None) -> Result:
+    """The result with the stability of every corner and its check rows.
+
+    Raises ``transient.CancelledError`` when ``cancelled`` says so, which is asked now and then.
+    """
     project = result.project
-    found = stability(project, result.operating)
+    found = stability(project, result.operating, cancelled=cancelled)
     kept = (row for row in result.checks if row.check not in ("stability", "impedance"))
     checks = in_order((*kept, *stability_checks(project, found, result.lines)))
     return replace(result, checks=checks, status=worst_status(checks), stability=found)

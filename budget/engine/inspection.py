@@ -22,8 +22,8 @@ def parts(project: Project, operating: Operating, lines: Lines, corner: tuple[in
     Zero for a converter that is not seen there. Clocks in step are taken apart, so the values of one clock may be more
     than its reading.
     """
-    found = np.zeros(len(project.converters))
     seen = np.flatnonzero((lines.sweep.start <= tuned) & (lines.sweep.end >= tuned))
-    for index in seen.tolist():
-        found = np.maximum(found, shares(project, operating, lines, index)[corner])
+    if not seen.size:
+        return np.zeros(len(project.converters))
+    found: Floats = shares(project, operating, lines, seen, corner).max(axis=0)
     return found

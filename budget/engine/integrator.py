@@ -24,16 +24,17 @@ inductor with no capacitor has no solution that holds still. So the load is foll
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from contextlib import suppress
 from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
-from budget.engine.events import Logic, Phase, Segment, initial
-from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps, solve_quietly, step_weights
+from budget.engine.coupling import Blocks, solve_pairs, solve_parts
+from budget.engine.events import HYSTERESIS, Logic, Phase, Segment, initial
+from budget.engine.linear import Solved, as_real, exact, make_linear, met_at, times
+from budget.engine.modes import NODES, PER_OCTAVE, Modes, Steps, make_steps
 from budget.engine.statespace import StateSpace, saturation
-from budget.engine.waves import Waves
+from budget.engine.waves import Values, Waves
 
 Floats = NDArray[np.float64]
 Complex = NDArray[np.complex128]
@@ -44,9 +45,6 @@ TOLERANCE = 1e-5  # of an output's scale, for the defect of one step
 _RESOLVE = 2.0  # tolerances: a mode that rings by less at every output is not followed
 _QUARTIC = 3e-5  # error of the quartic through five points is this times (rate h)^5 of the amplitude
 _GROW, _SHRINK = 2 * PER_OCTAVE, 4 * PER_OCTAVE  # levels
-_CONTRACTS = 0.15  # repetition instead of Newton
-_WEAK = 0.03  # inputs that are repeated beside Newton
-_SWEEPS = 12
 _WARY, _GROWN = 1.5, 3.0  # the loads' push on a mode is taken this much larger; growth e^3 over the window counts
 _STRICT, _GROWING = 3e-3, 0.01  # of the tolerance, while a mode that grows is below this share of every output
 _EVENT = 4  # steps that an event counts for in the limit
@@ -92,7 +90,7 @@ class Outcome:
     problem: str  # "", "chatter", "steps"
     steps: int
     time: Floats = field(default_factory=lambda: np.zeros(0))  # (K,) s
-    values: Floats = field(default_factory=lambda: np.zeros((0, 0)))  # (K, W) A and V
+    values: Values = field(default_factory=lambda: np.zeros((0, 0)))  # (K, W) A and V
 
 
 class Batch:
@@ -111,8 +109,12 @@ class Batch:
         reference: float,
         limit: int,
         tolerance: float = TOLERANCE,
+        groups: Indices | None = None,
     ) -> None:
-        """``reference`` [V]: errors of voltages count against it; ``limit``: steps that a member may take."""
+        """``reference`` [V]: errors of voltages count against it; ``limit``: steps that a member may take.
+
+        ``groups`` (M,): numbers of the filters that loads and saturating inductors belong to; without them, all to one.
+        """
         self.members, self.logic, self.limit, self.tolerance = members, logic, limit, tolerance
         self.reference = reference
         self.loads = space.converters.size
@@ -125,28 +127,29 @@ class Batch:
         self.outputs = outputs
         self.quantities = slice(outputs - self.loads, outputs + space.L0.size)
 
-        show = np.concatenate((space.C, space.flux_C))
-        direct = np.concatenate((space.D, space.flux_D))
-        late = np.concatenate((space.D1, np.zeros_like(space.flux_D)))
-        shown, driven = modal.seen(show), modal.driven(space.B)
-        self.rate = modal.rate
+        self.linear, shown, driven = make_linear(space, modal)
+        linear = self.linear
+        self.rate, self.by_source, self.drive_real = linear.rate, linear.by_source, linear.drive_real
+        self.show_real, self.direct, self.late = linear.show_real, linear.direct, linear.late
+        self.direct_source, self.late_source = linear.direct_source, linear.late_source
         self.slow = np.where(np.abs(self.rate) > 1e-30, 1.0 / np.where(self.rate == 0.0, 1.0, self.rate), 0.0)
-        self.by_source = driven[:, 0]
-        self.drive_real = _as_real(driven[:, 1:].T)
-        self.show_real = _read_real(shown)
-        self.direct_source, self.late_source, self.direct = direct[:, 0], late[:, 0], direct[:, 1:]
-        self.late = late[:, 1 + self.loads :] if late[:, 1 + self.loads :].any() else None
-        self.weight_seen = np.abs(shown[:outputs])
+        weight_seen = np.abs(shown[:outputs])
+        self.amps_seen = weight_seen[: self.meters]
+        self.volts_seen = weight_seen[self.meters :].max(axis=0, initial=0.0) / reference
         q = self.quantities
         window = max(m.segments[-1].end for m in members)
         self.tables: Steps = make_steps(
             self.rate, window, driven[:, 1:], shown[q], self.direct[q], shown[:outputs], self.direct[:outputs]
         )
+        self.blocks: Blocks | None = None
+        if self.tables.many:
+            together = np.zeros(driven.shape[1] - 1, dtype=np.intp) if groups is None else groups
+            self.blocks = Blocks(together, shown[q], driven[:, 1:], self.direct[q])
         self.jump = window * _JUMP
         self.span = window
         share = np.where(self.rate.imag > 0.0, 0.5, 1.0)  # of a pair one mode is kept
         feedback = shown[q][: self.loads] * driven[:, 1 : 1 + self.loads].T * share  # (N, R) of 1/s per A/V
-        self.feedback = _as_real(feedback)
+        self.feedback = as_real(feedback)
         self.decay = np.exp(self.rate * self.tables.length[:: 2 * PER_OCTAVE, None])  # (times, R) for a look ahead
         self.waves = Waves(len(members), self.watch)
         self.outcomes: list[Outcome | None] = [None] * len(members)
@@ -176,7 +179,7 @@ class Batch:
             if member.currents is not None:
                 self._settle(i, member.currents, member.before)
             self._segment(i)
-            self._restart(i)
+        self._restart(np.arange(count))
         at = np.tile(self.y[:, self.terminals], 2)
         clear = np.abs(at - self.threshold) > _BAND * self.threshold
         self.side = np.where(clear, np.sign(at - self.threshold), 0.0).astype(np.int8)
@@ -215,32 +218,50 @@ class Batch:
         self.z[i] = -inverse * (source + (g @ self.drive_real).view(np.complex128))
         self.g[i] = g
 
-    def _restart(self, i: int) -> None:
-        """Inputs and outputs anew at this instant, after something has jumped."""
-        rows = np.array([i])
-        seen = self.z[i].view(np.float64) @ self.show_real
-        seen = seen + self.direct_source * self.volts[i] + self.late_source * self.slope[i]
-        q = self.quantities
+    def _restart(self, rows: Indices) -> None:
+        """Inputs and outputs of the members ``rows`` (m,) anew at this instant, after something has jumped."""
+        seen = self.z[rows].view(np.float64) @ self.show_real
+        seen = seen + self.volts[rows, None] * self.direct_source + self.slope[rows, None] * self.late_source
+        q, n = self.quantities, self.loads
+        t = self.t[rows][:, None]
         start = self.g[rows].copy()
-        start[0, : self.loads] = self._nonlinear(self.y[rows][:, None, q], self.t[rows][:, None], rows)[0][
-            0, 0, : self.loads
-        ]
-        if not self.y[i].any():
-            start = self._nonlinear(seen[None, None, q], self.t[rows][:, None], rows)[0][:, 0]
-        loop = self.direct[q][None]
-        g, fine = self._solve(seen[None, q], loop, np.abs(loop).sum(axis=2), start, self.t[rows][:, None], rows)
-        if not fine[0]:  # no root from there: the one below
-            start[0, : self.loads] = np.maximum(self.ph.level[i] + self.ph.climb[i] * self.t[i], 0.0) / self.logic.floor
-            g, fine = self._solve(seen[None, q], loop, np.abs(loop).sum(axis=2), start, self.t[rows][:, None], rows)
-        self.g[i] = g[0]
-        self.bend[i] = 0.0
-        self.drive[i] = (g[0] @ self.drive_real).view(np.complex128)
-        self.y[i] = seen + self.direct @ g[0]
-        to_come = (
-            np.ascontiguousarray(self._free(rows) * self.decay).view(np.float64) @ self.show_real[:, : self.meters]
-        )
-        self.hint[i] = max(0.5 * float(np.abs(to_come).max()), 1e-300)
+        start[:, :n] = self._nonlinear(self.y[rows][:, None, q], t, rows)[0][:, 0, :n]
+        fresh = np.flatnonzero(~self.y[rows].any(axis=1))
+        if fresh.size:
+            start[fresh] = self._nonlinear(seen[fresh][:, None, q], t[fresh], rows[fresh])[0][:, 0]
+        g, fine = self._solve_now(seen[:, q], start, t, rows)
+        bad = np.flatnonzero(~fine)
+        if bad.size:  # no root from there: the one below
+            low = start[bad]
+            power = self.ph.level[rows[bad]] + self.ph.climb[rows[bad]] * t[bad]
+            low[:, :n] = np.maximum(power, 0.0) / self.logic.floor
+            g[bad] = self._solve_now(seen[bad][:, q], low, t[bad], rows[bad])[0]
+        self.g[rows] = g
+        self.bend[rows] = 0.0
+        self.drive[rows] = (g @ self.drive_real).view(np.complex128)
+        self.y[rows] = seen + g @ self.direct.T
+        later = np.ascontiguousarray(self._free(rows)[:, None] * self.decay).view(np.float64)
+        to_come = np.abs(times(later, self.show_real[:, : self.meters])).max(axis=(1, 2))
+        self.hint[rows] = np.maximum(0.5 * to_come, 1e-300)
         self._record(rows, self.t[rows][:, None], self.y[rows][:, None, : self.watch])
+
+    def _solve_now(self, known: Floats, guess: Floats, t: Floats, rows: Indices) -> tuple[Floats, Bools]:
+        """Inputs (m, M) [A] at one instant each, ``t`` (m, 1) [s], where they act without delay only; if it is done."""
+        direct = self.direct[self.quantities]
+        least, close = self._least(rows), 0.02 * self.tolerance
+        if self.blocks is not None:
+            coupling = np.broadcast_to(self.blocks.direct, (rows.size, *self.blocks.direct.shape))
+            found, fine = solve_parts(
+                *(self.blocks, coupling, lambda g, _: g @ direct.T, known[:, None], guess[:, None]),
+                *(lambda q, which: self._nonlinear(q, t[which], rows[which]), least, close),
+            )
+            return found[:, 0], fine
+        loop = np.broadcast_to(direct, (rows.size, *direct.shape))
+        spread = np.abs(direct).sum(axis=1)[None]
+        found, fine = solve_pairs(
+            loop, spread, known[:, None], guess[:, None], lambda q: self._nonlinear(q, t, rows), least, close
+        )
+        return found[:, 0], fine
 
     def _nonlinear(self, q: Floats, t: Floats, rows: Indices | slice) -> tuple[Floats, Floats]:
         """Inputs [A] and their slopes from the quantities ``q`` (m, T, Q) [V, V s] at the times ``t`` (m, T) [s]."""
@@ -259,47 +280,16 @@ class Batch:
             np.concatenate((slope, steep - 1.0 / L0), axis=-1),
         )
 
-    def _solve(
-        self, known: Floats, loop: Floats, spread: Floats, guess: Floats, t: Floats, rows: Indices | slice
-    ) -> tuple[Floats, Bools]:
-        """Solve g = G(known + loop g) for g (m, T M) [A], flat over times ``t`` (m, T) [s]; and whether it is done."""
-        shape = (*t.shape, -1)
+    def _least(self, rows: Indices | slice) -> Floats:
+        """The error (m,) [A] of an input that is let pass: rounding must not keep it going where nothing flows."""
         most = np.maximum(self.peak[rows, : self.meters].max(axis=1), self.hint[rows])
-        least = 1e-3 * self.tolerance * most[:, None]  # rounding must not keep it going where nothing flows
-        g = guess
-        done = np.zeros(len(g), dtype=np.bool_)
-        newton: Bools | None = None
-        for _ in range(_SWEEPS):
-            q = known + np.matmul(loop, g[:, :, None])[:, :, 0]
-            found, slope = self._nonlinear(q.reshape(shape), t, rows)
-            found, slope = found.reshape(g.shape), slope.reshape(g.shape)
-            gap = found - g
-            size = np.abs(found)
-            off = np.abs(gap) > 0.02 * self.tolerance * size + least
-            if newton is None:
-                strength = np.abs(slope) * spread
-                newton = strength.max(axis=1, initial=0.0) > _CONTRACTS
-                some = bool(newton.any())
-                # The others hardly feel what they do: small systems, and far quicker than the whole.
-                strong = np.flatnonzero((strength[newton] > _WEAK).any(axis=0))
-            done = ~off.any(axis=1)
-            if some:
-                which = np.flatnonzero(newton & ~done)
-                if which.size:
-                    cut = np.ix_(which, strong)
-                    matrix = np.eye(strong.size) - slope[cut][:, :, None] * loop[np.ix_(which, strong, strong)]
-                    with suppress(np.linalg.LinAlgError):  # a fold: repetition moves off it
-                        gap[cut] = solve_quietly(matrix, gap[cut][:, :, None])[:, :, 0]
-            g = g + gap
-            if done.all():
-                break
-        return g, done
+        return np.asarray(1e-3 * self.tolerance * most, dtype=np.float64)
 
     # --- one step -------------------------------------------------------------------------------------------------
 
     def _free(self, rows: Indices | slice) -> Complex:
         """What of each mode the inputs, with their slopes as they are now, do not hold; (m, R)."""
-        bend = (self.bend[rows] @ self.drive_real).view(np.complex128)  # (m, 2, R)
+        bend = times(self.bend[rows], self.drive_real).view(np.complex128)  # (m, 2, R)
         forced = 2.0 * bend[:, 1] * self.slow
         forced = (forced + bend[:, 0] + self.slope[rows][:, None] * self.by_source) * self.slow
         forced += self.volts[rows][:, None] * self.by_source + self.drive[rows]
@@ -336,7 +326,8 @@ class Batch:
         tables = self.tables
         scale = self._scale()
         free = np.abs(self._free(slice(None)))
-        seen = (free[:, None] * (self.weight_seen / scale[:, :, None])).max(axis=1)
+        amps = (free[:, None] * (self.amps_seen / scale[:, : self.meters, None])).max(axis=1)
+        seen = np.maximum(amps, free * self.volts_seen)
         speed = np.abs(self.rate)
         resolve = _RESOLVE * self.tolerance
         rings = seen > resolve
@@ -356,7 +347,7 @@ class Batch:
 
         h = tables.length[level]
         w = tables.weights[level]
-        m, inputs = self.g.shape
+        m = self.t.size
         everyone = slice(None)
         source = self.volts[:, None] * self.by_source
         ramp = self.slope[:, None] * self.by_source
@@ -366,19 +357,27 @@ class Batch:
         volts = self.volts[:, None] + (self.slope * h)[:, None] * _THETA
         fixed = volts[:, :, None] * self.direct_source + (self.slope[:, None] * self.late_source)[:, None]
         q = self.quantities
-        known = base[:, 1::2].view(np.float64) @ self.show_real[:, q] + fixed[:, 1::2, q]
+        known = times(base[:, 1::2].view(np.float64), self.show_real[:, q]) + fixed[:, 1::2, q]
         t = self.t[:, None] + h[:, None] * _THETA
         ratio = h[:, None]
         first, second = self.bend[:, 0] * ratio, self.bend[:, 1] * ratio**2
-        guess = np.concatenate((self.g + 0.5 * first + 0.25 * second, self.g + first + second), axis=1)
-        found, fine = self._solve(
-            known.reshape(m, -1), tables.loop[level], tables.spread[level], guess, t[:, 1::2], everyone
-        )
-        ends = found.reshape(m, 2, inputs)
-        pushed = (ends @ self.drive_real).view(np.complex128)
+        guess = np.stack((self.g + 0.5 * first + 0.25 * second, self.g + first + second), axis=1)
+        at, least, close = t[:, 1::2], self._least(everyone), 0.02 * self.tolerance
+        if self.blocks is None:
+            ends, fine = solve_pairs(
+                *(tables.loop[level], tables.spread[level], known, guess),
+                *(lambda q: self._nonlinear(q, at, everyone), least, close),
+            )
+        else:
+            each = np.arange(m)
+            ends, fine = solve_parts(
+                *(self.blocks, self.blocks.at(level, w), self._through(w), known, guess),
+                *(lambda q, which: self._nonlinear(q, at[which], each[which]), least, close),
+            )
+        pushed = times(ends, self.drive_real).view(np.complex128)
         z = base + w[:, :, 4] * pushed[:, 0, None] + w[:, :, 5] * pushed[:, 1, None]
         along = _MIX @ np.stack((self.g, ends[:, 0], ends[:, 1]), axis=1)
-        y = z.view(np.float64) @ self.show_real + fixed + along @ self.direct.T
+        y = times(z.view(np.float64), self.show_real) + fixed + times(along, self.direct.T)
         bend = np.stack(
             (4.0 * ends[:, 0] - 3.0 * self.g - ends[:, 1], 2.0 * (self.g + ends[:, 1]) - 4.0 * ends[:, 0]), 1
         )
@@ -388,7 +387,7 @@ class Batch:
 
         check, _ = self._nonlinear(y[:, 0::2, q], t[:, 0::2], everyone)
         defect = np.abs(check - along[:, 0::2]).max(axis=1)
-        error = np.matmul(tables.defect[level], defect[:, :, None])[:, :, 0] / scale
+        error = tables.errors(level, defect) / scale
         worst = error.max(axis=1) / tolerance
         taken = fine & ((worst <= 1.0) | (h <= self.jump))
         self.used += 1
@@ -413,12 +412,25 @@ class Batch:
             steep[:, 0] += 2.0 * steep[:, 1] * h[rows][:, None]
             self.bend[rows] = steep
             self.still[rows] = 0
-        for i in np.flatnonzero(cut).tolist():
-            self._land(i, float(h[i]), float(instant[i]), ends[i], fine_values[i], met[i])
+        if cut.any():
+            self._land(np.flatnonzero(cut), h, instant, ends, pushed, fine_values, met)
         late = np.flatnonzero((self.used > self.limit) | (~taken & (level == 0)))
         for i in late.tolist():
             self._finish(i, "steps")
         self._compress()
+
+    def _through(self, w: Complex) -> Callable[[Floats, Indices], Floats]:
+        """What inputs at the middle and the end of steps do to the quantities there, through the modes."""
+        q = self.quantities
+        show, direct = np.ascontiguousarray(self.show_real[:, q]), self.direct[q].T
+
+        def effect(g: Floats, which: Indices) -> Floats:
+            pushed = times(g, self.drive_real).view(np.complex128)
+            part = w if which.size == len(w) else w[which]
+            z = part[:, 1::2, 4] * pushed[:, :1] + part[:, 1::2, 5] * pushed[:, 1:]
+            return times(z.view(np.float64), show) + times(g, direct)
+
+        return effect
 
     def _account(
         self, rows: Indices | slice, h: Floats, t: Floats, five: Floats, values: Floats, high: Floats, low: Floats
@@ -469,107 +481,120 @@ class Batch:
 
     # --- events ---------------------------------------------------------------------------------------------------
 
-    def _exact(self, i: int, h: float, ends: Floats, theta: Floats) -> tuple[Complex, Floats, Floats]:
-        """z (T, R), outputs (T, Y) and inputs (T, M) at ``theta`` (T,) of a step that has been solved."""
-        w = step_weights(self.rate, np.array([h]), theta)[0]
-        pushed = (ends @ self.drive_real).view(np.complex128)
-        ramp = self.slope[i] * self.by_source
-        z = w[:, 0] * self.z[i] + w[:, 1] * (self.volts[i] * self.by_source) + w[:, 2] * ramp
-        z = z + w[:, 3] * self.drive[i] + w[:, 4] * pushed[0] + w[:, 5] * pushed[1]
-        mix = np.stack(((1 - theta) * (1 - 2 * theta), 4 * theta * (1 - theta), theta * (2 * theta - 1)), axis=1)
-        along = mix @ np.stack((self.g[i], ends[0], ends[1]))
-        volts = self.volts[i] + self.slope[i] * h * theta
-        y = z.view(np.float64) @ self.show_real + volts[:, None] * self.direct_source
-        y = y + self.slope[i] * self.late_source + along @ self.direct.T
-        if self.late is not None:
-            one = 4.0 * ends[0] - 3.0 * self.g[i] - ends[1]
-            two = 2.0 * (self.g[i] + ends[1]) - 4.0 * ends[0]
-            y = y + ((one + 2.0 * theta[:, None] * two) / h)[:, self.loads :] @ self.late.T
-        return z, y, along
+    def _solved(self, who: Indices, step: Floats, ends: Floats, pushed: Complex) -> Solved:
+        """The solved steps of the members ``who`` (m,); the others are of all members."""
+        start = self.z[who], self.g[who], self.drive[who], self.volts[who], self.slope[who]
+        return Solved(self.linear, *start, step[who], ends[who], pushed[who])
 
-    def _land(self, i: int, h: float, instant: float, ends: Floats, values: Floats, met: Bools) -> None:
-        """Cut the step of member ``i`` at the first event inside it, and let that happen."""
-        theta = (instant - float(self.t[i])) / h
-        theta = min(max(theta, 0.0), 1.0)
-        crossing = -1
-        bracket, chord = (0.0, 0.0), 0.0
-        for j in np.flatnonzero(met).tolist():
-            upper, lower = self.ph.upper[i, j], self.ph.lower[i, j]
-            curve = values[:, self.terminals.start + j]
-            beyond = curve >= upper if upper < np.inf else curve < lower
-            k = int(beyond.argmax())
-            if k == 0:
-                theta, crossing = 0.0, j
-                break
-            limit = float(upper if upper < np.inf else lower)
-            low, high = float(_FINE[k - 1]), float(_FINE[k])
-            slope = float(curve[k] - curve[k - 1]) / (high - low)
-            at = low + (limit - float(curve[k - 1])) / slope
-            if at < theta:
-                theta, crossing, bracket, chord = at, j, (low, high), slope
-        if crossing >= 0 and theta > 0.0:
-            theta = self._refine(i, h, ends, crossing, theta, bracket, chord)
-        self.used[i] += _EVENT
-        if theta > 0.0:
-            nodes = theta * _THETA
-            z, y, along = self._exact(i, h, ends, nodes)
-            rows = np.array([i])
-            five = np.concatenate((self.y[i][None, : self.watch], y[:, : self.watch]))[None]
-            part_values = _LAGRANGE @ five
-            length = theta * h
-            t = self.t[i] + h * nodes
-            if crossing < 0:
-                t[3] = instant
-            self._account(
-                rows, np.array([length]), t[None], five, part_values, part_values.max(axis=1), part_values.min(axis=1)
+    def _land(
+        self,
+        rows: Indices,
+        step: Floats,
+        until: Floats,
+        all_ends: Floats,
+        all_pushed: Complex,
+        all_values: Floats,
+        met: Bools,
+    ) -> None:
+        """Cut the steps of the members ``rows`` at the first event inside each, and let that happen.
+
+        The others are of all members: steps [s], instants [s], inputs and what they drive, the outputs along the steps,
+        and whose terminals (m, N) meet a threshold.
+        """
+        share, event = np.zeros(rows.size), np.full(rows.size, -1)
+        around, steepness = np.zeros((rows.size, 2)), np.zeros(rows.size)
+        for k, i in enumerate(rows.tolist()):
+            h = float(step[i])
+            theta = (float(until[i]) - float(self.t[i])) / h
+            theta = min(max(theta, 0.0), 1.0)
+            crossing = -1
+            bracket, chord = (0.0, 0.0), 0.0
+            for j in np.flatnonzero(met[i]).tolist():
+                upper, lower = self.ph.upper[i, j], self.ph.lower[i, j]
+                curve = all_values[i, :, self.terminals.start + j]
+                beyond = curve >= upper if upper < np.inf else curve < lower
+                first = int(beyond.argmax())
+                if first == 0:
+                    theta, crossing = 0.0, j
+                    break
+                limit = float(upper if upper < np.inf else lower)
+                low, high = float(_FINE[first - 1]), float(_FINE[first])
+                slope = float(curve[first] - curve[first - 1]) / (high - low)
+                at = low + (limit - float(curve[first - 1])) / slope
+                if at < theta:
+                    theta, crossing, bracket, chord = at, j, (low, high), slope
+            share[k], event[k], around[k], steepness[k] = theta, crossing, bracket, chord
+        unsure = np.flatnonzero((event >= 0) & (share > 0.0))
+        if unsure.size:
+            who, at_which = rows[unsure], event[unsure]
+            above, below = self.ph.upper[who, at_which], self.ph.lower[who, at_which]
+            share[unsure] = met_at(
+                self._solved(who, step, all_ends, all_pushed),
+                *(self.terminals.start + at_which, np.where(above < np.inf, above, below), above < np.inf),
+                *(share[unsure], around[unsure], steepness[unsure]),
             )
-            self.z[i], self.y[i], self.g[i] = z[3], y[3], along[3]
-            self.volts[i] += self.slope[i] * length
-            self.t[i] = t[3]
-            self.still[i] = 0
-        else:
-            self.still[i] += 1
-            if crossing < 0:
-                self.t[i] = instant
-        self._happen(i, crossing, instant if crossing < 0 else -1.0)
+        self.used[rows] += _EVENT
+        inside = share > 0.0
+        if inside.any():
+            who = rows[inside]
+            length, part = step[who], share[inside]
+            nodes = part[:, None] * _THETA
+            z, y, along = exact(self._solved(who, step, all_ends, all_pushed), nodes)
+            five = np.concatenate((self.y[who][:, None, : self.watch], y[:, :, : self.watch]), axis=1)
+            values = _LAGRANGE @ five
+            t = self.t[who][:, None] + length[:, None] * nodes
+            t[:, 3] = np.where(event[inside] < 0, until[who], t[:, 3])
+            self._account(who, part * length, t, five, values, values.max(axis=1), values.min(axis=1))
+            self.z[who], self.y[who], self.g[who] = z[:, 3], y[:, 3], along[:, 3]
+            self.volts[who] += self.slope[who] * (part * length)
+            self.t[who] = t[:, 3]
+            self.still[who] = 0
+        for i, theta, crossing in zip(rows.tolist(), share.tolist(), event.tolist(), strict=True):
+            if theta <= 0.0:
+                self.still[i] += 1
+                if crossing < 0:
+                    self.t[i] = until[i]
+        anew = [
+            i
+            for i, crossing in zip(rows.tolist(), event.tolist(), strict=True)
+            if self._happen(i, crossing, float(until[i]) if crossing < 0 else -1.0)
+        ]
+        if anew:
+            self._restart(np.array(anew))
 
-    def _refine(
-        self, i: int, h: float, ends: Floats, j: int, theta: float, bracket: tuple[float, float], chord: float
-    ) -> float:
-        """The share of a step at which terminals ``j`` meet their threshold, on the exact solution, by chords."""
-        upper = self.ph.upper[i, j]
-        limit = float(upper if upper < np.inf else self.ph.lower[i, j])
-        row = self.terminals.start + j
-        low, high = bracket
-        for _ in range(8):
-            f = float(self._exact(i, h, ends, np.array([theta]))[1][0, row]) - limit
-            if abs(f) <= 1e-10 * limit or high - low <= 1e-12:
-                break
-            if (f > 0.0) == (upper < np.inf):  # beyond the threshold already
-                high = theta
-            else:
-                low = theta
-            step = theta - f / chord
-            theta = step if low < step < high else 0.5 * (low + high)
-        return theta
-
-    def _happen(self, i: int, crossing: int, instant: float) -> None:
+    def _happen(self, i: int, crossing: int, instant: float) -> bool:
+        """Let an event of a member happen; whether it then has to start anew from this instant."""
         now, case = float(self.t[i]), int(self.case[i])
         segments = self.members[int(self.member[i])].segments
         if crossing >= 0:
-            self.ph.cross(i, crossing, self.logic, case, now)
+            for j in self._together(i, crossing):
+                self.ph.cross(i, j, self.logic, case, now)
         else:
             for j in np.flatnonzero(self.ph.timer[i] <= instant).tolist():
                 self.ph.expire(i, j, self.logic, case, now)
             if self.stop[i] <= instant:
                 if instant >= segments[-1].end:
                     self._finish(i, "")
-                    return
+                    return False
                 self._segment(i)
         if self.still[i] > 6 * self.loads + 30:
             self._finish(i, "chatter")
-            return
-        self._restart(i)
+            return False
+        return True
+
+    def _together(self, i: int, crossing: int) -> list[int]:
+        """The converters of a member that meet their thresholds now, ``crossing`` among them.
+
+        Of those that start with a jump, or stop, it is that one alone: what it does may spare the others. Where parts
+        are alike, many reach turn_on at one instant, and what they do then begins from nothing.
+        """
+        waits = self.ph.upper[i] < np.inf
+        gently = waits & ((self.logic.delay > 0.0) | (self.logic.soft > 0.0))
+        if not gently[crossing]:
+            return [crossing]
+        reached = self.y[i, self.terminals] >= self.ph.upper[i] * (1.0 - HYSTERESIS)
+        reached[crossing] = True
+        return [int(j) for j in np.flatnonzero(gently & reached)]
 
     def _finish(self, i: int, problem: str) -> None:
         who = int(self.member[i])
@@ -609,10 +634,11 @@ class Batch:
         """Advance all to their ends; ``tick`` is told the share done, 0 to 1, every few steps, and may raise."""
         total = sum(m.segments[-1].end for m in self.members)
         count = 0
+        every = 1 if self.tables.many else 16
         while self.member.size:
             self.advance()
             count += 1
-            if count % 16 == 0:
+            if count % every == 0:
                 pairs = zip(self.outcomes, self.members, strict=True)
                 done = sum(m.segments[-1].end for o, m in pairs if o is not None)
                 tick(min(1.0, (done + float(self.t.sum())) / total))
@@ -620,14 +646,3 @@ class Batch:
         for outcome, (time, values) in zip(found, self.waves.sorted(), strict=True):
             outcome.time, outcome.values = time, values
         return found
-
-
-def _as_real(matrix: Complex) -> Floats:
-    """(M, R) complex as (M, 2 R) with real and imaginary parts side by side."""
-    return np.ascontiguousarray(matrix).view(np.float64)
-
-
-def _read_real(matrix: Complex) -> Floats:
-    """(Y, R) complex as (2 R, Y), so that z as reals times it is the real part of matrix z."""
-    pairs = np.stack((matrix.real, -matrix.imag), axis=-1)
-    return np.ascontiguousarray(pairs.reshape(matrix.shape[0], -1).T)

@@ -12,6 +12,7 @@ common factor k on all g puts an eigenvalue at s where 1/k is an eigenvalue of T
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -138,15 +139,23 @@ def _divide(matrix: Floats, right: Floats) -> Floats:
 
 @dataclass(frozen=True, slots=True)
 class Modes:
-    """Eigenvalues of the open network, and what the loads see of each: Z = -(sum of seen/(s - value) + D + s D1)."""
+    """Eigenvalues of the open network, and what the loads see of each: Z = -(sum of seen/(s - value) + D + s D1).
+
+    ``seen`` is ``sight`` times ``push``, of rank one for each mode; for many loads it is kept as these factors.
+    """
 
     values: Complex  # (K,) rad/s
-    seen: Complex  # (K, N, N); empty if the eigenvectors do not carry it
+    sight: Complex  # (N, K) what a load sees of a mode; empty if the eigenvectors do not carry it
+    push: Complex  # (K, N) how a load moves it
+    seen: Complex  # (K, N, N); empty where it would be large
     loop: Loop
 
     def of(self, kept: Bools) -> Modes:
         """Some of the modes only; ``kept`` (K,) whether a mode counts."""
-        return Modes(self.values[kept], self.seen[kept] if self.seen.size else self.seen, self.loop)
+        if kept.all():
+            return self
+        sight, push = (self.sight[:, kept], self.push[kept]) if self.sight.size else (self.sight, self.push)
+        return Modes(self.values[kept], sight, push, self.seen[kept] if self.seen.size else self.seen, self.loop)
 
     def impedances(self, w: Floats) -> Complex:
         """Z at the angular frequencies ``w`` (W,) [rad/s]: ohm, shape (W, N, N)."""
@@ -156,12 +165,29 @@ class Modes:
         z = -(loop.D + s[:, None, None] * loop.D1)
         if not self.values.size:
             return z
-        if self.seen.size:
+        if self.sight.size:
             # einsum, for threads of a linear algebra library cost more than such small sums
             apart = s[:, None] - self.values
             shares = 1.0 / np.where(apart == 0.0, np.finfo(np.float64).eps * np.abs(self.values), apart)
-            flat = np.einsum("wk,kp->wp", shares, self.seen.reshape(self.values.size, count * count))
-            return np.asarray(z - flat.reshape(w.size, count, count))
+            if self.seen.size:
+                flat = np.einsum("wk,kp->wp", shares, self.seen.reshape(self.values.size, count * count))
+                return np.asarray(z - flat.reshape(w.size, count, count))
+            # Of a pair of modes p R + q R* = (p + q) Re R + j (p - q) Im R: a product of real by complex numbers.
+            up, still = self.values.imag > 0.0, self.values.imag == 0.0
+            seen, pushed = self.sight[:, up], self.push[up]
+            left = np.concatenate((self.sight[:, still].real, seen.real, seen.imag), axis=1)
+            for k in range(w.size):
+                other = 1.0 / (s[k] - self.values[up].conj())
+                even, odd = (shares[k, up] + other)[:, None], 1j * (shares[k, up] - other)[:, None]
+                right = np.concatenate(
+                    (
+                        shares[k, still, None] * self.push[still].real,
+                        even * pushed.real + odd * pushed.imag,
+                        odd * pushed.real - even * pushed.imag,
+                    )
+                )
+                z[k] -= (left @ right.view(np.float64)).view(np.complex128)
+            return z
         eye = np.eye(loop.A.shape[0])
         for k in range(w.size):
             z[k] -= loop.C @ np.linalg.solve(s[k] * eye - loop.A, loop.B)
@@ -170,21 +196,35 @@ class Modes:
 
 def modes(loop: Loop) -> Modes:
     """The modes of the network without any load's conductance."""
+    count = loop.tau.size
+    none = np.zeros((count, 0), dtype=np.complex128), np.zeros((0, count), dtype=np.complex128)
+    nothing = np.zeros((0, 0, 0), dtype=np.complex128)
     if not loop.A.size:
-        return Modes(np.zeros(0, dtype=np.complex128), np.zeros((0, 0, 0), dtype=np.complex128), loop)
+        return Modes(np.zeros(0, dtype=np.complex128), *none, nothing, loop)
     values, right = np.linalg.eig(loop.A)
     values, right = values.astype(np.complex128), right.astype(np.complex128)
     sharp = _with_slow(loop.A, values)
     if sharp is not values:  # the eigenvectors of slow modes are then no better than their values were
-        return Modes(sharp, np.zeros((0, 0, 0), dtype=np.complex128), loop)
+        return Modes(sharp, *none, nothing, loop)
     try:
         left = np.linalg.inv(right)
     except np.linalg.LinAlgError:
-        left = np.zeros((0, 0))
-    if left.size and np.linalg.norm(right, 2) * np.linalg.norm(left, 2) < 1e8:
-        c, b = loop.C @ right, left @ loop.B
-        return Modes(values, np.einsum("ik,kj->kij", c, b), loop)
-    return Modes(values, np.zeros((0, 0, 0), dtype=np.complex128), loop)
+        return Modes(values, *none, nothing, loop)
+    # The greater norm is quick; only if it does not tell, the one that is exact.
+    condition = np.linalg.norm(right) * np.linalg.norm(left)
+    if condition >= 1e8:
+        condition = np.linalg.norm(right, 2) * np.linalg.norm(left, 2)
+    if not condition < 1e8:
+        return Modes(values, *none, nothing, loop)
+    c = np.asarray(loop.C @ right, dtype=np.complex128)
+    b = np.asarray(left @ loop.B, dtype=np.complex128)
+    if values.size * count * count <= _WHOLE:
+        nothing = np.einsum("ik,kj->kij", c, b)
+    return Modes(values, c, b, nothing, loop)
+
+
+_LARGE = 400  # states
+_WHOLE = 200_000  # numbers of ``Modes.seen``: 3.2 MB
 
 
 def polished(matrix: Floats, value: complex) -> tuple[complex, Complex, Complex]:
@@ -216,7 +256,7 @@ def polished(matrix: Floats, value: complex) -> tuple[complex, Complex, Complex]
         found = complex(left @ (matrix @ right) / overlap)
         if abs(found - value) > 1e-3 * scale:
             break
-        done = abs(found - best) <= 1e-15 * scale
+        done = abs(found - best) <= (1e-15 if size < _LARGE else 1e-14) * scale  # each step cubes what is left
         best = found
         if done:
             break
@@ -229,16 +269,32 @@ def spectra(loop: Loop, g: Floats) -> list[tuple[Floats, Complex]]:
     Loads with a conductance of zero are left out, so E depends on the row.
     """
     found: list[tuple[Floats, Complex]] = [(loop.A, np.zeros(0, dtype=np.complex128))] * len(g)
+    for row, matrix, values in each_spectrum(loop, g):
+        found[row] = matrix, values
+    return found
+
+
+def each_spectrum(loop: Loop, g: Floats) -> Iterator[tuple[int, Floats, Complex]]:
+    """What ``spectra`` finds for ``g`` (Q, N) [S], with the index of its row; rows of the same loads follow each other.
+
+    So many as fit into a few megabytes are found at once; of large networks, one after the other.
+    """
     running = g > 0.0
     patterns, which = np.unique(running, axis=0, return_inverse=True)
     which = which.reshape(-1)
     for k, chosen in enumerate(patterns):
         rows = np.flatnonzero(which == k)
-        matrices = closed(loop.of(chosen), g[np.ix_(rows, chosen)])
-        values = np.linalg.eigvals(matrices) if matrices.size else np.zeros(matrices.shape[:2])
-        for i, row in enumerate(rows.tolist()):
-            found[row] = matrices[i], _with_slow(matrices[i], values[i].astype(np.complex128))
-    return found
+        part = loop.of(chosen)
+        many = max(1, _AT_ONCE // (part.A.shape[0] + part.tau.size + 1) ** 2)
+        for first in range(0, rows.size, many):
+            piece = rows[first : first + many]
+            matrices = closed(part, g[np.ix_(piece, chosen)])
+            values = np.linalg.eigvals(matrices) if matrices.size else np.zeros(matrices.shape[:2])
+            for i, row in enumerate(piece.tolist()):
+                yield row, matrices[i], _with_slow(matrices[i], values[i].astype(np.complex128))
+
+
+_AT_ONCE = 1_000_000  # numbers of matrices that are found at once
 
 
 def _with_slow(matrix: Floats, values: Complex) -> Complex:
@@ -281,8 +337,12 @@ def least_damped(matrix: Floats, values: Complex, accuracy: float = 1e-9) -> tup
     noise = 1e-15 * np.minimum(np.abs(matrix).max() / size, np.maximum(size / size.min(), _SPREAD))
     doubtful = np.flatnonzero(ratio - noise <= (ratio + noise).min())
     if np.any(noise[doubtful] > accuracy * np.abs(ratio[doubtful])):
-        doubtful = doubtful[np.argsort(ratio[doubtful])][:8]
-        found = np.array([polished(matrix, complex(found[i]))[0] for i in doubtful])
+        doubtful = doubtful[np.argsort(ratio[doubtful])]
+        chosen: list[int] = []
+        for i in doubtful.tolist():  # of equal parts of the network each has the same
+            if len(chosen) < 8 and not np.any(np.abs(found[chosen] - found[i]) <= 4.0 * noise[i] * size[i]):
+                chosen.append(i)
+        found = np.array([polished(matrix, complex(found[i]))[0] for i in chosen])
         ratio = -found.real / np.abs(found)
     best = int(ratio.argmin())
     damping = 0.0 if abs(ratio[best]) < ON_AXIS else float(ratio[best])

@@ -15,7 +15,7 @@ A table of steps in powers of 2^(1/4) keeps what depends on the step length alon
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from math import factorial
 
 import numpy as np
@@ -24,11 +24,14 @@ from numpy.typing import NDArray
 Floats = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 Indices = NDArray[np.intp]
+Singles = NDArray[np.float32]
 
 PER_OCTAVE = 4  # step lengths
 NODES = (0.25, 0.5, 0.75, 1.0)  # of a step, where values are exact
 _QUIET = 200_000  # multiplications in one product: common linear algebra libraries start threads above some 260 000
 _SMALL = 40  # unknowns
+_MANY = 100  # inputs
+_CARRIED = 12_000_000  # numbers in ``Steps.carried``: 48 MB
 _OCTAVES = 50  # from the shortest step to the window
 _SERIES = 18  # terms of phi_3 inside the unit circle: 1/21! is below rounding
 
@@ -103,7 +106,7 @@ def phi(a: Complex) -> tuple[Complex, Complex, Complex, Complex]:
 
 
 def step_weights(rate: Complex, length: Floats, theta: Floats) -> Complex:
-    """What makes z at ``theta`` (T,) of steps of ``length`` (J,) [s], shape (J, T, 6, R).
+    """What makes z at ``theta`` (T,) or (J, T) of steps of ``length`` (J,) [s], shape (J, T, 6, R).
 
     The six factors, in s or a ratio, belong to z at the start, the input at the start when it is linear, its slope, and
     to the values at the start, the middle and the end of an input that is quadratic over the whole step.
@@ -111,8 +114,8 @@ def step_weights(rate: Complex, length: Floats, theta: Floats) -> Complex:
     reach = (length[:, None] * theta)[:, :, None]
     p0, p1, p2, p3 = phi(rate * reach)
     once, twice = reach * p1, reach**2 * p2
-    first = reach * (theta[:, None] * p2)  # of (s/h), over the whole step h = reach / theta
-    second = 2.0 * reach * (theta[:, None] ** 2 * p3)  # of (s/h)^2
+    first = reach * (theta[..., None] * p2)  # of (s/h), over the whole step h = reach / theta
+    second = 2.0 * reach * (theta[..., None] ** 2 * p3)  # of (s/h)^2
     start = once - 3.0 * first + 2.0 * second
     middle = 4.0 * (first - second)
     return np.stack((p0, once, twice, start, middle, 2.0 * second - first), axis=2)
@@ -140,6 +143,8 @@ class Steps:
     """Tables over the step lengths ``length`` (J,) [s], rising; see :func:`make_steps`.
 
     With Q quantities that the nonlinear inputs (M) depend on and P outputs. ``known`` marks rows that have been made.
+    Where the inputs are ``many``, ``loop`` and ``spread`` are empty (see ``coupling``), and of ``defect`` the rows used
+    of late are kept only, in ``carried``.
     """
 
     length: Floats  # (J,) s
@@ -154,6 +159,8 @@ class Steps:
     direct: Floats  # (Q, M)
     show: Complex  # (P, R)
     show_direct: Floats  # (P, M)
+    many: bool = False
+    carried: dict[int, Singles] = field(default_factory=dict)
 
     def need(self, levels: Indices) -> None:
         """Make the rows ``levels`` (m,), indices of ``length``, that are not known yet."""
@@ -162,6 +169,9 @@ class Steps:
             return
         made = step_weights(self.rate, self.length[missing], np.array(NODES))
         self.weights[missing] = made
+        self.known[missing] = True
+        if self.many:
+            return
         count_q, count_m = self.direct.shape
         for row, w in zip(missing.tolist(), made, strict=True):
             pushed = (self.sense * w[node, source] for node in (1, 3) for source in (4, 5))
@@ -172,14 +182,31 @@ class Steps:
             self.loop[row] = loop.reshape(2 * count_q, 2 * count_m)
             self.spread[row] = np.abs(self.loop[row]).sum(axis=1)
             self.defect[row] = np.abs(found[4 * count_q :] + self.show_direct)
-        self.known[missing] = True
+
+    def errors(self, level: Indices, defect: Floats) -> Floats:
+        """Bounds (m, P) of the outputs' errors at the end of steps for errors ``defect`` (m, M) of the inputs."""
+        if not self.many:
+            return np.asarray(np.matmul(self.defect[level], defect[:, :, None])[:, :, 0], dtype=np.float64)
+        found = np.zeros((level.size, self.show_direct.shape[0]))
+        most = max(8, _CARRIED // max(1, self.show_direct.size))
+        for key in np.unique(level).tolist():
+            table = self.carried.pop(key, None)
+            if table is None:
+                if len(self.carried) >= most:
+                    self.carried.pop(next(iter(self.carried)))
+                pushed = self._driven(self.show * self.weights[key, 3, 1])
+                table = np.abs(pushed + self.show_direct).astype(np.float32)
+            self.carried[key] = table  # the latest last
+            rows = level == key
+            found[rows] = defect[rows].astype(np.float32) @ table.T
+        return found
 
     def _driven(self, rows: Complex) -> Floats:
         """Real part of rows (Y, R) times ``drive``, (Y, M), in pieces so small that no threads are started for them."""
         width = 2 * rows.shape[1]
         pairs = np.stack((rows.real, -rows.imag), axis=-1).reshape(rows.shape[0], width)
         drive = np.stack((self.drive.real, self.drive.imag), axis=1).reshape(width, self.drive.shape[1])
-        piece = max(1, _QUIET // max(1, drive.size))
+        piece = max(1, pairs.shape[0] if self.many else _QUIET // max(1, drive.size))
         parts = [pairs[k : k + piece] @ drive for k in range(0, pairs.shape[0], piece)]
         return np.concatenate(parts) if parts else np.zeros((0, self.drive.shape[1]))
 
@@ -203,12 +230,14 @@ def make_steps(
     length = longest * 2.0 ** ((np.arange(count) - (count - 1)) / PER_OCTAVE)
     outputs, inputs = show_direct.shape
     quantities = direct.shape[0]
+    many = inputs > _MANY
+    kept = 0 if many else count
     return Steps(
         length=length,
         weights=np.empty((count, len(NODES), 6, rate.size), dtype=np.complex128),
-        loop=np.empty((count, 2 * quantities, 2 * inputs)),
-        spread=np.empty((count, 2 * quantities)),
-        defect=np.empty((count, outputs, inputs)),
+        loop=np.empty((kept, 2 * quantities, 2 * inputs)),
+        spread=np.empty((kept, 2 * quantities)),
+        defect=np.empty((kept, outputs, inputs)),
         known=np.zeros(count, dtype=np.bool_),
         rate=rate,
         drive=drive,
@@ -216,4 +245,5 @@ def make_steps(
         direct=direct,
         show=show,
         show_direct=show_direct,
+        many=many,
     )

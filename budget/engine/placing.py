@@ -5,12 +5,13 @@ without ``rated_current`` nobody can say what it carries: converters already the
 and the headroom does not count it.
 
 Constraints are named by tuples: ("keep", converter), ("banned", converter, filter), ("apart", a, b),
-("together", a, b), ("most", filter or ""), and what the project itself demands: ("no rating", filter),
-("rating zero", filter).
+("together", a, b), ("most", filter or "", number), and what the project itself demands: ("no rating", filter),
+("rating zero", filter), ("not allocated", converter), ("converters", number).
 """
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -29,13 +30,33 @@ Name = tuple[str, ...]
 
 @dataclass(frozen=True, slots=True)
 class Constraints:
-    """What the user asks for, by ids. ``most``: so many converters per filter, for all or for some."""
+    """What the user asks for, by ids. ``most``: so many converters per filter, for all ("" in a pair) or for some."""
 
     keep: tuple[str, ...] = ()
     apart: tuple[tuple[str, str], ...] = ()
     together: tuple[tuple[str, str], ...] = ()
     banned: tuple[tuple[str, str], ...] = ()  # (converter, filter)
     most: int | tuple[tuple[str, int], ...] | None = None
+
+    def counts(self) -> tuple[tuple[str, int], ...]:
+        """``most`` as pairs of a filter's id, or "" for each filter, and a number of converters."""
+        return (("", self.most),) if isinstance(self.most, int) else self.most or ()
+
+
+def constraints_of(names: Iterable[Name]) -> Constraints:
+    """Constraints from their names, see the module. Raises ValueError for a name that is none of a user's."""
+    found: dict[str, list[Name]] = {"keep": [], "banned": [], "apart": [], "together": [], "most": []}
+    for code, *ids in names:
+        if code not in found or len(ids) != (1 if code == "keep" else 2):
+            raise ValueError(f"{(code, *ids)} names no constraint")
+        found[code].append(tuple(ids))
+    return Constraints(
+        keep=tuple(who for (who,) in found["keep"]),
+        apart=tuple((a, b) for a, b in found["apart"]),
+        together=tuple((a, b) for a, b in found["together"]),
+        banned=tuple((who, where) for who, where in found["banned"]),
+        most=tuple((where, int(number)) for where, number in found["most"]) or None,
+    )
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,12 +122,12 @@ def task_of(project: Project, constraints: Constraints) -> Task | tuple[Name, ..
         return clash
 
     most = np.full(len(filters), len(project.converters), dtype=np.intp)
-    given = constraints.most
-    if isinstance(given, int):
-        most[:] = given
-    for name, number in given if isinstance(given, tuple) else ():
-        most[filters[name]] = min(most[filters[name]], number)
-    clash = _counts(project, groups, allowed, most, forbidden, isinstance(given, int))
+    named: list[Name] = [("most", "", "")] * len(filters)  # the constraint that counts
+    for where, number in constraints.counts():
+        for f in range(len(filters)) if not where else (filters[where],):
+            if number < most[f]:
+                most[f], named[f] = number, ("most", where, str(number))
+    clash = _counts(project, groups, allowed, most, forbidden, named)
     if clash:
         return clash
     pairs = tuple(sorted({(min(of[index[a]], of[index[b]]), max(of[index[a]], of[index[b]]))
@@ -116,16 +137,15 @@ def task_of(project: Project, constraints: Constraints) -> Task | tuple[Name, ..
 
 
 def _known(project: Project, constraints: Constraints) -> None:
-    converters, filters = {c.id for c in project.converters}, {f.id for f in project.filters}
+    converters, filters = [c.id for c in project.converters], [f.id for f in project.filters]
     named = [*constraints.keep, *(x for pair in (*constraints.apart, *constraints.together) for x in pair)]
     named += [who for who, _ in constraints.banned]
     places = [where for _, where in constraints.banned]
-    if isinstance(constraints.most, tuple):
-        places += [where for where, _ in constraints.most]
+    places += [where for where, _ in constraints.counts() if where]
     for kind, ids, known in (("converter", named, converters), ("filter", places, filters)):
         for one in ids:
             if one not in known:
-                raise ValueError(f'there is no {kind} "{one}": name one of {", ".join(sorted(known)) or "none"}')
+                raise ValueError(f'there is no {kind} "{one}": name one of {", ".join(known) or "none"}')
 
 
 def _groups(
@@ -193,26 +213,27 @@ def _counts(
     allowed: Bools,
     most: Indices,
     forbidden: list[dict[int, Name]],
-    common: bool,
+    named: list[Name],
 ) -> tuple[Name, ...]:
     sizes = np.array([len(g) for g in groups], dtype=np.intp)
-    for f, part in enumerate(project.filters):
-        name = ("most", "" if common else part.id)
+    for f, name in enumerate(named):
         for g, size in enumerate(sizes.tolist()):
             if size > most[f] and allowed[g, f]:
                 allowed[g, f] = False
                 if not allowed[g].any():
                     why = sorted({n for k in groups[g] for n in forbidden[k].values()})
-                    ids = tuple(project.converters[k].id for k in groups[g])
-                    return (name, *(why or [("together", *ids)]))
+                    if not why and size > 1:
+                        why = [("together", *(project.converters[k].id for k in groups[g]))]
+                    crowded = dict.fromkeys(named[n] for n in np.flatnonzero(most < size).tolist())
+                    return (*crowded, *why)
         there = allowed[:, f] & (allowed.sum(axis=1) == 1)
         if int(sizes[there].sum()) > most[f]:
             why = sorted({n for g in np.flatnonzero(there) for k in groups[int(g)] for n in forbidden[k].values()})
             return (name, *why)
     usable = allowed.any(axis=0)
     if groups and int(most[usable].sum()) < len(project.converters):
-        return (("most", "" if common else project.filters[int(np.flatnonzero(usable)[most[usable].argmin()])].id),
-                ("converters", str(len(project.converters))))  # fmt: skip
+        counts = dict.fromkeys(named[f] for f in np.flatnonzero(usable).tolist())
+        return (*counts, ("converters", str(len(project.converters))))
     return ()
 
 

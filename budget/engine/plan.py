@@ -30,33 +30,31 @@ def meetings(lines: Lines) -> tuple[Meeting, ...]:
     first, last = lines.limit.points[0][0], lines.limit.points[-1][0]
     start, end = np.maximum(start, first), np.minimum(end, last)
     groups = [np.flatnonzero(lines.clock == k) for k in range(len(lines.clocks))]
+    groups = [group for group in groups if group.size]
+    owns = [(start[group], end[group]) for group in groups]
+    sorts = [(np.sort(s), np.sort(e)) for s, e in owns]
     found = []
-    for a, one in enumerate(groups):
+    for a, (one, (begin, stop)) in enumerate(zip(groups, owns, strict=True)):
         for b in range(a + 1, len(groups)):
-            two = groups[b]
-            if not one.size or not two.size:
-                continue
-            meeting = _meet(lines, start, end, one, two)
-            if meeting is not None:
-                found.append(meeting)
+            # Closed intervals that touch: for each of ``one``, those of ``two`` that start before its end.
+            starts, ends = sorts[b]
+            count = starts.searchsorted(stop, side="right") - ends.searchsorted(begin)
+            several = count > 0
+            if several.any():
+                found.append(
+                    _meeting(lines, start, end, int(one[several.argmax()]), groups[b], int(count[several].sum()))
+                )
     return tuple(found)
 
 
-def _meet(lines: Lines, start: np.ndarray, end: np.ndarray, one: np.ndarray, two: np.ndarray) -> Meeting | None:
-    """Pairs of closed intervals that touch: for each of ``one``, those of ``two`` that start before its end."""
-    starts, ends = np.sort(start[two]), np.sort(end[two])
-    began = np.searchsorted(starts, end[one], side="right")
-    over = np.searchsorted(ends, start[one], side="left")
-    count = began - over
-    if not (count > 0).any():
-        return None
-    i = int(one[np.flatnonzero(count > 0)[0]])
+def _meeting(lines: Lines, start: np.ndarray, end: np.ndarray, i: int, two: np.ndarray, count: int) -> Meeting:
+    """The lowest pair of two clocks: line ``i`` and the first of ``two`` that it touches."""
     touching = two[(start[two] <= end[i]) & (end[two] >= start[i])]
     j = int(touching[0])
     names = (lines.clocks[int(lines.clock[i])].name, lines.clocks[int(lines.clock[j])].name)
     low, high = max(start[i], start[j]), min(end[i], end[j])
     orders = (int(lines.order[i]), int(lines.order[j]))
-    return Meeting(names, orders, float(low), float(high), int(count[count > 0].sum()))
+    return Meeting(names, orders, float(low), float(high), count)
 
 
 @dataclass(frozen=True, slots=True)

@@ -217,9 +217,7 @@ def _without_one(given: Constraints) -> list[tuple[Name, Constraints]]:
         found.append((("together", *pair), replace(given, together=drop(given.together, k))))
     for k, pair in enumerate(given.banned):
         found.append((("banned", *pair), replace(given, banned=drop(given.banned, k))))
-    if isinstance(given.most, int):
-        found.append((("most", ""), replace(given, most=None)))
-    for k, (where, _) in enumerate(given.most if isinstance(given.most, tuple) else ()):
-        assert isinstance(given.most, tuple)
-        found.append((("most", where), replace(given, most=drop(given.most, k))))
+    counts = given.counts()
+    for k, (where, number) in enumerate(counts):
+        found.append((("most", where, str(number)), replace(given, most=drop(counts, k))))
     return found

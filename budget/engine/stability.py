@@ -8,14 +8,15 @@ Middlebrook's rule of design (IEEE IAS annual meeting, 1976): sufficient where i
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from budget.engine.cancel import CancelledError
 from budget.engine.checks import LEFT_OUT, NO_POINT, CheckRow
-from budget.engine.loop import Loop, least_damped, open_loop, spectra
+from budget.engine.loop import Loop, each_spectrum, least_damped, open_loop
 from budget.engine.margin import smallest_factors
 from budget.engine.model import LINES, Branch, Converter, Ladder, Project
 from budget.engine.operating import Operating
@@ -53,8 +54,22 @@ class Stability:
     peak_frequency: Floats  # (F,) Hz
 
 
-def stability(project: Project, operating: Operating, network: StateSpace | None = None) -> Stability:
-    """Everything of this module; ``network`` is the project's own ``state_space``, made here if not given."""
+def stability(
+    project: Project,
+    operating: Operating,
+    network: StateSpace | None = None,
+    cancelled: Callable[[], bool] | None = None,
+) -> Stability:
+    """Everything of this module; ``network`` is the project's own ``state_space``, made here if not given.
+
+    Raises :class:`CancelledError` when ``cancelled`` says so, which is asked now and then.
+    """
+
+    def ask() -> None:
+        if cancelled is not None and cancelled():
+            raise CancelledError
+
+    ask()
     network = state_space(project) if network is None else network
     loop = open_loop(project, network)
     solved = operating.solved
@@ -70,8 +85,11 @@ def stability(project: Project, operating: Operating, network: StateSpace | None
     different, which = np.unique(g, axis=0, return_inverse=True)
     which = which.reshape(-1)
     if corners.size:
-        least = np.array([least_damped(*found) for found in spectra(loop, different)])
-        factors = smallest_factors(loop, different)
+        least = np.full((len(different), 2), np.nan)
+        for row, matrix, values in each_spectrum(loop, different):
+            ask()
+            least[row] = least_damped(matrix, values)
+        factors = smallest_factors(loop, different, ask)
         with np.errstate(divide="ignore"):
             levels = 20.0 * np.log10(factors)
         damping[corners], frequency[corners] = least[which, 0], least[which, 1]

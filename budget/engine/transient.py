@@ -26,14 +26,17 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from budget.engine.cancel import CancelledError as CancelledError  # also found here
 from budget.engine.events import COUNTING, RUNNING, Logic, make_logic, waveform
 from budget.engine.integrator import TOLERANCE, Batch, Member, Outcome
 from budget.engine.model import Branch, Project
 from budget.engine.modes import Modes, modes
 from budget.engine.operating import Operating, loads, operating_points
 from budget.engine.statespace import StateSpace, state_space
+from budget.engine.waves import Values
 
 Floats = NDArray[np.float64]
+Indices = NDArray[np.intp]
 
 EVENTS = ("on-low", "on-high", "surge")
 STEPS = 20_000  # of one run, an event counting for four: some ten seconds
@@ -41,10 +44,6 @@ INFINITE, NO_POINT, NEAR_ON, NEAR_OFF = "infinite current", "no operating point"
 NOT_FINISHED, CHATTER, ASSUMED, NO_CAPACITOR = "not finished", "chatter", "turn_on assumed", "no input capacitor"
 _CONDITION = 1e7  # of the modes; above it the elements are set apart by 1e-6 of themselves
 _APART = 1e-6
-
-
-class CancelledError(Exception):
-    """The caller asked to stop; there is no result."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,15 +73,15 @@ class ConverterRun:
 class Wave:
     """Waveforms: bus current, filter currents [A], filter output voltages, terminal voltages [V], in project order.
 
-    Points are exact, not equidistant, and double where something jumps; from 6000 on they are thinned without losing
-    peaks.
+    Points are exact, not equidistant, and double where something jumps; from 6000 on (fewer in large projects, and then
+    in single precision) they are thinned without losing peaks.
     """
 
     time: Floats  # (K,) s
-    bus: Floats  # (K,) A
-    filters: Floats  # (K, F) A
-    outputs: Floats  # (K, F) V
-    terminals: Floats  # (K, N) V
+    bus: Values  # (K,) A
+    filters: Values  # (K, F) A
+    outputs: Values  # (K, F) V
+    terminals: Values  # (K, N) V
 
 
 @dataclass(frozen=True, slots=True)
@@ -151,7 +150,9 @@ def inrush(
     logic = make_logic(project, asked, space.converters)
     if any(e == "surge" for _, e in chosen) and operating is None:
         operating = operating_points(project)
-    members, places = [], []
+    members: list[Member] = []
+    places: dict[int, int] = {}
+    same: dict[tuple[bytes, ...], int] = {}  # cases that differ in names only run once
     for place, (case, event) in enumerate(chosen):
         currents, before = None, 0.0
         if event == "surge":
@@ -160,11 +161,17 @@ def inrush(
                 continue
             drawn = operating.current[case, 1, space.converters]
             currents, before = np.where(logic.enabled[case], drawn, 0.0), project.bus.nominal
-        members.append(Member(case, waveform(project.bus, event, project.rules.inrush_window), currents, before))
-        places.append(place)
-    batch = Batch(space, modal, logic, members, project.bus.nominal, limit, tolerance) if members else None
-    outcomes = batch.run(tick) if batch else []
-    by_place = dict(zip(places, zip(members, outcomes, strict=True), strict=True))
+        drawn_by = (logic.power[case], logic.charging[case], logic.enabled[case], currents)
+        key = (event.encode(), *(b"" if part is None else part.tobytes() for part in drawn_by))
+        places[place] = same.setdefault(key, len(members))
+        if places[place] == len(members):
+            members.append(Member(case, waveform(project.bus, event, project.rules.inrush_window), currents, before))
+    outcomes: list[Outcome] = []
+    if members:
+        groups = _groups(project, space)
+        batch = Batch(space, modal, logic, members, project.bus.nominal, limit, tolerance, groups)
+        outcomes = batch.run(tick)
+    by_place = {place: (members[k], outcomes[k]) for place, k in places.items()}
     runs = [
         _run(project, space, logic, case, event, *by_place.get(place, (None, None)))
         for place, (case, event) in enumerate(chosen)
@@ -172,6 +179,15 @@ def inrush(
     if progress is not None:
         progress(1.0)
     return Inrush(tuple(runs), tuple(f.id for f in project.filters if f.attenuation))
+
+
+def _groups(project: Project, space: StateSpace) -> Indices:
+    """The filter (an index of the project) of each load and each saturating inductor, as the inputs of the network."""
+    index = {part.id: k for k, part in enumerate(project.filters)}
+    home = {c.id: index.get(c.filter, -1) for c in project.converters}
+    loads = [home[project.converters[k].id] for k in space.converters.tolist()]
+    bent = [(index if kind == "filter" else home)[str(owner)] for kind, owner, *_ in space.saturating]
+    return np.array([*loads, *bent], dtype=np.intp)
 
 
 def network(project: Project) -> tuple[StateSpace, Modes]:

@@ -21,6 +21,7 @@ from budget.project.read import Reading, read_table, rising
 _OWN = frozenset(("id", "part", "filter"))  # what makes a row one particular row; no shelf part lends it
 _LADDERS = ("dm", "cm", "attenuation", "input")  # a row without one of these that it should have is another row
 _CM_SOURCE = ("converter", "cm")  # has the name of a ladder, and is none
+MAX_PROBLEMS = 1_000  # of each sort: nobody reads more, and a hostile file could ask for a hundred thousand
 _FROM_NEWER = "was found, of a newer program; this one reads up to format"
 
 
@@ -88,8 +89,17 @@ class _Build:
         self.used: dict[_Slot, _Entry] = {}
         self.problems: list[Problem] = []
         self.left_out: list[str] = []
+        self.told = {True: 0, False: 0}  # errors and others
 
     def note(self, path: Path, text: str, *, error: bool = True, source: str = "") -> None:
+        self.told[error] += 1
+        if self.told[error] == MAX_PROBLEMS:
+            what = "errors" if error else "remarks"
+            self.problems.append(
+                Problem(("format",), f"there are more than {MAX_PROBLEMS} {what}; the first are told.", error)
+            )
+        if self.told[error] >= MAX_PROBLEMS:
+            return
         owner = Document(_shelf_data(self.shelves, source)) if source else self.document
         self.problems.append(Problem(path, text, error, source, place(owner, path)))
 
@@ -326,9 +336,9 @@ class _Build:
     def emission_names(self, rules: model.Rules, limits: list[tuple[int, Any]]) -> model.Rules:
         """The rules with only such limit sets as there are, each once."""
         known = (*schema.LIMIT_SETS, *(li.name for _, li in limits if li))
+        names = ", ".join(printable(n) for n in known[:20])
         for index, name in enumerate(rules.emissions):
             if name not in known:
-                names = ", ".join(printable(n) for n in known[:20])
                 self.note(("rules", "emissions"), f"item {index + 1}, {found(name)}, is no limit set; known: {names}.")
         for index, li in limits:
             if li and li.name in schema.LIMIT_SETS:

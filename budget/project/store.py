@@ -8,23 +8,20 @@ from __future__ import annotations
 
 import contextlib
 import hashlib
-import itertools
 import os
-import re
 import stat
 import tempfile
-import tomllib
 from dataclasses import dataclass
 from pathlib import Path as FilePath
 
-from budget.project import toml_text
+from budget.project import permit, toml_load, toml_text
 from budget.project.build import Shelf
 from budget.project.document import Document, Tree, from_data
 from budget.project.problems import Problem, ProjectError, found, printable
 
-MAX_BYTES = 2_000_000  # a project of 200 converters has a tenth of this
+MAX_BYTES = 1_000_000  # of a project with all its shelf files; one of 200 converters has a quarter of this
 MAX_SHELVES = 50
-MAX_FAULTS = 20  # of the TOML syntax, told at once
+MAX_NAMES = 200  # of shelf files, those that are named twice or do not exist included
 
 
 class ChangedOnDiskError(ProjectError):
@@ -67,16 +64,22 @@ def load(path: FilePath) -> Loaded:
 
 def parse(text: str, folder: FilePath | None, name: str, mark: Fingerprint | None = None) -> Loaded:
     """A document from ``text``; ``folder`` is where its shelf files are looked for (None: nowhere)."""
-    data = _parse_toml(text, name)
+    if len(text) > MAX_BYTES:
+        raise ProjectError(_too_large(name, len(text)))
+    data = toml_load.load(text, _shown(name))
     problems: list[Problem] = []
-    shelves = _shelves(data, folder, name, problems) if folder is not None else ()
+    shelves = _shelves(data, folder, name, len(text), problems) if folder is not None else ()
     return Loaded(from_data(data, text), shelves, tuple(problems), mark)
 
 
 def read_shelves(data: Tree, path: FilePath) -> tuple[tuple[Shelf, ...], tuple[Problem, ...]]:
     """The shelf files that ``data``, the project at ``path``, names now, and what is wrong with them."""
     problems: list[Problem] = []
-    return _shelves(data, path.parent, path.name, problems), tuple(problems)
+    try:
+        size = os.path.getsize(path)
+    except (OSError, ValueError):  # it has no file at present
+        size = 0
+    return _shelves(data, path.parent, path.name, size, problems), tuple(problems)
 
 
 def fingerprint(path: FilePath) -> Fingerprint | None:
@@ -131,7 +134,7 @@ def render(document: Document) -> toml_text.Rendered:
             rendered = toml_text.render(document.text, document.data, document.origin)
         else:
             rendered = toml_text.Rendered(toml_text.dump(document.data), ())
-        same = toml_text.same(tomllib.loads(rendered.text.removeprefix("\ufeff")), document.data)
+        same = toml_text.same(toml_load.loads(rendered.text.removeprefix("\ufeff")), document.data)
     except (ValueError, RecursionError) as error:  # a number of thousands of digits, brackets nested too deep
         raise ProjectError(f"the text to be saved would not read back ({error}); nothing was written.") from error
     if not same:
@@ -147,7 +150,7 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
         target = FilePath(os.path.realpath(path))
         old = os.stat(target) if target.exists() else None
         if old is not None and not stat.S_ISREG(old.st_mode):
-            raise ProjectError(f"{_shown(path)} is not an ordinary file; nothing was written.")
+            raise NotWrittenError(f"{_shown(path)} is not an ordinary file; nothing was written.")
         handle, temporary = tempfile.mkstemp(prefix=f".{target.name}.", suffix=".new", dir=target.parent)
         with os.fdopen(handle, "wb") as out:
             out.write(data)
@@ -161,12 +164,13 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
                 os.umask(umask)
                 os.fchmod(out.fileno(), 0o666 & ~umask)
             os.fsync(out.fileno())
+            written = os.fstat(out.fileno())  # now: behind the new name another file may stand a moment later
         os.replace(temporary, target)
         temporary = ""
         _sync_folder(target.parent)
-        written = os.stat(target)
     except (OSError, ValueError) as error:
-        raise ProjectError(f"{_shown(path)} could not be written: {_reason(error)}. Nothing was changed.") from error
+        why = f"{_shown(path)} could not be written: {_reason(error)}. Nothing was changed."
+        raise NotWrittenError(why) from error
     finally:
         if temporary:
             with contextlib.suppress(OSError):
@@ -174,12 +178,38 @@ def write_text(path: FilePath, text: str) -> Fingerprint:
     return Fingerprint(written.st_mtime_ns, written.st_size, written.st_ino, hashlib.sha256(data).hexdigest())
 
 
+def same_place(one: FilePath, two: FilePath) -> bool:
+    """Whether two paths lead to the same place, links followed; False where that cannot be told."""
+    try:
+        return os.path.realpath(one) == os.path.realpath(two)
+    except (OSError, ValueError):  # the folder that a relative path starts from is gone
+        return False
+
+
 def free_name(path: FilePath, word: str) -> FilePath:
     """A name beside ``path`` that is not taken: bus.toml -> bus.mine-1.toml."""
     number = 1
-    while (new := path.with_name(f"{path.stem}.{word}-{number}{path.suffix}")).exists():
+    while os.path.lexists(new := path.with_name(f"{path.stem}.{word}-{number}{path.suffix}")):
         number += 1
     return new
+
+
+def put_copy(source: FilePath, target: FilePath) -> None:
+    """Put the present content of a file, whatever it is, under a new name; raises ProjectError, a sentence."""
+    raw, _ = _read_bytes(source)
+    begun = False
+    try:
+        handle = os.open(target, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
+        begun = True
+        with os.fdopen(handle, "wb") as out:
+            out.write(raw)
+            out.flush()
+            os.fsync(out.fileno())
+    except OSError as error:
+        if begun:
+            with contextlib.suppress(OSError):
+                os.unlink(target)
+        raise NotWrittenError(f"{_shown(target)} could not be written: {_reason(error)}.") from error
 
 
 def copy_shelves(names: list[str], source: FilePath, target: FilePath) -> None:
@@ -189,10 +219,18 @@ def copy_shelves(names: list[str], source: FilePath, target: FilePath) -> None:
     already, before anything has been written.
     """
     wanted: list[tuple[FilePath, str]] = []
+    into = FilePath(os.path.realpath(target))
     for name in names:
         old, new = source / name, target / name
         if not os.path.exists(old):
             continue
+        if os.path.realpath(old) == os.path.realpath(new):  # an absolute name; it means the same file from anywhere
+            continue
+        if not is_below(name) or not FilePath(os.path.realpath(new)).is_relative_to(into):
+            raise ProjectError(
+                f"the shelf file {_shown(name)} cannot be brought along: it would be written outside "
+                f"{_shown(target)}. Copy it yourself and name it in shelf_files; nothing was written."
+            )
         raw = _read_bytes(old)[0]
         if not os.path.lexists(new):
             wanted.append((new, _decode(raw, name)))
@@ -206,19 +244,25 @@ def copy_shelves(names: list[str], source: FilePath, target: FilePath) -> None:
         write_text(new, text)
 
 
+class NotWrittenError(ProjectError):
+    """The system did not let the file be written."""
+
+
 class NoFileError(ProjectError):
     """There is no such file."""
 
 
-def _read_bytes(path: FilePath) -> tuple[bytes, Fingerprint]:
+def _read_bytes(path: FilePath, most: int = MAX_BYTES) -> tuple[bytes, Fingerprint]:
     try:
+        if not stat.S_ISREG((now := os.stat(path)).st_mode) and not stat.S_ISDIR(now.st_mode):
+            raise ProjectError(f"{_shown(path)} is not an ordinary file; a project file was expected.")  # never opened
         with open(path, "rb", opener=_open_without_waiting) as handle:
             info = os.fstat(handle.fileno())
             if not stat.S_ISREG(info.st_mode):
                 raise ProjectError(f"{_shown(path)} is not an ordinary file; a project file was expected.")
-            if info.st_size > MAX_BYTES:
+            if info.st_size > most:
                 raise ProjectError(_too_large(path, info.st_size))
-            raw = handle.read(MAX_BYTES + 1)
+            raw = handle.read(most + 1) or b""  # None where the system has files that wait for what is not there yet
     except FileNotFoundError as error:
         name = _shown(path)
         raise NoFileError(
@@ -228,7 +272,7 @@ def _read_bytes(path: FilePath) -> tuple[bytes, Fingerprint]:
         raise ProjectError(f"{_shown(path)} is a folder; a project file was expected.") from error
     except (OSError, ValueError) as error:
         raise ProjectError(f"{_shown(path)} could not be read: {_reason(error)}.") from error
-    if len(raw) > MAX_BYTES:
+    if len(raw) > most:
         raise ProjectError(_too_large(path, len(raw)))
     return raw, Fingerprint(info.st_mtime_ns, info.st_size, info.st_ino, hashlib.sha256(raw).hexdigest())
 
@@ -241,8 +285,11 @@ def _shown(path: FilePath | str) -> str:
     return printable(str(path), 200)
 
 
-def _too_large(path: FilePath, size: int) -> str:
-    return f"{_shown(path)} has {size / 1e6:.1f} MB; a project file has at most {MAX_BYTES / 1e6:.0f} MB."
+def _too_large(path: FilePath | str, size: int) -> str:
+    most = f"{MAX_BYTES / 1e6:.0f} MB"
+    return (
+        f"{_shown(path)} has {size / 1e6:.1f} MB; a project file has at most {most}, all its shelf files together too."
+    )
 
 
 def _reason(error: BaseException) -> str:
@@ -259,71 +306,43 @@ def _decode(raw: bytes, name: str) -> str:
         ) from error
 
 
-def _parse_toml(text: str, name: str) -> dict[str, object]:
-    body = text.removeprefix("\ufeff")
-    try:
-        return tomllib.loads(body)
-    except tomllib.TOMLDecodeError as error:
-        faults = [str(error), *_further_faults(body, str(error))]
-        lines = "\n".join(f"{_shown(name)}: {printable(fault, 200)}." for fault in faults[:MAX_FAULTS])
-        raise ProjectError(f"{lines}\n{_shown(name)}: valid TOML was expected.") from error
-    except (RecursionError, ValueError) as error:
-        raise ProjectError(
-            f"{_shown(name)}: brackets nested too deep or a number too long; a project file was expected."
-        ) from error
+def _shelves(data: Tree, folder: FilePath, own: str, size: int, problems: list[Problem]) -> tuple[Shelf, ...]:
+    """Every shelf file that the project ``own`` of ``size`` bytes names, and those these name.
 
-
-_HEADER = re.compile(r"^\s*\[{1,2}[A-Za-z0-9_.\"' -]+\]{1,2}\s*(#.*)?$")
-_AT = re.compile(r"\(at line (\d+), column (\d+)\)|\(at end of document\)")
-
-
-def _further_faults(text: str, first: str) -> list[str]:
-    """Syntax faults after the first one, found by reading each table of the file by itself."""
-    lines = text.splitlines(keepends=True)
-    starts = [0, *(i for i, line in enumerate(lines) if _HEADER.match(line)), len(lines)]
-    told = {m.group(0) for m in _AT.finditer(first)}
-    faults: list[str] = []
-    for start, end in itertools.pairwise(starts):
-        try:
-            tomllib.loads("".join(lines[start:end]))
-        except tomllib.TOMLDecodeError as error:
-            where = _AT.search(str(error))
-            at = f"(at line {end}, at the end of its table)"
-            if where and where.group(1):
-                at = f"(at line {int(where.group(1)) + start}, column {where.group(2)})"
-            if at not in told and not (end == len(lines) and "(at end of document)" in told):
-                faults.append(_AT.sub(at, str(error)))
-        except (RecursionError, ValueError):
-            break
-        if len(faults) >= MAX_FAULTS:
-            break
-    return faults
-
-
-def _shelves(data: dict[str, object], folder: FilePath, own: str, problems: list[Problem]) -> tuple[Shelf, ...]:
-    """Every shelf file that the project names, and those these name; faults become problems of ``shelf_files``."""
+    Faults become problems of ``shelf_files``.
+    """
     root = FilePath(os.path.realpath(folder))
     shelves: dict[FilePath, Shelf] = {}
+    named = 0  # names looked at, of all files: each costs a look at the disk
+    left = MAX_BYTES - size
 
     def take(names: object, base: str, chain: tuple[FilePath, ...], source: str) -> None:
+        nonlocal named
         if not isinstance(names, list):
             return
         for name in names:
             if not isinstance(name, str):
                 continue
-            for fault in take_one(name, base, chain).splitlines():
-                problems.append(Problem(("shelf_files",), fault, source=source, place="shelf_files"))
+            named += 1
+            fault = f"there are more than {MAX_NAMES} names of shelf files; the others are not read."
+            for line in (take_one(name, base, chain) if named <= MAX_NAMES else fault).splitlines():
+                problems.append(Problem(("shelf_files",), line, source=source, place="shelf_files"))
+            if named > MAX_NAMES:
+                return
 
     def take_one(name: str, base: str, chain: tuple[FilePath, ...]) -> str:
+        nonlocal left
         shown = os.path.normpath(os.path.join(base, name))
         try:
             path = FilePath(os.path.realpath(root / base / name))
         except (OSError, ValueError):
             return f"{found(name)} is not a file name."
-        if os.path.isabs(name) or shown.split(os.sep)[0] == "..":
-            return f"{found(name)} lies outside the project's folder; a path from this file down was expected."
-        if not path.is_relative_to(root):
-            return f"{found(name)} lies outside the project's folder; only files below it may be read."
+        inside = is_below(shown) and path.is_relative_to(root)
+        if not inside and not permit.allowed(path):
+            return (
+                f"{found(name)} lies outside the project's folder, and only shelf files below it are read; "
+                "'--shelf-from FOLDER' on the command line allows those below another folder."
+            )
         if path in chain:
             return f"{found(name)} includes itself, round in a circle; each shelf file may be named once on the way."
         if path in shelves:
@@ -331,11 +350,13 @@ def _shelves(data: dict[str, object], folder: FilePath, own: str, problems: list
         if len(shelves) >= MAX_SHELVES:
             return f"{found(name)} is one too many; at most {MAX_SHELVES} shelf files are read."
         try:
-            inner = _parse_toml(_decode(_read_bytes(path)[0], shown), shown)
+            raw, _ = _read_bytes(path, left)
+            inner = toml_load.load(_decode(raw, shown), _shown(shown))
         except NoFileError:
             return f"{found(name)} does not exist; a file of shelf parts was expected."
         except ProjectError as error:
             return str(error)
+        left -= len(raw)
         shelves[path] = Shelf(shown, inner)
         for key in inner:
             if key not in ("format", "shelf", "shelf_files", "note"):
@@ -346,6 +367,11 @@ def _shelves(data: dict[str, object], folder: FilePath, own: str, problems: list
 
     take(data.get("shelf_files"), "", (FilePath(os.path.realpath(root / own)),), "")
     return tuple(shelves.values())
+
+
+def is_below(name: str) -> bool:
+    """Whether the name of a shelf file leads from the project's folder down, as far as the name tells."""
+    return not os.path.isabs(name) and os.path.normpath(name).split(os.sep)[0] != os.pardir
 
 
 def _sync_folder(folder: FilePath) -> None:

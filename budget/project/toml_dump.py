@@ -20,6 +20,8 @@ _SCALARS: tuple[type, ...] = (bool, int, float, str, datetime, date, time)  # a 
 def same(a: Any, b: Any) -> bool:
     """Deep equality of TOML values that tells types apart: 1, 1.0 and true differ; nan equals nan; the order of keys
     does not matter."""
+    if a is b and a is not None:
+        return True
     if isinstance(a, dict) and isinstance(b, dict):
         return a.keys() == b.keys() and all(same(a[key], b[key]) for key in a)
     if isinstance(a, list | tuple) and isinstance(b, list | tuple):

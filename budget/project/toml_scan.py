@@ -9,6 +9,7 @@ from __future__ import annotations
 import re
 import tomllib
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Literal
 
 Path = tuple[str, ...]
@@ -29,14 +30,23 @@ class Item:
     comma: int | None
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Value:
-    """The span of a value, with the items inside it for inline arrays and tables."""
+    """The span of a value in ``text``."""
 
     kind: Literal["scalar", "array", "table"]
     start: int
     end: int
-    items: tuple[Item, ...] = ()
+    text: str
+
+    @cached_property
+    def items(self) -> tuple[Item, ...]:
+        """The items of an inline array or table, looked for when somebody asks: most values stay as they are."""
+        if self.kind == "scalar":
+            return ()
+        reader = _Reader(self.text)
+        reader.at = self.start + 1
+        return tuple(reader.array() if self.kind == "array" else reader.table())
 
 
 @dataclass(frozen=True, slots=True)
@@ -95,6 +105,8 @@ _STRING = re.compile(
     r'"""(?:\\.|[^\\])*?"""(?:"{0,2})' r"|'''.*?'''(?:'{0,2})" r'|"(?:\\.|[^"\\\n])*"' r"|'[^'\n]*'",
     re.DOTALL,
 )
+# What stands in an inline array or table: text that is none of what follows, comments, strings, and brackets.
+_INSIDE = re.compile(rf"[^\[\]{{}}#\"']+|#[^\r\n]*|{_STRING.pattern}|[\[\]{{}}]", re.DOTALL)
 _ATOM = re.compile(r"\d{4}-\d\d-\d\d[Tt ]\d\d:\d\d:\d\d[^\s,\]}#]*|[^\s,\[\]{}#=\"']+")
 
 
@@ -153,22 +165,35 @@ class _Reader:
 
     def value(self) -> Value:
         start = self.at
-        if self.peek("["):
-            return self.array(start)
-        if self.peek("{"):
-            return self.table(start)
+        if self.peek("[") or self.peek("{"):
+            kind: Literal["array", "table"] = "array" if self.peek("[") else "table"
+            self.skip()
+            return Value(kind, start, self.at, self.text)
         self.take(_STRING if self.peek('"') or self.peek("'") else _ATOM)
-        return Value("scalar", start, self.at)
+        return Value("scalar", start, self.at, self.text)
 
-    def array(self, start: int) -> Value:
+    def skip(self) -> None:
+        """Go behind the closing bracket of an array or table."""
+        depth = 0
+        while True:
+            token = self.take(_INSIDE)
+            if token in ("[", "{"):
+                depth += 1
+            elif token in ("]", "}"):
+                depth -= 1
+                if not depth:
+                    return
+            elif token[0] == "#":
+                self.comments.append((self.at - len(token), self.at))
+
+    def array(self) -> list[Item]:
+        """The items from behind the opening bracket on."""
         items: list[Item] = []
-        self.at += 1
         self.gap()
         while not self.peek("]"):
             item = self.at
             items.append(Item((), item, self.value(), self.comma("]")))
-        self.at += 1
-        return Value("array", start, self.at, tuple(items))
+        return items
 
     def comma(self, close: str) -> int | None:
         """Go on to the next item or the closing bracket."""
@@ -180,10 +205,10 @@ class _Reader:
         self.gap()
         return at
 
-    def table(self, start: int) -> Value:
+    def table(self) -> list[Item]:
+        """The items from behind the opening bracket on."""
         # Later editions of TOML allow line ends, comments and a last comma in here; reading them costs nothing.
         items: list[Item] = []
-        self.at += 1
         self.gap()
         while not self.peek("}"):
             key = self.at
@@ -191,8 +216,7 @@ class _Reader:
             self.expect("=")
             self.take(_SPACE)
             items.append(Item(path, key, self.value(), self.comma("}")))
-        self.at += 1
-        return Value("table", start, self.at, tuple(items))
+        return items
 
     def statement(self) -> _Statement:
         start = self.at
@@ -227,13 +251,14 @@ def scan(text: str) -> Scan:
     lines: list[_Statement] = []
     while reader.at < len(text):
         lines.append(reader.statement())
+    blank = next((i for i, line in enumerate(lines) if line.kind != "blank"), len(lines))
     heads = [i for i, line in enumerate(lines) if line.kind == "header"]
-    firsts = [_first_of_header(lines, i) for i in heads]
+    firsts = [_first_of_header(lines, i, blank) for i in heads]
     ends = [*firsts, len(lines)]
-    blocks = [_preamble(lines, ends[0])]
+    blocks = [_preamble(lines, ends[0], blank)]
     for head, first, end in zip(heads, firsts, ends[1:], strict=True):
         line = lines[head]
-        inside = _entries(lines, head + 1, end)
+        inside = _entries(lines, head + 1, end, blank)
         blocks.append(Block(line.path, line.array, lines[first].start, line.end, _end(lines, head, end), inside))
     return Scan(tuple(blocks), tuple(reader.comments))
 
@@ -244,29 +269,25 @@ def _comments_above(lines: list[_Statement], i: int) -> int:
     return i
 
 
-def _at_top(lines: list[_Statement], i: int) -> bool:
-    return all(line.kind == "blank" for line in lines[:i])
-
-
-def _first_of_header(lines: list[_Statement], head: int) -> int:
+def _first_of_header(lines: list[_Statement], head: int, blank: int) -> int:
     """The first line that belongs to a header: comments right above it, or one blank line away from it unless they
     are the heading of the file or touch what stands before them."""
     first = _comments_above(lines, head)
     if first == head and head > 1 and lines[head - 1].kind == "blank":
         above = _comments_above(lines, head - 1)
-        if above < head - 1 and not _at_top(lines, above) and lines[above - 1].kind == "blank":
+        if above < head - 1 and above > blank and lines[above - 1].kind == "blank":
             return above
     return first
 
 
-def _entries(lines: list[_Statement], begin: int, end: int) -> tuple[Entry, ...]:
+def _entries(lines: list[_Statement], begin: int, end: int, blank: int) -> tuple[Entry, ...]:
     found: list[Entry] = []
     for i in range(begin, end):
         line = lines[i]
         if line.value is None:
             continue
         first = max(begin, _comments_above(lines, i))
-        if _at_top(lines, first):  # the heading of the file is not a remark on its first key
+        if first <= blank:  # the heading of the file is not a remark on its first key
             first = i
         found.append(Entry(line.path, lines[first].start, line.start, line.key, line.value, line.end))
     return tuple(found)
@@ -279,8 +300,8 @@ def _end(lines: list[_Statement], begin: int, end: int) -> int:
     return lines[last].end
 
 
-def _preamble(lines: list[_Statement], end: int) -> Block:
-    entries = _entries(lines, 0, end)
+def _preamble(lines: list[_Statement], end: int, blank: int) -> Block:
+    entries = _entries(lines, 0, end, blank)
     if entries:
         return Block((), False, 0, 0, _end(lines, 0, end), entries)
     last = max((line.end for line in lines[:end] if line.kind == "comment"), default=0)

@@ -8,13 +8,14 @@ is written anew with all comments kept at its end.
 from __future__ import annotations
 
 import re
-import tomllib
+from bisect import bisect_left
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any
 
+from budget.project import toml_load
 from budget.project.toml_dump import block_texts, dump, entry_text, has_own_block, is_rows, path_text, row_text, same
 from budget.project.toml_scan import Block, Entry, Path, ScanError, scan
 from budget.project.toml_value import Edit, ValueEditor, align, apply
@@ -50,7 +51,7 @@ def render(old_text: str, new: dict[str, Any], origin: Mapping[str, tuple[int | 
     # Whatever surprises this module, the user's values must reach the file: any error leads to the fallback.
     try:
         done = _render(text, new, origin, line_end)
-        if same(tomllib.loads(done.text), new):
+        if same(toml_load.loads(done.text), new):
             return Rendered(mark + done.text, done.notes)
     except Exception:
         pass
@@ -64,7 +65,7 @@ def render(old_text: str, new: dict[str, Any], origin: Mapping[str, tuple[int | 
 def _render(text: str, new: dict[str, Any], origin: Mapping[str, tuple[int | None, ...]], line_end: str) -> Rendered:
     closed = text if text.endswith("\n") or not text else text + line_end
     work = _Surgery(closed, line_end)
-    work.table(work.root, tomllib.loads(text), new, _TOP, origin)
+    work.table(work.root, toml_load.loads(text), new, _TOP, origin)
     out = work.text()
     missing = Counter(work.comments_in(0, len(closed)))
     missing.subtract(_all_comments(out))
@@ -222,7 +223,14 @@ class _Surgery:
             self.notes.append(f"The {noun} of {label} {verb} kept at the end of the file.")
 
     def comments_in(self, start: int, end: int) -> list[str]:
-        return [self.source[a:b].rstrip() for a, b in self.comments if start <= a < end]
+        first, last = (bisect_left(self.comments, (at, 0)) for at in (start, end))
+        return [self.source[a:b].rstrip() for a, b in self.comments[first:last]]
+
+    def in_order(self, parts: list[_Part]) -> list[_Part]:
+        if len(parts) < 2:
+            return parts
+        place = {id(part): k for k, part in enumerate(self.parts)}
+        return sorted(parts, key=lambda part: place[id(part)])
 
     # -- tables
 
@@ -359,13 +367,13 @@ class _Surgery:
 
     def cut_node(self, node: _Node) -> list[str]:
         comments: list[str] = []
-        parts = sorted(node.parts(), key=self.parts.index)
+        parts = self.in_order(node.parts())
         for part in parts:
             part.gone = True
             if part.block:
                 comments += self.comments_in(part.block.lead, part.block.end)
         for part, after in pairwise(parts):
-            if self.parts.index(after) == self.parts.index(part) + 1:
+            if self.parts[self.parts.index(part) + 1] is after:
                 comments += _remarks(part.gap)
                 part.gap = ""
         for leaf in node.leaves():
@@ -385,15 +393,20 @@ class _Surgery:
     ) -> None:
         """Remove, move, add and change `[[name]]` blocks; `order` gives the old index of each new row."""
         sources: list[int | None] = []
+        taken: set[int] = set()
         for k in range(len(new)):
             i = order[k] if k < len(order) else None
-            sources.append(None if i is None or not 0 <= i < len(nodes) or i in sources else i)
+            sources.append(None if i is None or not 0 <= i < len(nodes) or i in taken else i)
+            taken.update(() if i is None else (i,))
         left = [i for i in sources if i is not None]
-        if sources != list(range(len(nodes))):
-            self.gather(nodes)
+        if sources == list(range(len(nodes))):
+            for i, row in enumerate(new):
+                self.table(nodes[i], old[i], row, _row_name(name, old[i], i))
+            return
+        self.gather(nodes)
         anchor = nodes[0].part
         for i in range(len(nodes)):
-            if i not in left:
+            if i not in taken:
                 self.remove(nodes[i], _row_name(name, old[i], i))
         if left != sorted(left):
             self.move([nodes[i] for i in left])
@@ -421,25 +434,29 @@ class _Surgery:
 
     def run(self, node: _Node) -> list[_Part]:
         """The parts of a row that stand together with its header."""
-        own = node.parts()
-        start = end = self.parts.index(own[0])
-        while end < len(self.parts) and self.parts[end] in own:
+        parts = node.parts()
+        own = set(map(id, parts))
+        start = end = self.parts.index(parts[0])
+        while end < len(self.parts) and id(self.parts[end]) in own:
             end += 1
         return self.parts[start:end]
 
     def gather(self, nodes: list[_Node]) -> None:
         """Bring sub-blocks that stand apart from their rows to them, so that rows can be moved."""
         for node in nodes:
-            for part in sorted(node.parts(), key=self.parts.index):
-                run = self.run(node)
-                if part in run:
+            run = self.run(node)
+            inside = set(map(id, run))
+            last = run[-1]
+            for part in self.in_order(node.parts()):
+                if id(part) in inside:
                     continue
                 at = self.parts.index(part)
                 if _remarks(part.gap):
                     self.parts[at - 1].gap += part.gap
                 del self.parts[at]
-                part.gap, run[-1].gap = run[-1].gap, self.line_end
-                self.parts.insert(self.parts.index(run[-1]) + 1, part)
+                part.gap, last.gap = last.gap, self.line_end
+                self.parts.insert(self.parts.index(last) + 1, part)
+                last = part
 
     def move(self, nodes: list[_Node]) -> None:
         """Put rows, in the order given, into the places that they occupy together."""

@@ -135,8 +135,8 @@ class ValueEditor:
 
     def remove_items(self, value: Value, gone: set[int]) -> None:
         items = value.items
-        for _, group in groupby(sorted(gone), key=lambda i: i - sum(j < i for j in gone)):
-            run = list(group)
+        for _, group in groupby(enumerate(sorted(gone)), key=lambda pair: pair[1] - pair[0]):
+            run = [i for _, i in group]
             first, last = run[0], run[-1]
             until = self.end_of_line(value, last)
             if value.kind == "array" and until is not None and self.begins_line(items[first]):

@@ -91,13 +91,13 @@ def sweep_csv(found: Sweep) -> str:
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
     a, b = (_heading(cell.text, cell.spec.kind) for cell in (found.cell_a, found.cell_b))
-    writer.writerow((a, b, "status", "margin", "check", "subject", "case", "line", "note"))
+    writer.writerow(words.cells((a, b, "status", "margin", "check", "subject", "case", "line", "note")))
     for value_a, row in zip(found.values_a, found.spots, strict=True):
         for value_b, s in zip(found.values_b, row, strict=True):
             margin = _finite(s.margin)
             shown = "" if margin is None else f"{margin:.9g}"
-            told = (s.status or "none", shown, s.check, s.subject, s.case, s.line, s.fault)
-            writer.writerow((f"{value_a:.9g}", f"{value_b:.9g}", *map(words.clean, told)))
+            told = words.cells((s.check, s.subject, s.case, s.line, s.fault))
+            writer.writerow((f"{value_a:.9g}", f"{value_b:.9g}", s.status or "none", shown, *told))
     return out.getvalue()
 
 
@@ -114,6 +114,7 @@ def sweep_json(found: Sweep) -> dict[str, Any]:
         "status": [[s.status for s in row] for row in found.spots],
         "checks": [[f"{s.subject} {s.check}".strip() for s in row] for row in found.spots],
         "boundary": [list(point) for point in found.boundary],
+        "failing": [tables.check_row(row) for row in found.failing],
     }
 
 

@@ -354,5 +354,5 @@ def as_csv(named: Sequence[tuple[str, Result]]) -> str:
     for name, result in named:
         for row in result.checks:
             cells = check_row(row)
-            writer.writerow((words.clean(name), *(cells[key] for key in CSV_HEAD)))
+            writer.writerow(words.cells((name, *(cells[key] for key in CSV_HEAD))))
     return out.getvalue()

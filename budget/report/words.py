@@ -61,6 +61,18 @@ def clean(text: str) -> str:
     return "".join(c if c.isprintable() else " " if c.isspace() else "?" for c in text)
 
 
+_FORMULA = ("=", "+", "-", "@", "\uff1d", "\uff0b", "\uff0d", "\uff20")
+
+
+def cells(row: Iterable[object]) -> list[object]:
+    """A row for a CSV file: every text on one line and clean, numbers as they are.
+
+    A text that a spreadsheet would take for a formula, such as an id of "=1+1" or "-12V", gets a quote before it.
+    """
+    texts = (clean(x) if isinstance(x, str) else x for x in row)
+    return [f"'{x}" if isinstance(x, str) and x.startswith(_FORMULA) else x for x in texts]
+
+
 def show(value: float | None, unit: str) -> str:
     """A value of a check row as text, in its unit; empty where there is none."""
     if unit == "dB" and value is not None:
@@ -182,7 +194,9 @@ def brief(row: CheckRow) -> str:
     """A row in 16 characters: 'FAIL current', 'ok 24% left'."""
     if row.status == "ok" and row.margin is not None and row.margin_unit == "ratio":
         return f"ok {row.margin * 100:.0f}% left"
-    name = "no solution" if row.check == "operating point" else short(row.check)
+    name = short(row.check)
+    if row.check == "operating point":
+        name = "no solution" if row.status == "fail" else "solved"
     return f"{'FAIL' if row.status == 'fail' else row.status} {name}"
 
 
@@ -204,11 +218,14 @@ def sentence(row: CheckRow) -> str:
 
 
 def by_severity(rows: Iterable[CheckRow]) -> list[CheckRow]:
-    """Rows from worst to best: fail, thin, no data, ok; within one by their margin."""
+    """Rows from worst to best: fail, thin, no data, ok; within one by their margin.
+
+    Those of equal margin stay in their order, whatever rounding leaves between them on one machine or another.
+    """
 
     def key(row: CheckRow) -> tuple[int, float]:
         lacking = -9.9 if row.status == "fail" else 9.9
-        return RANK[row.status], row.margin if row.margin is not None else lacking
+        return RANK[row.status], round(row.margin, 7) if row.margin is not None else lacking
 
     return sorted(rows, key=key)
 

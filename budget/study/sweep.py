@@ -7,22 +7,27 @@ values of the file, the paths of the two cells and the numbers to put there.
 
 from __future__ import annotations
 
+import contextlib
 import math
 import multiprocessing
 import os
 import signal
+import sys
+import threading
 import time
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, Executor, Future, ProcessPoolExecutor, wait
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from multiprocessing import resource_tracker
+from multiprocessing.connection import wait as wait_for
 
-from budget.engine.checks import worst_status
+from budget.engine.checks import CheckRow, worst_status
 from budget.engine.transient import CancelledError
 from budget.project.build import Shelf
 from budget.project.document import Document, Path, Tree, from_data
 from budget.project.problems import ProjectError
 from budget.study.paths import Cell, cell_at
-from budget.study.probe import Probe, worst
+from budget.study.probe import Key, Probe, worst
 
 MOST = 100_000  # points of a sweep
 _BLOCK = 0.5  # s of work in a block: what a cancelled sweep may still wait for
@@ -51,7 +56,10 @@ class Spot:
 
 @dataclass(frozen=True, slots=True)
 class Sweep:
-    """``spots[i][j]`` belongs to ``values_a[i]`` and ``values_b[j]`` (SI)."""
+    """``spots[i][j]`` belongs to ``values_a[i]`` and ``values_b[j]`` (SI).
+
+    ``failing`` are the checks that were left aside; ``again`` points were run more than once.
+    """
 
     cell_a: Cell
     cell_b: Cell
@@ -59,6 +67,8 @@ class Sweep:
     values_b: tuple[float, ...]
     parts: tuple[str, ...]
     spots: tuple[tuple[Spot, ...], ...]
+    failing: tuple[CheckRow, ...] = ()
+    again: int = field(default=0, compare=False)
 
     @property
     def boundary(self) -> tuple[tuple[float, float], ...]:
@@ -96,6 +106,7 @@ class Job:
     path_b: Path
     parts: tuple[str, ...]
     lines: tuple[int, ...]
+    aside: tuple[Key, ...] = ()
 
 
 Item = tuple[int, int, float, float]  # place in the grid, values
@@ -133,15 +144,19 @@ def sweep(
     *,
     parts: Sequence[str] = ("dc",),
     lines: tuple[int, ...] = (0, 1, 2),
+    aside: bool = False,
     executor: Executor | None = None,
+    workers: int | None = None,
     cancelled: Callable[[], bool] | None = None,
     progress: Callable[[float], None] | None = None,
 ) -> Sweep:
     """The worst margin of all checks for every pair of ``values_a`` and ``values_b`` (SI).
 
+    ``aside`` leaves those out that fail as the project stands, which else may be all there is to see.
     ``executor`` is any of the interface of concurrent.futures, such as the one of a dask.distributed client; it is left
-    open. Without one, processes on all cores are started where the work is worth it. Raises ProjectError for cells that
-    hold no number, the same cell twice or too many points, ``transient.CancelledError`` when ``cancelled`` says so.
+    open. ``workers`` is how many calls it works on at once (default: the cores of this machine). Without an executor,
+    processes on all cores are started where the work is worth it. Raises ProjectError for cells that hold no number,
+    the same cell twice or too many points, ``transient.CancelledError`` when ``cancelled`` says so.
     """
     shelves = tuple(shelves)
     cell_a, cell_b = cell_at(document, shelves, path_a), cell_at(document, shelves, path_b)
@@ -154,11 +169,16 @@ def sweep(
     probe = Probe(document, shelves, parts, lines)
     if probe.faults:
         raise ProjectError(f"the project has to be mended first: {probe.faults[0]}")
-    job = Job(document.data, tuple((s.name, s.data) for s in shelves), path_a, path_b, tuple(parts), lines)
+    now = probe.at() if aside else ""
+    failing = () if isinstance(now, str) else tuple(row for row in now.checks if row.status == "fail")
+    names = tuple((row.check, row.subject) for row in failing)
+    job = Job(document.data, tuple((s.name, s.data) for s in shelves), path_a, path_b, tuple(parts), lines, names)
     items = [(i, j, float(a), float(b)) for i, a in enumerate(values_a) for j, b in enumerate(values_b)]
-    found = _Run(job, items, executor, cancelled, progress).all()
+    run = _Run(job, items, executor, workers or _cores(), cancelled, progress)
+    found = run.all()
     spots = tuple(tuple(found[i, j] for j in range(len(values_b))) for i in range(len(values_a)))
-    return Sweep(cell_a, cell_b, tuple(map(float, values_a)), tuple(map(float, values_b)), job.parts, spots)
+    values = tuple(map(float, values_a)), tuple(map(float, values_b))
+    return Sweep(cell_a, cell_b, *values, job.parts, spots, failing, len(run.lost))
 
 
 def block(job: Job, items: Sequence[Item]) -> list[Spot]:
@@ -174,6 +194,7 @@ class _Bench:
         document = from_data(job.data)
         shelves = tuple(Shelf(name, data) for name, data in job.shelves)
         self.cells = cell_at(document, shelves, job.path_a), cell_at(document, shelves, job.path_b)
+        self.aside = frozenset(job.aside)
         self.probe = Probe(document, shelves, job.parts, job.lines, cancelled)
 
     def spot(self, item: Item) -> Spot:
@@ -181,8 +202,9 @@ class _Bench:
         result = self.probe.at((a, item[2]), (b, item[3]))
         if isinstance(result, str):
             return Spot(None, fault=result)
-        margin, row = worst(result.checks)
-        status = worst_status(result.checks)
+        rows = tuple(row for row in result.checks if (row.check, row.subject) not in self.aside)
+        margin, row = worst(rows)
+        status = worst_status(rows)
         if row is None:
             return Spot(margin, status)
         return Spot(margin, status, row.check, row.subject, row.case or "", row.line or "")
@@ -196,27 +218,20 @@ class _Run:
         job: Job,
         items: list[Item],
         executor: Executor | None,
+        workers: int,
         cancelled: Callable[[], bool] | None,
         progress: Callable[[float], None] | None,
     ) -> None:
-        self.job, self.items, self.given = job, items, executor
+        self.job, self.items, self.given, self.workers = job, items, executor, workers
         self.cancelled, self.progress = cancelled, progress
         self.found: dict[tuple[int, int], Spot] = {}
-        self.tries: dict[tuple[int, int], int] = {}
+        self.tries: dict[tuple[int, int], int] = {}  # of points that may be what killed a worker of our own
+        self.lost: set[tuple[int, int]] = set()
 
     def all(self) -> dict[tuple[int, int], Spot]:
-        self.look()
-        bench = _Bench(self.job, self.cancelled)
-        start = time.perf_counter()
-        first, rest = self.items[0], self.items[1:]
-        self.take([first], [bench.spot(first)])
-        each = max(time.perf_counter() - start, 1e-4)
-        if self.given is None and each * len(rest) < _ALONE:
-            for item in rest:
-                self.look()
-                self.take([item], [bench.spot(item)])
-            return self.found
-        workers = _cores()
+        each = self.alone()
+        rest = self.left()
+        workers = self.workers
         size = max(1, min(int(_BLOCK / each), math.ceil(len(rest) / (4 * workers))))
         executor, barren = self.given, 0
         while rest:
@@ -231,14 +246,35 @@ class _Run:
                 executor = pool = _pool(count)
             try:
                 self.round(executor, blocks or [[item] for item in suspects], ahead)
+            except BaseException:  # cancelled, or Ctrl-C: nobody waits for what the workers are at
+                if pool is not None:
+                    _end(pool)
+                raise
             finally:
                 if pool is not None:
                     pool.shutdown(wait=False, cancel_futures=True)
-            barren = barren + 1 if len(self.found) == before else 0
+            barren = barren + 1 if len(self.found) == before and pool is not None else 0
             if fresh and barren >= _TRIES:
                 raise ProjectError("the workers of the sweep die as soon as they start; nothing can be calculated.")
             rest, executor = self.left(), None  # a pool that lost a worker takes nothing more
+            workers = min(workers, _cores())
         return self.found
+
+    def alone(self) -> float:
+        """Calculate points here as long as the rest is done sooner than workers start; the time a point takes [s].
+
+        That is the longest so far: a point that cannot be calculated takes next to none.
+        """
+        each = 1e-4
+        bench = _Bench(self.job, self.cancelled)
+        for count, item in enumerate(self.items, 1):
+            self.look()
+            start = time.perf_counter()
+            self.take([item], [bench.spot(item)])
+            each = max(each, time.perf_counter() - start)
+            if self.given is not None or each * (len(self.items) - count) > _ALONE:
+                break
+        return each
 
     def left(self) -> list[Item]:
         """The points still to be calculated; those whose worker died too often are given up."""
@@ -260,9 +296,14 @@ class _Run:
                 self.look()
                 while queue and len(waiting) < ahead and not broken:
                     try:
-                        waiting[executor.submit(block, self.job, queue[-1])] = queue[-1]
-                        queue.pop()
+                        with _undisturbed():
+                            future = executor.submit(block, self.job, queue[-1])
+                        waiting[future] = queue.pop()
                     except BrokenExecutor:
+                        broken = True
+                    except Exception:  # as below; a cluster that is gone takes nothing
+                        if self.given is not executor:
+                            raise
                         broken = True
                 done, _ = wait(waiting, timeout=_POLL, return_when=FIRST_COMPLETED)
                 for future in done:
@@ -271,20 +312,23 @@ class _Run:
                         self.take(items, future.result())
                     except BrokenExecutor:
                         broken = True
-                        self.lose(items)
+                        self.lose(items, executor)
                     except Exception:
                         # An executor of another library has its own words for a dead worker. A fault of ours shows
                         # itself in the next round, which is run by this program's own workers.
                         if self.given is not executor:
                             raise
-                        self.lose(items)
+                        self.lose(items, executor)
         finally:
-            for future in waiting:
+            # Those of a pool of our own are called off with it: its thread takes it ill if they were called off before.
+            for future in waiting if executor is self.given else ():
                 future.cancel()
 
-    def lose(self, items: Sequence[Item]) -> None:
+    def lose(self, items: Sequence[Item], executor: Executor) -> None:
         for item in items:
-            self.tries[item[:2]] = self.tries.get(item[:2], 0) + 1
+            self.lost.add(item[:2])
+            if executor is not self.given:  # there a worker may die of anything, and then they all are suspects
+                self.tries[item[:2]] = self.tries.get(item[:2], 0) + 1
 
     def take(self, items: Sequence[Item], spots: Sequence[Spot]) -> None:
         for item, spot in zip(items, spots, strict=True):
@@ -303,9 +347,66 @@ def _cores() -> int:
 
 def _pool(workers: int) -> Executor:
     """Fresh processes: a fork of a program with threads may wait for a lock for ever."""
+    _start_tracker()
     return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"), initializer=_calm)
 
 
+def _start_tracker() -> None:
+    """Start the process in which Python keeps account of what worker processes share.
+
+    It takes along the file behind standard error, and has none while a screen stands in for that. It would also tell
+    the user, where the program was killed, what it cleans up.
+    """
+    before = os.environ.get("PYTHONWARNINGS")
+    os.environ["PYTHONWARNINGS"] = ",".join(filter(None, (before, "ignore:resource_tracker")))
+    try:
+        with contextlib.redirect_stderr(sys.__stderr__) if _no_file(sys.stderr) else contextlib.nullcontext():
+            resource_tracker.ensure_running()
+    finally:
+        if before is None:
+            del os.environ["PYTHONWARNINGS"]
+        else:
+            os.environ["PYTHONWARNINGS"] = before
+
+
+def _no_file(stream: object) -> bool:
+    try:
+        return stream is not None and int(stream.fileno()) < 0  # type: ignore[attr-defined]
+    except (OSError, AttributeError, ValueError):  # multiprocessing knows what to do
+        return False
+
+
+@contextlib.contextmanager
+def _undisturbed() -> Iterator[None]:
+    """Ctrl-C waits while a worker is started: it would reach the worker too, and print where that stood.
+
+    What is started with the signal held back goes on holding it back.
+    """
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
 def _calm() -> None:
-    """Ctrl-C is for the program, which then cancels the sweep; workers would only print where they stood."""
+    """How a worker begins: Ctrl-C is for the program, which then ends the sweep; and a worker ends with the program."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
+    threading.Thread(target=_end_with_parent, name="parent", daemon=True).start()
+
+
+def _end_with_parent() -> None:
+    """However the program ended: killed, with its terminal, or past its own way out."""
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        wait_for([parent.sentinel])
+        os._exit(1)
+
+
+def _end(pool: Executor) -> None:
+    """End the workers of a pool of our own at once; a block may hold points that take seconds."""
+    for process in list((getattr(pool, "_processes", None) or {}).values()):
+        process.terminate()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+import os
 from collections.abc import Callable
 from pathlib import Path as FilePath
 from typing import Any
@@ -11,10 +12,11 @@ from budget.engine.model import LINES
 from budget.project import document as doc
 from budget.project import edits, schema, starter
 from budget.project.document import Path
-from budget.project.problems import ProjectError, place
-from budget.project.store import ChangedOnDiskError, free_name
-from budget.ui import lists, studies, trying
-from budget.ui.desk import Desk, command_items
+from budget.project.problems import ProjectError, place, printable
+from budget.project.store import ChangedOnDiskError, NotWrittenError, free_name, put_copy, same_place
+from budget.session import ReadOnlyError
+from budget.ui import asking, lists, recovery, searching, sharing, studies, trying
+from budget.ui.desk import Desk, Pick, command_items
 from budget.ui.sheet import rows_of
 from budget.ui.view import Cell, Row
 
@@ -38,7 +40,7 @@ def _show(view: str) -> Action:
 def edit(desk: Desk) -> None:
     row, cell = desk.here()
     if desk.view_name == "allocation":
-        studies.take_candidate(desk)
+        searching.enter(desk)
         return
     if cell.path is None:
         if cell.leads is not None:
@@ -151,6 +153,9 @@ def new(desk: Desk) -> None:
     spot = desk.spot()
     if desk.view_name == "shelf":
         _new_part(desk, row)
+        return
+    if desk.view_name == "allocation":
+        searching.new_wish(desk)
         return
     in_list = row is not None and len(row.key) > len(edits.owner(row.key)) and not _plain(row.key)
     if desk.view_name in ("fields", "rules", "limits") and row is not None and in_list:
@@ -297,6 +302,9 @@ def _after_insert(desk: Desk, path: Path) -> None:
 
 
 def remove(desk: Desk) -> None:
+    if desk.view_name == "allocation":
+        searching.remove_wish(desk)
+        return
     item, spot = _item(desk), desk.spot()
     value = _whole(desk, item)
     if isinstance(item[-1], str):
@@ -563,6 +571,18 @@ def show_commands(desk: Desk) -> None:
     desk.pick("all commands", command_items(), desk.run)
 
 
+def read(desk: Desk) -> None:
+    """All about the cell and the whole message, also what the lines below the grid have no room for."""
+    from budget.ui import told
+
+    lines = told.everything(desk)
+    if not lines:
+        raise ProjectError("there is nothing to say about this cell.")
+    desk.pick("at full length", [(line, None) for line in lines], lambda _: None)
+    assert isinstance(desk.mode, Pick)
+    desk.mode.text = True
+
+
 # -- the file
 
 
@@ -584,17 +604,22 @@ def _save(desk: Desk, then: Callable[[], None]) -> None:
 
     try:
         write(False)
+    except ReadOnlyError:
+        sharing.ask_where(desk, lambda: save_as(desk, then), lambda: _reload(desk))
     except ChangedOnDiskError:
         _ask_changed(desk, write, then)
+    except NotWrittenError as error:
+        raise ProjectError(f"{error} W saves under another name.") from error
+
+
+def _reload(desk: Desk) -> None:
+    desk.session.reload(desk.spot())
+    desk.changed("reloaded from disk; undo brings yours back")
 
 
 def _ask_changed(desk: Desk, write: Callable[[bool], None], then: Callable[[], None]) -> None:
     session = desk.session
     assert session.path is not None
-
-    def reload() -> None:
-        session.reload(desk.spot())
-        desk.changed("reloaded from disk; undo brings yours back")
 
     def keep_copy() -> None:
         copy_path = free_name(session.path or FilePath("copy.toml"), "mine")
@@ -605,9 +630,9 @@ def _ask_changed(desk: Desk, write: Callable[[bool], None], then: Callable[[], N
     def overwrite() -> None:
         assert session.path is not None
         kept = ""
-        if session.path.exists():
+        if os.path.lexists(session.path):
             other = free_name(session.path, "theirs")
-            other.write_bytes(session.path.read_bytes())
+            put_copy(session.path, other)
             kept = f"; the other version is kept as {other.name}"
         write(True)
         desk.say(f"saved {session.name}{kept}")
@@ -616,9 +641,9 @@ def _ask_changed(desk: Desk, write: Callable[[bool], None], then: Callable[[], N
         "c": ("save yours as a copy", keep_copy),
         "o": ("overwrite, keeping theirs as a copy", overwrite),
     }
-    if session.path.exists():
-        options = {"r": ("reload theirs", reload), **options}
-    desk.ask(f"{session.name} was changed on disk by someone else.", options)
+    if os.path.isfile(session.path):
+        options = {"r": ("reload theirs", lambda: _reload(desk)), **options}
+    desk.ask(f"{session.name} {session.on_disk()}.", options)
 
 
 def save_as(desk: Desk, then: Callable[[], None] = lambda: None) -> None:
@@ -627,22 +652,29 @@ def save_as(desk: Desk, then: Callable[[], None] = lambda: None) -> None:
     def accept(text: str) -> None:
         if not text.strip():
             raise ProjectError("a file name was expected.")
-        path = FilePath(text.strip()).expanduser()
-        if path.is_dir():
+        try:
+            path = FilePath(text.strip()).expanduser()
+        except RuntimeError as error:
+            raise ProjectError(f"the home folder in {printable(text.strip(), 60)} is not known.") from error
+        if os.path.isdir(path):
             raise ProjectError(f"{path} is a folder; a file name was expected.")
-        if not path.parent.is_dir():
+        if not os.path.isdir(path.parent):
             raise ProjectError(f"the folder {path.parent} does not exist.")
+        if desk.session.path is not None and same_place(path, desk.session.path):
+            desk.mode = None
+            _save(desk, then)
+            return
 
         def write(over: bool) -> None:
             notes = desk.session.save_as(path, over=over)
             desk.say(" ".join([f"saved {path}", *notes]))
             then()
 
-        if path.exists() and path != desk.session.path:
+        if os.path.lexists(path):
             desk.mode = None
             desk.ask(f"{path} exists already.", {"o": ("overwrite it", lambda: write(True))})
             return
-        write(path == desk.session.path)
+        write(False)
 
     desk.prompt("save as", start, accept)
 
@@ -667,11 +699,16 @@ OF_VIEW: dict[tuple[str, str], Action] = {
     ("trials", "edit"): trying.switch,
     ("trials", "new"): trying.hold_as,
     ("trials", "remove"): trying.forget,
+    ("recovered", "edit"): recovery.decide,
+    **asking.OF_VIEW,
 }
 ACTIONS: dict[str, Action] = {
     **studies.ACTIONS,
+    **searching.ACTIONS,
+    **asking.ACTIONS,
     "hold": trying.hold,
     "view_trials": _show("trials"),
+    "view_recovered": recovery.view_recovered,
     **{name: _move(name) for name in ("up", "down", "left", "right", "first", "last", "page_up", "page_down")},
     **{f"view_{name}": _show(name) for name in ("rules", "loads", "checks", "limits", "shelf", "project")},
     "view_sheet": view_sheet,
@@ -711,6 +748,7 @@ ACTIONS: dict[str, Action] = {
     "view_switchon": _show("switchon"),
     "view_stable": _show("stable"),
     "commands": show_commands,
+    "read": read,
     "save": save,
     "save_as": save_as,
     "quit": quit_program,

@@ -77,7 +77,16 @@ def _age(context: Context, search: Search, project: Project) -> tuple[str, str]:
         return "~ before the edit: ", "The project changed since this search; G searches anew."
     if tuple(w for w in context.options.wishes if missing(w, project) is None) != search.wishes:
         return "~ other wishes: ", "The wishes changed since this search; G searches anew."
+    if _anchors(search, search.project) != _anchors(search, project):
+        return "~ before the move: ", "What had to stay was moved since this search; G searches anew."
     return "", ""
+
+
+def _anchors(search: Search, project: Project) -> tuple[tuple[str, str], ...]:
+    """The converters that had to stay where they were, by a wish or for want of a rating, with their filters."""
+    kept = {wish[1] for wish in search.wishes if wish[0] == "keep"}
+    unrated = {f.id for f in project.filters if f.rated_current is None}
+    return tuple((c.id, c.filter) for c in project.converters if c.id in kept or c.filter in unrated)
 
 
 def same_bus(one: Project, two: Project) -> bool:
@@ -96,14 +105,16 @@ def _bare(project: Project) -> Project:
 
 def _table(context: Context, search: Search, project: Project) -> Section:
     now = {c.id: c.filter for c in project.converters}
-    shown = [replace(c, moves=sum(now.get(u, "") != f for u, f in c.allocation)) for c in search.candidates]
+    shown = [replace(c, moves=sum(now.get(u, f) != f for u, f in c.allocation)) for c in search.candidates]
     names = ["so far"] if search.state == SEARCHING else [f"no. {k + 1}" for k, _ in enumerate(shown)]
     columns = [Column("", 16, most=30), Column("now", 5, most=10), *(Column(name, 10, most=14) for name in names)]
 
     def row(key: str, name: str, present: str, texts: list[tuple[str, str]], align: str = "left") -> Row:
         cells = [Cell(words_only(name), tone="head"), Cell(words_only(present))]
         for k, (text, tone) in enumerate(texts):
-            info = f"{names[k]}: {report.facts(shown[k])}; Enter takes it as one edit"
+            info = f"{names[k]}: {report.verdict(shown[k])}"
+            if key == "converter" and text.startswith("> "):
+                info += f"; {name.split()[0]} {present} -> {text[2:]}"
             cells.append(Cell(words_only(text), None, align, tone, "", info))
         return Row((key, name), tuple(cells))
 
@@ -111,7 +122,7 @@ def _table(context: Context, search: Search, project: Project) -> Section:
     states = [(_state(c, waits), c.status) for c in shown]
     rows = [row("fact", "state", "", states)]
     if any(c.unchecked for c in shown):
-        left = [_unchecked(c, waits) for c in shown]
+        left = [_unchecked(c) for c in shown]
         rows.append(row("fact", "not checked", "", [(text, "thin") for text in left]))
     rows += [
         row("fact", "headroom", "", [(_percent(c.headroom), "") for c in shown], RIGHT),
@@ -129,11 +140,11 @@ def _table(context: Context, search: Search, project: Project) -> Section:
 
 def _state(candidate: Candidate, waits: str) -> str:
     if not candidate.status:
-        return f"{waits}?"
+        return waits.strip() or "unknown"
     return (waits if candidate.unchecked else "") + ("FAIL" if candidate.status == "fail" else candidate.status)
 
 
-def _unchecked(candidate: Candidate, waits: str) -> str:
+def _unchecked(candidate: Candidate) -> str:
     """The stages whose checks were not made, in a word."""
     if len(candidate.unchecked) > 1:
         return "all" if not candidate.status else f"{len(candidate.unchecked)} stages"

@@ -6,48 +6,75 @@ the one before; only the spans that differ are sent to the terminal.
 
 from __future__ import annotations
 
+import asyncio
+import codecs
 import contextlib
 import gc
+import io
+import locale
+import signal
 import sys
+import termios
 import threading
-from collections.abc import Callable, Iterator
+import time
+import traceback
+from collections.abc import Callable, Iterable, Iterator
+from functools import partial
 from itertools import islice
 from typing import Any
 
+from rich.console import Console
 from rich.segment import Segment
 from rich.style import Style
+from textual import constants
+from textual._xterm_parser import XTermParser
 from textual.app import App, ComposeResult
+from textual.drivers import linux_driver
 from textual.events import Key, Paste, Resize
 from textual.geometry import Region
 from textual.message import Message
+from textual.messages import Prompt
 from textual.strip import Strip
 from textual.widget import Widget
 
+from budget.keeping import log
+from budget.keeping.signals import Signals
 from budget.project.document import Document
+from budget.report import words
 from budget.session import Outcome, Session, Snapshot, asides, stages
+from budget.ui import sharing
 from budget.ui.desk import Desk, Job, Work
-from budget.ui.paint import Line, frame
+from budget.ui.escapes import Escapes
+from budget.ui.paint import Line, bare, frame
+from budget.ui.recovery import Keeper
 
 LATE = 0.05  # seconds after which results that have not come look stale
 PAUSE = 0.03  # seconds between two stages: painting and calculating at once would make both late
 FAST = 2  # stages that follow an edit at once: DC and emissions
+BREATH = 0.1  # seconds between two paints while more keys wait than can be painted
+TURN = 0.01  # seconds the rest of the program then has
 WATCH = 2.0  # seconds between looks at the file on disk
+TICK = 1.0  # seconds between looks whether the terminal is still there and the journal is written
 
+# Red and magenta are the only two of the terminal's own colours that can be read on black and on white alike: against
+# the palettes of xterm and of the PC console they keep a contrast of about 3 to 1 or more, where yellow, green and cyan
+# fade on white and blue on black. Nothing is italic: screen and tmux turn that into reverse, which is the cursor.
 STYLES: dict[str, Style] = {
     "": Style(),
     "head": Style(bold=True),
     "heading": Style(bold=True, underline=True),
     "panel": Style(bold=True, reverse=True),
     "pale": Style(dim=True),
-    "lent": Style(italic=True),
+    "lent": Style(dim=True),
     "bar": Style(reverse=True),
     "cursor": Style(reverse=True, bold=True),
     "edit": Style(underline=True),
     "fail": Style(color="red", bold=True),
-    "thin": Style(color="yellow"),
-    "ok": Style(color="green"),
+    "thin": Style(color="magenta"),
+    "ok": Style(),
     "no data": Style(dim=True),
-    **{f"trace{k}": Style(color=name) for k, name in enumerate(("cyan", "magenta", "green", "yellow", "blue", "red"))},
+    "limit": Style(color="red", bold=True),
+    **{f"trace{k}": (Style(bold=True), Style(color="magenta"), Style())[k % 3] for k in range(6)},  # letters tell them
 }
 
 
@@ -69,12 +96,13 @@ class Aside(Message):
 
 
 class Trouble(Message):
-    """The worker met an error that is a fault of this program."""
+    """The worker met an error that is a fault of this program; ``aside``: for a held state, not for the present."""
 
-    def __init__(self, generation: int, text: str) -> None:
+    def __init__(self, generation: int, text: str, *, aside: bool = False) -> None:
         super().__init__()
         self.generation = generation
         self.text = text
+        self.aside = aside
 
 
 class Staged(Message):
@@ -151,7 +179,7 @@ class Worker:
             for document, outcome in asides(snapshot, lambda: self._newest is not snapshot):
                 self._send(Aside(document, outcome))
         except Exception as error:
-            self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+            self._send(Trouble(snapshot.generation, log.told(error), aside=True))
 
     def _step(self, snapshot: Snapshot, results: Iterator[Outcome], count: int | None) -> bool:
         """Send the next ``count`` stages; whether the rest is still wanted."""
@@ -162,7 +190,7 @@ class Worker:
                 if self._newest is not snapshot or self._moved.wait(PAUSE):  # the screen comes first
                     return False
         except Exception as error:  # the sheet must stay open whatever the calculation does
-            self._send(Trouble(snapshot.generation, f"{type(error).__name__}: {error}"))
+            self._send(Trouble(snapshot.generation, log.told(error)))
             return False
         return True
 
@@ -196,7 +224,10 @@ class Mailbox:
                 while self._item is None:
                     self._wake.wait()
                 item, self._item = self._item, None
-            self._work(item)
+            try:
+                self._work(item)
+            except Exception as error:  # the thread must live for the next item
+                log.record(error)
 
 
 class Screenful(Widget, can_focus=True):
@@ -208,6 +239,9 @@ class Screenful(Widget, can_focus=True):
         super().__init__()
         self.desk = desk
         self.lines: list[Line] = []
+        self.painted = 0.0  # when the frame was made last
+        self.behind = False  # whether keys came faster than frames, and the last one is still to be painted
+        self.met: tuple[str, str] = ("", "")  # the fault met last, and what is told of it
 
     def render_line(self, y: int) -> Strip:
         width = self.size.width
@@ -220,12 +254,8 @@ class Screenful(Widget, can_focus=True):
         width, height = self.size
         if not width or not height:
             return
-        try:
-            new = frame(self.desk, width, height)
-        except Exception as error:  # a view that cannot be made must not take the others with it
-            self.desk.view_name, self.desk.mode = "sheet", None
-            self.desk.say(f"this view failed, a fault of this program ({type(error).__name__}: {error})", "fail")
-            new = frame(self.desk, width, height)
+        self.painted = time.monotonic()
+        new = self.frame(width, height)
         old, self.lines = self.lines, new
         if len(old) != len(new):
             self.refresh()
@@ -235,31 +265,104 @@ class Screenful(Widget, can_focus=True):
                 start, end = difference(before, after)
                 self.refresh(Region(start, y, min(width, end) - start, 1))
 
+    def frame(self, width: int, height: int) -> list[Line]:
+        """The desk as lines; where a view cannot be made the sheet, and where that cannot either, bare words."""
+        desk = self.desk
+        try:
+            return frame(desk, width, height)
+        except Exception as error:  # a view that cannot be made must not take the others with it
+            told = self.told(error)
+        mode, message, tone = desk.mode, desk.message, desk.tone
+        desk.view_name = "sheet"
+        desk.say(f"this view failed{desk.let_go()}, a fault of this program{told}", "fail")
+        try:
+            return frame(desk, width, height)
+        except Exception as error:  # what is open stays, so that a save can still be asked for and answered
+            desk.mode = mode
+            desk.say(message, tone)
+            return bare(desk, width, height, self.told(error))
+
+    def told(self, error: Exception) -> str:
+        """What is told of a fault; one that is met again with every paint is written down once."""
+        last = traceback.extract_tb(error.__traceback__)[-1:]
+        which = f"{type(error).__name__} {error} {last}"
+        if which != self.met[0]:
+            self.met = (which, log.told(error))
+        return self.met[1]
+
     def on_resize(self, event: Resize) -> None:
         self.lines = []
         self.sync()
 
-    def on_key(self, event: Key) -> None:
+    async def on_key(self, event: Key) -> None:
         event.stop()
         event.prevent_default()
         character = event.character if event.is_printable else None
-        self.guard(lambda: self.desk.key(event.key, character))
+        if self.behind and event.key.startswith("page"):  # how far it goes hangs on what the screen would show
+            self.sync()
+        self.guard(lambda: self.desk.key(event.key, character), typed=True)
+        if self.message_queue_size and time.monotonic() - self.painted < BREATH:
+            if not self.behind:
+                self.behind = True
+                self.call_later(self.catch_up)
+            return
+        self.sync()
+        if self.message_queue_size:  # a long burst: what was painted is sent, and the rest of the program has its turn
+            self.post_message(Prompt())
+            self._check_refresh()
+            await asyncio.sleep(TURN)
+
+    def catch_up(self) -> None:
+        """Paint what the last keys of a burst came to."""
+        self.behind = False
         self.sync()
 
-    def guard(self, work: Callable[[], object]) -> None:
-        """Do something of the desk; an error of ours is told, and nothing that was typed is lost by it."""
+    def guard(self, work: Callable[[], object], *, typed: bool = False) -> None:
+        """Do something of the desk; an error of ours is told, and nothing that was typed is lost by it.
+
+        ``typed``: for a key, so that what is open may be what failed; it is closed then.
+        """
+        session = self.desk.session
+        before = session.generation
         try:
             work()
         except Exception as error:
-            self.desk.mode = None
-            self.desk.say(
-                f"a fault of this program ({type(error).__name__}: {error}); the project is as it was", "fail"
-            )
+            kept = self.desk.let_go() if typed else ""
+            if session.generation == before:
+                kept += "; the project is as it was"
+            else:
+                kept += "; the edit was made, u undoes it"
+                self.desk.calculate()
+            self.desk.say(f"a fault of this program{kept}{self.told(error)}", "fail")
 
     def on_paste(self, event: Paste) -> None:
         event.stop()
-        self.guard(lambda: self.desk.paste(event.text))
+        self.guard(lambda: self.desk.paste(event.text), typed=True)
         self.sync()
+
+
+class Keys(XTermParser):
+    """As textual reads keys, but Esc and a key right behind it are two."""
+
+    def __init__(self, debug: bool = False) -> None:
+        self._escapes = Escapes()
+        super().__init__(debug)
+
+    def feed(self, data: str) -> Iterable[Message]:
+        if not data:  # the end
+            return super().feed(data)
+        whole = self._escapes(data)
+        return super().feed(whole) if whole else ()
+
+    def tick(self) -> Iterable[Message]:
+        for event in super().tick():
+            self._escapes.waited()
+            yield event
+
+    def _sequence_to_key_events(self, sequence: str, alt: bool = False) -> Iterable[Key]:
+        if alt:  # an Esc before a key that could have begun a sequence, but did not
+            yield Key("escape", None)
+        yield from super()._sequence_to_key_events(sequence)
 
 
 def difference(before: Line, after: Line) -> tuple[int, int]:
@@ -295,13 +398,16 @@ class BudgetApp(App[int], inherit_bindings=False):
     ENABLE_COMMAND_PALETTE = False
     CSS = "Screen { background: ansi_default; color: ansi_default; }"
 
-    def __init__(self, desk: Desk) -> None:
+    def __init__(self, desk: Desk, keeper: Keeper | None = None) -> None:
         super().__init__(ansi_color=True)
         self.desk = desk
+        self.keeper = keeper  # None in tests that need no journal
+        self.signals: Signals | None = None
+        self.fault: Exception | None = None  # what ended the program, if it was an error of ours
         self.board = Screenful(desk)
         self.animation_level = "none"
         self.worker: Worker | None = None
-        self.told_changed = False
+        self.told_changed = ""
         self.job_number = 0
 
     def compose(self) -> ComposeResult:
@@ -309,13 +415,26 @@ class BudgetApp(App[int], inherit_bindings=False):
 
     def on_mount(self) -> None:
         self.board.focus()
-        self.desk.leave = lambda: self.exit(0)
+        self.desk.leave = self.leave
         self.desk.clip = self.copy_to_clipboard
         self.desk.calculate = self.start_calculation
         self.desk.start_job = self.start_job
         self.desk.later = self.later
+        self.desk.aside = self.aside
         self.set_interval(WATCH, self.look_at_file)
+        if self.keeper is not None:
+            loop = asyncio.get_running_loop()
+            leave = lambda status: loop.call_soon_threadsafe(self.exit, status)  # noqa: E731
+            self.signals = Signals(self.keeper.journal.flush, leave)
+            self.signals.install()
+            self.set_interval(TICK, self.look_around)
         self.call_after_refresh(self.begin)  # numpy and pint are loaded by the worker, behind the first paint
+
+    def leave(self) -> None:
+        """End the program, and what it still calculates: workers of a sweep are processes of their own."""
+        if self.desk.job is not None:
+            self.desk.job.stop = True
+        self.exit(0)
 
     def begin(self) -> None:
         self.worker = Worker(self.post_message)
@@ -335,7 +454,9 @@ class BudgetApp(App[int], inherit_bindings=False):
             self.board.sync()
 
     def on_calculated(self, event: Calculated) -> None:
-        if self.desk.accept(event.outcome):
+        fresh: list[bool] = []
+        self.board.guard(lambda: fresh.append(self.desk.accept(event.outcome)))
+        if fresh != [False]:
             self.board.sync()
 
     def on_aside(self, event: Aside) -> None:
@@ -348,8 +469,12 @@ class BudgetApp(App[int], inherit_bindings=False):
             self.board.sync()
 
     def on_trouble(self, event: Trouble) -> None:
-        if event.generation == self.desk.session.generation:
-            self.desk.say(f"the calculation failed, a fault of this program ({event.text}); undo the edit", "fail")
+        if event.aside:
+            self.desk.say(f"the results of a trial are missing, a fault of this program{event.text}", "fail")
+            self.board.sync()
+        elif event.generation == self.desk.session.generation:
+            self.desk.failed, self.desk.pending = event.generation, True
+            self.desk.say(f"the calculation failed (undo the edit), a fault of this program{event.text}", "fail")
             self.board.sync()
 
     def start_job(self, work: Work) -> None:
@@ -370,12 +495,26 @@ class BudgetApp(App[int], inherit_bindings=False):
             try:
                 message = Finished(number, work, work.run(cancelled, progress))
             except Exception as error:  # the sheet must stay open whatever the calculation does
-                message = Finished(number, work, None, "" if job.stop else f"{type(error).__name__}: {error}")
+                message = Finished(number, work, None, "" if job.stop else log.told(error))
             message.stopped = job.stop
             with contextlib.suppress(Exception):
                 self.post_message(message)
 
         threading.Thread(target=run, name="job", daemon=True).start()
+
+    def aside(self, make: Callable[[], Any], done: Callable[[Any], None]) -> None:
+        """Calculate something that a view waits for, in a thread of its own."""
+
+        def run() -> None:
+            try:
+                found = make()
+            except Exception as error:  # the sheet must stay open whatever the calculation does
+                told = log.told(error)
+                self.later(lambda: self.desk.say(f"a part of this view failed, a fault of this program{told}", "fail"))
+            else:
+                self.later(lambda: done(found))
+
+        threading.Thread(target=run, name="aside", daemon=True).start()
 
     def later(self, do: Callable[[], None]) -> None:
         with contextlib.suppress(Exception):  # the program may be closing
@@ -391,7 +530,7 @@ class BudgetApp(App[int], inherit_bindings=False):
         if current:
             self.desk.job = None
         if event.error and current:
-            self.desk.say(f"{work.label} failed, a fault of this program ({event.error})", "fail")
+            self.desk.say(f"{work.label} failed, a fault of this program{event.error}", "fail")
         elif not event.error and (work.keeps or (current and not event.stopped)):
             self.board.guard(lambda: work.done(event.found))
         elif current:
@@ -404,17 +543,95 @@ class BudgetApp(App[int], inherit_bindings=False):
 
     def look_at_file(self) -> None:
         """Notice a file that someone else has changed."""
-        changed = self.desk.session.changed_on_disk()
-        if changed and not self.told_changed:
-            self.desk.say(f"{self.desk.session.name} was changed on disk by someone else; w asks what to do", "thin")
+        session = self.desk.session
+        if session.lost():
+            self.desk.say(f"{session.read_only}: {session.name} is read-only here now, w asks what to do", "thin")
+            self.board.sync()
+        changed = session.on_disk()
+        if changed and changed != self.told_changed:
+            self.desk.say(f"{session.name} {changed}; w asks what to do", "thin")
             self.board.sync()
         self.told_changed = changed
+
+    def look_around(self) -> None:
+        """Leave where the terminal is gone without a word; say where the journal cannot be written."""
+        try:
+            termios.tcgetattr(0)
+        except termios.error:
+            if self.signals is not None:
+                self.signals.hurry(128 + signal.SIGHUP)
+            self.exit(128 + signal.SIGHUP)
+            return
+        if self.keeper is not None and self.keeper.tick():
+            self.board.sync()
+
+    def _handle_exception(self, error: Exception) -> None:
+        self.fault = self.fault or error
+        super()._handle_exception(error)
+
+    def panic(self, *renderables: Any) -> None:
+        """As textual does it, except that what a thread of its own died of is kept for the log."""
+        if self.fault is None and renderables:
+            page = Console(file=io.StringIO(), width=120, color_system=None)
+            page.print(*renderables)
+            self.fault = RuntimeError(page.file.getvalue())  # type: ignore[attr-defined]
+        super().panic(*renderables)
+
+    def _print_error_renderables(self) -> None:
+        """A traceback goes to the log, never to the terminal of the user."""
+        if self.keeper is None:
+            super()._print_error_renderables()
+        self._exit_renderables.clear()
 
 
 def show(session: Session, *, ascii_only: bool = False) -> int:
     """Run the sheet until the user leaves; returns the exit status."""
     sys.setswitchinterval(0.001)  # a key must not wait for a calculation
     gc.set_threshold(20_000, 20, 50)  # nor for a full collection, which few of our objects need: they have no cycles
-    app = BudgetApp(Desk(session, ascii_only))
-    status = app.run(mouse=False)
-    return status if status is not None else (app.return_code or 0)
+    _listen()
+    desk = Desk(session, ascii_only)
+    keeper = Keeper(desk)
+    sharing.begin(desk, keeper)
+    app = BudgetApp(desk, keeper)
+    status: int | None = None
+    try:
+        status = app.run(mouse=False)
+    except (Exception, KeyboardInterrupt) as error:  # the terminal went, or a fault of ours; the journal stays
+        app.fault = app.fault or (error if isinstance(error, Exception) else None)
+    if app.signals is not None and app.signals.status:
+        status = app.signals.status
+    clean = status == 0 and app.fault is None
+    keeper.end(clean=clean)
+    session.release()
+    if app.signals is not None:
+        app.signals.restore()
+    _farewell(keeper, app.fault)
+    return 1 if app.fault is not None else status if status is not None else 1
+
+
+def _listen() -> None:
+    """Read what the terminal sends as this program means it; textual has no setting for either."""
+    if not constants.DISABLE_KITTY_KEY:  # without it nothing stands for the Esc key alone
+        linux_driver.XTermParser = Keys  # type: ignore[attr-defined]
+    encoding = "utf-8"
+    with contextlib.suppress(LookupError):
+        encoding = codecs.lookup("utf-8" if sys.flags.utf8_mode else locale.getencoding()).name
+
+    def decoder(_: str) -> Callable[[], codecs.IncrementalDecoder]:
+        """A byte that is no text, from a noisy line or a terminal of another encoding, must not end the program."""
+        return partial(codecs.getincrementaldecoder(encoding), errors="replace")
+
+    linux_driver.getincrementaldecoder = decoder  # type: ignore[attr-defined,assignment]
+
+
+def _farewell(keeper: Keeper, fault: Exception | None) -> None:
+    """Tell on standard error, once the sheet is closed, where the work is kept and where faults are told."""
+    told: list[str] = []
+    if fault is not None:
+        told.append(f"the sheet was ended by a fault of this program{log.told(fault)}.")
+    elif log.recorded():
+        told.append(f"faults of this program were met; they are told in {log.recorded()}.")
+    told += keeper.kept()
+    with contextlib.suppress(OSError, ValueError):
+        for line in told:
+            print(f"budget: {words.clean(line)}", file=sys.stderr, flush=True)

@@ -37,18 +37,26 @@ class _Change:
     least: str = ""  # where ``short`` does not fit
 
 
-def against(view: View, was: View, document: Document, before: Document) -> View:
-    """``view`` with its changes against ``was``; the documents tell which row is which."""
+Made = dict[Any, tuple[Row, Row, tuple[Column, ...], list[Row]]]  # a row, that of the reference, and what came of them
+
+
+def against(view: View, was: View, document: Document, before: Document, made: Made) -> View:
+    """``view`` with its changes against ``was``; the documents tell which row is which.
+
+    Rows that are the same objects as before are not compared again: ``made`` keeps what came of them.
+    """
     old = [{_stable(row.key, before): row for row in s.rows} for s in was.sections]
     sections = []
     for k, section in enumerate(view.sections):
         known = old[k] if k < len(old) else {}
         columns = was.sections[k].columns if k < len(was.sections) else ()
-        sections.append(_section(section, known, columns, document))
+        sections.append(_section(section, known, columns, document, made))
     return replace(view, sections=tuple(sections), plot=_plot(view.plot, was.plot))
 
 
-def _section(section: Section, known: dict[Any, Row], before: tuple[Column, ...], document: Document) -> Section:
+def _section(
+    section: Section, known: dict[Any, Row], before: tuple[Column, ...], document: Document, made: Made
+) -> Section:
     rows: list[Row] = []
     seen = set()
     titles = [column.title for column in section.columns]
@@ -68,7 +76,10 @@ def _section(section: Section, known: dict[Any, Row], before: tuple[Column, ...]
             if known and row.item is not None:
                 rows.append(_riding(row, (Cell("new", tone="pale"),)))
             continue
-        rows += _compared(section.columns, row, was, place)
+        old = made.get(name)
+        if old is None or old[0] is not row or old[1] is not was or old[2] is not before:
+            old = made[name] = (row, was, before, _compared(section.columns, row, was, place))
+        rows += old[3]
     gone = [row.cells[0].text.strip() for name, row in known.items() if name not in seen and row.item is not None]
     if gone:
         rows.append(_riding(Row(("gone",), ()), (Cell("gone: " + ", ".join(gone), tone="pale"),)))

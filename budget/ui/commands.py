@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 SHEET, FIELDS, SPECTRUM, PLAN, RESPONSE = "sheet", "fields", "spectrum", "plan", "response"
 SWITCHON, STABLE, ALLOCATION, ALL = "switchon", "stable", "allocation", "all"
+REACH, MAP = "reach", "map"
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,7 +40,7 @@ COMMANDS: tuple[Command, ...] = (
         "edit", ("enter",), "edit the cell; on a calculated one, go to what it follows from", "edit", "edit", rank=10
     ),
     Command("empty", ("delete", "backspace"), "empty the cell: back to its default", "edit"),
-    Command("undo", ("u", "ctrl+z"), "undo", "edit", "undo", rank=60),
+    Command("undo", ("u", "ctrl+z"), "undo", "edit", "undo", rank=14),
     Command("redo", ("U", "ctrl+y"), "redo", "edit"),
     Command("copy", ("c", "ctrl+c"), "copy the cell", "edit"),
     Command("cut", ("x", "ctrl+x"), "cut the cell", "edit"),
@@ -61,10 +62,11 @@ COMMANDS: tuple[Command, ...] = (
     ),
     Command("to_filter", ("m",), "converter behind a filter from a list", "rows", "", (SHEET, FIELDS)),
     Command("take_part", ("p",), "take a part from the shelf", "rows", "", (SHEET, FIELDS)),
+    Command("read", ("=",), "all there is to say about the cell, and the message, at full length", "show"),
     Command("corner", ("o",), "choose the case and line that are shown", "show", "corner", rank=22),
     Command("worst", ("O",), "show the worst over all cases and lines", "show"),
     Command("view_sheet", ("s", "f2"), "the sheet: bus, filters, converters", "show"),
-    Command("go_back", ("escape",), "stop a calculation; else back to where you came from, or to the sheet", "show"),
+    Command("go_back", ("escape",), "stop a calculation; else back where you came from, or to the sheet", "show"),
     Command("view_fields", ("f", "f3"), "every field of the selected row", "show", "fields", rank=20),
     Command("view_rules", ("r", "f4"), "the rules: wanted margins", "show"),
     Command("view_loads", ("l", "f5"), "load cases by converters", "show", "loads", rank=21),
@@ -79,10 +81,10 @@ COMMANDS: tuple[Command, ...] = (
     Command(
         "next_mode",
         ("A",),
-        "DM, CM, both; or currents, voltages",
+        "DM, CM, both; or currents, voltages; or fails, thin; or map, numbers",
         "show",
         "mode",
-        (SPECTRUM, RESPONSE, SWITCHON),
+        (SPECTRUM, RESPONSE, SWITCHON, REACH, MAP),
         rank=5,
     ),
     Command(
@@ -99,19 +101,23 @@ COMMANDS: tuple[Command, ...] = (
         "what_helps", ("H",), "what would bring it within the limit", "show", "what helps", (SWITCHON, STABLE), rank=8
     ),
     Command("toggle_bare", ("B",), "the unfiltered level beside it", "show", "unfiltered", (SPECTRUM,), rank=7),
-    Command("export", ("E",), "write what is drawn as CSV", "show", "CSV", (SPECTRUM, SWITCHON, STABLE), rank=9),
+    Command("export", ("E",), "write what is drawn as CSV", "show", "CSV", (SPECTRUM, SWITCHON, STABLE, MAP), rank=9),
     Command(
         "scan_clock", ("M",), "move one clock over a range, find the best place", "show", "move clock", (PLAN,), rank=5
     ),
     Command("hold", ("K",), "hold the present as reference; then keep it or drop back", "try", "reference", rank=30),
     Command("view_trials", ("T",), "trials: states held by name, side by side", "try", "trials", rank=31),
+    Command("ask_reach", ("Q",), "how far this cell can go before a check fails", "try", "how far", rank=32),
+    Command("ask_sweep", ("P",), "sweep this cell and another: a map of the worst margin", "try", "sweep", rank=33),
+    Command("view_map", ("F",), "the map of the last sweep", "try"),
     Command("view_limits", ("i", "f7"), "emission limit lines of your own", "show"),
     Command("view_shelf", ("h", "f8"), "shelf of reusable parts", "show"),
     Command("view_project", ("t", "f9"), "title, author, shelf files", "show"),
     Command("view_faults", ("b",), "cells that cannot be read, and warnings", "show"),
+    Command("view_recovered", ("I",), "work of a session that was cut off: take it back or discard it", "file"),
     Command("save", ("w", "ctrl+s"), "save", "file", "save", rank=11),
     Command("save_as", ("W",), "save under another name", "file"),
-    Command("commands", ("space",), "list of all commands", "file", "all commands", rank=63),
+    Command("commands", ("space",), "list of all commands", "file", "all", rank=63),
     Command("help", ("question_mark", "f1"), "keys, words and cautions", "file", "help", rank=12),
     Command("quit", ("q", "ctrl+q"), "quit", "file", "quit", rank=13),
 )
@@ -165,7 +171,10 @@ def keys_text(command: Command) -> str:
 # What a command is called on the hint line of a view where it does something of its own.
 OWN_HINTS: dict[str, dict[str, str]] = {
     "trials": {"edit": "switch to", "new": "hold as", "remove": "remove", "hold": "make reference"},
-    "allocation": {"edit": "take"},
+    "allocation": {"edit": "take", "new": "wish", "remove": "remove wish", "propose": "search"},
+    "recovered": {"edit": "take back or discard"},
+    "reach": {"edit": "put in", "next_mode": "fails or thin", "ask_reach": "again"},
+    "map": {"edit": "put both in", "next_mode": "map or numbers", "ask_sweep": "again"},
 }
 
 

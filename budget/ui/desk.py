@@ -12,10 +12,11 @@ from dataclasses import dataclass, field, replace
 from typing import Any
 
 from budget.engine.model import LINES
-from budget.project import edits
+from budget.keeping import log
+from budget.project import edits, schema
 from budget.project.build import Built
 from budget.project.document import Document, Path
-from budget.project.problems import ProjectError
+from budget.project.problems import ProjectError, printable
 from budget.report import change
 from budget.report.numbers import Corner
 from budget.session import Outcome, Session
@@ -25,18 +26,22 @@ from budget.ui import (
     changes,
     commands,
     fields,
+    guide,
     layout,
     lists,
     plan,
+    reach,
+    recovery,
     response,
     sheet,
     spectrum,
     stable,
+    sweepmap,
     switchon,
     trying,
 )
 from budget.ui.commands import COMMANDS, SHEET
-from budget.ui.sheet import Cells, Context, Options
+from budget.ui.sheet import Cells, Context, Memo, Options
 from budget.ui.view import Cell, Row, Section, View
 
 VIEWS: dict[str, Callable[[Context], View]] = {
@@ -56,12 +61,17 @@ VIEWS: dict[str, Callable[[Context], View]] = {
     "stable": stable.stable,
     "allocation": allocation.allocation,
     "trials": trying.trials_view,
+    "recovered": recovery.recovered,
+    "reach": reach.reach,
+    "map": sweepmap.sweep_map,
     "help": lists.help_view,
 }
 FORMS = frozenset({"fields", "rules", "limits", "project", "loads", "trials"})  # the first column only names the others
-NOT_COMPARED = frozenset({"help", "allocation", "trials", "reach", "map", "faults"})
+NOT_COMPARED = frozenset({"help", "allocation", "trials", "reach", "map", "faults", "recovered"})
+TYPED = frozenset({"sheet", "fields", "rules", "loads", "limits", "project", "shelf"})  # views with cells of all sorts
 OF_ONE = frozenset({"fields", "response"})  # views of one row, the subject
 LONGEST = 2000  # characters of one cell; more is cut when pasted
+REFUSED = (ProjectError, OSError)  # what a command cannot do, and what the system does not let it do
 
 
 @dataclass(slots=True)
@@ -108,6 +118,7 @@ class Pick:
     accept: Callable[[Any], None]
     query: str = ""
     index: int = 0
+    text: bool = False  # the items are the lines of a text to be read
 
     def shown(self) -> list[tuple[str, Any]]:
         words = self.query.lower().split()
@@ -120,6 +131,7 @@ class Ask:
 
     question: str
     options: dict[str, tuple[str, Callable[[], None]]]
+    later: str = ""  # what is said where it is left without an answer
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,6 +162,8 @@ class Then:
     session: Session
     views: dict[Any, View]
     cells: Cells
+    memo: Memo
+    made: dict[str, changes.Made] = field(default_factory=dict)
 
 
 def was(trial: Trial) -> Session:
@@ -180,6 +194,7 @@ class Desk:
     width: int = 80
     height: int = 24
     grid_height: int = 19  # lines the grid has on the screen
+    grid_width: int = 80
     view_name: str = SHEET
     subject: Path = ("bus",)
     cursors: dict[tuple[str, Path], Cursor] = field(default_factory=dict)
@@ -199,16 +214,23 @@ class Desk:
     label: str = ""  # of the last edit, told with what it changed
     told: str = ""  # what was told of it so far; later stages of the results may tell more
     options: Options = field(default_factory=Options)
+    failed: int = 0  # the generation whose results could not be calculated, by a fault of ours
     share: float = 0.0  # how far the longest stage of the results has come
     job: Job | None = None  # a longer calculation that was asked for, and its progress
     start_job: Callable[[Work], None] = lambda _: None
     later: Callable[[Callable[[], None]], None] = lambda do: do()  # from a job's thread: do it in that of the screen
+    keeper: Any = None  # of the journal, and of work that earlier sessions left; see ``recovery``
     before: Any = None  # the result before it
     built_before: Built | None = None
     cells: Cells = field(default_factory=dict)
-    memo: dict[str, tuple[tuple[Any, ...], Any]] = field(default_factory=dict)
+    memo: Memo = field(default_factory=dict)
     _stamp: Any = None
     _views: dict[tuple[str, Path], View] = field(default_factory=dict)
+    aside: Callable[[Callable[[], Any], Callable[[Any], None]], None] = lambda make, done: done(make())
+    _ordered: dict[tuple[int, str], tuple[Any, ...]] = field(default_factory=dict)
+    greeting: str = ""  # what is wrong and where to go, said once at the start
+    greeted: bool = False
+    _bad_of: tuple[Outcome | None, frozenset[Path]] = (None, frozenset())
     _then: Then | None = None  # the views of the reference
     _flat_of: View | None = None
     _lines: list[tuple[Section, Row | None]] = field(default_factory=list)
@@ -234,13 +256,34 @@ class Desk:
         return Context(
             self.session,
             self.corner,
-            bad_cells(self.session.outcome),
+            self._bad(),
             subject or self.subject,
             self.ascii_only,
             self.options,
             self.cells,
             self.memo,
+            self._order,
         )
+
+    def _bad(self) -> frozenset[Path]:
+        outcome = self.session.outcome
+        if self._bad_of[0] is not outcome:
+            self._bad_of = (outcome, bad_cells(outcome))
+        return self._bad_of[1]
+
+    def _order(self, memo: Memo, name: str, made_of: tuple[Any, ...], make: Callable[[], Any]) -> None:
+        """Have something calculated aside that a view waits for, once; see ``Context.fetch``."""
+        ordered = self._ordered.get((id(memo), name))
+        if ordered is not None and all(a is b for a, b in zip(ordered, made_of, strict=True)):
+            return
+        self._ordered[id(memo), name] = made_of
+
+        def done(found: Any) -> None:
+            memo[name] = (made_of, found)
+            self._ordered.pop((id(memo), name), None)
+            self._stamp = None  # the views that wait for it are made anew
+
+        self.aside(make, done)
 
     def view(self) -> View:
         """The present view, made anew only when something it shows has changed."""
@@ -252,7 +295,14 @@ class Desk:
     def make(self, name: str, subject: Path) -> View:
         """A view by its name, from the cache unless something it shows has changed."""
         reference = self.session.reference
-        stamp = (self.session.generation, id(self.session.outcome), self.corner, self.options, id(reference))
+        stamp = (
+            self.session.generation,
+            id(self.session.outcome),
+            self.corner,
+            self.options,
+            id(reference),
+            id(self.session.recovered),
+        )
         if self._stamp != stamp:
             self._stamp = stamp
             self._views.clear()
@@ -268,7 +318,7 @@ class Desk:
             return view
         then = self._then
         if then is None or then.session.reference is not reference:
-            then = self._then = Then(was(reference), {}, {})
+            then = self._then = Then(was(reference), {}, {}, {})
         there = changes.same_row(subject, self.session.document, reference.document)
         if there is None:
             return view
@@ -276,8 +326,10 @@ class Desk:
         if key not in then.views:
             context = self.context(there)
             bad = bad_cells(reference.outcome)
-            then.views[key] = VIEWS[name](replace(context, session=then.session, bad=bad, cells=then.cells, memo={}))
-        return changes.against(view, then.views[key], self.session.document, reference.document)
+            own = replace(context, session=then.session, bad=bad, cells=then.cells, memo=then.memo)
+            then.views[key] = VIEWS[name](own)
+        made = then.made.setdefault(name, {})
+        return changes.against(view, then.views[key], self.session.document, reference.document, made)
 
     def lines(self) -> list[tuple[Section, Row | None]]:
         self.view()
@@ -326,14 +378,28 @@ class Desk:
 
     # -- what happens
 
+    def let_go(self) -> str:
+        """Close the editor or list in which a fault of ours was met; words for where the text that was typed is now."""
+        mode = self.mode
+        if not isinstance(mode, Edit | Pick):
+            return ""
+        self.mode = None
+        if isinstance(mode, Pick) or not mode.text:
+            return ""
+        self.cell_clip = mode.text
+        return "; v pastes what was typed"
+
     def say(self, text: str, tone: str = "") -> None:
         self.message, self.tone = text, tone
 
     def key(self, name: str, character: str | None = None) -> None:
         """One key, as textual names it, with the character it types if it types one."""
-        if name.startswith("alt+") and len(name) == 5:  # Escape and a letter right behind it arrive as one
+        if name.startswith("alt+"):  # Escape and a key right behind it arrive as one
             self.key("escape")
-            name, character = name[4:], name[4:]
+            name = name.removeprefix("alt+")
+            if name.startswith("shift+") and len(name) == 7:
+                name = name[6].upper()
+            character = name if len(name) == 1 else character
         if isinstance(self.mode, Edit):
             self._edit_key(self.mode, name, character)
         elif isinstance(self.mode, Pick):
@@ -355,8 +421,8 @@ class Desk:
             edit = self.mode
             edit.text = (edit.text[: edit.caret] + clean + edit.text[edit.caret :])[:LONGEST]
             edit.caret = min(edit.caret + len(clean), len(edit.text))
-        elif isinstance(self.mode, Pick):
-            self.mode.query += clean[:40]
+        elif isinstance(self.mode, Pick) and not self.mode.text:
+            self.mode.query, self.mode.index = (self.mode.query + clean)[:40], 0
 
     def accept(self, outcome: Outcome) -> bool:
         """Take results; tell what the last edit changed."""
@@ -373,6 +439,11 @@ class Desk:
                 self.say(self.told)
         if outcome.complete:
             self.label = self.told = ""
+        if not self.greeted:
+            if self.message in ("", self.greeting):
+                self.greeting, tone = guide.next_step(self.session)
+                self.say(self.greeting, tone)
+            self.greeted = outcome.complete
         return True
 
     def _left_out(self, outcome: Outcome) -> str:
@@ -422,7 +493,7 @@ class Desk:
         if commands.ALL not in command.where and self.view_name not in command.where:
             self.say(f"{commands.key_text(command.keys[0])} is for the view: {', '.join(command.where)}")
             return
-        if command.group != "move":
+        if command.group != "move" and command.name != "read":  # which shows the message too
             self.say("")
         self.run(command.name)
 
@@ -430,8 +501,8 @@ class Desk:
         """Carry out a command; what it cannot do is said on the message line."""
         try:
             self.of_view.get((self.view_name, name), self.actions[name])(self)
-        except ProjectError as error:
-            self.say(str(error), "fail")
+        except REFUSED as error:
+            self.say(refusal(error), "fail")
 
     def start_edit(self, text: str | None = None) -> None:
         """Open the editor in the cell: with ``text`` in place of its value, or (None) with what was typed before."""
@@ -495,8 +566,8 @@ class Desk:
             return
         try:
             edit.accept(edit.text)
-        except ProjectError as error:
-            edit.error = str(error)
+        except REFUSED as error:
+            edit.error = refusal(error)
             return
         if self.mode is edit:
             self.mode = None
@@ -526,26 +597,26 @@ class Desk:
             self.mode = None
             try:
                 pick.accept(shown[min(pick.index, len(shown) - 1)][1])
-            except ProjectError as error:
-                self.say(str(error), "fail")
+            except REFUSED as error:
+                self.say(refusal(error), "fail")
         elif name in ("backspace", "ctrl+h"):
             pick.query, pick.index = pick.query[:-1], 0
-        elif character and character.isprintable() and len(pick.query) < 40:
+        elif character and character.isprintable() and len(pick.query) < 40 and not pick.text:
             pick.query, pick.index = pick.query + character, 0
 
-    def ask(self, question: str, options: dict[str, tuple[str, Callable[[], None]]]) -> None:
-        self.mode = Ask(question, options)
+    def ask(self, question: str, options: dict[str, tuple[str, Callable[[], None]]], later: str = "") -> None:
+        self.mode = Ask(question, options, later)
 
     def _ask_key(self, ask: Ask, name: str) -> None:
         if name == "escape":
             self.mode = None
-            self.say("")
+            self.say(ask.later)
         elif name in ask.options:
             self.mode = None
             try:
                 ask.options[name][1]()
-            except ProjectError as error:
-                self.say(str(error), "fail")
+            except REFUSED as error:
+                self.say(refusal(error), "fail")
 
     # -- moving
 
@@ -576,7 +647,7 @@ class Desk:
     def scroll(self, width: int, height: int) -> None:
         """Bring the cursor into sight of ``height`` lines of the grid; headings above its row stay in sight with it."""
         lines, cursor = self.lines(), self.cursor
-        self.grid_height = height
+        self.grid_height, self.grid_width = height, width
         at = self.row_index()
         one = len(self.view().sections) == 1  # a single heading is pinned and takes a line of its own
         top = cursor.top
@@ -633,23 +704,56 @@ class Desk:
         if isinstance(self.mode, Edit):
             if self.mode.refused:
                 return [("Esc", "go back")]
-            return [("Enter", "accept"), ("Esc", "cancel"), ("Home/End", "move"), ("Ctrl+U", "clear")]
+            keys = [("Enter", "accept"), ("Esc", "cancel"), ("Left/Right", "move"), ("Backspace", "delete")]
+            return [*keys, ("Ctrl+U", "clear")]
+        if isinstance(self.mode, Pick) and self.mode.text:
+            return [("Up/Down", "read on"), ("Enter", "close"), ("Esc", "close")]
         if isinstance(self.mode, Pick):
             return [("Up/Down", "choose"), ("Enter", "take"), ("type", "to narrow"), ("Esc", "cancel")]
         if isinstance(self.mode, Ask):
             return [(commands.key_text(k), label) for k, (label, _) in self.mode.options.items()] + [("Esc", "go back")]
-        pairs = commands.hints(self.view_name)
+        pairs = [(key, word) for key, word in self._own_words(commands.hints(self.view_name)) if word]
         if self.job is not None and not self.job.stop:
             return [("Esc", "stop"), *pairs]
         if self.session.reference is not None and self.view_name != "trials":
             pairs = [("K", "keep or drop"), *pairs]
+        if self.options.first is not None:
+            pairs = [("P", "second cell"), *pairs]
         return pairs if self.view_name == SHEET else [("Esc", "back"), *pairs]
+
+    def _own_words(self, pairs: list[tuple[str, str]]) -> list[tuple[str, str]]:
+        """The words of the hints as they are for the cell under the cursor; "" where a key does nothing here."""
+        _, cell = self.here()
+        spec = edits.spec_at(cell.path) if cell.path is not None else None
+        if spec is None:
+            word = "go there" if cell.leads is not None else ""
+        elif spec.kind in (schema.CHOICE, schema.FILTER, schema.PART):
+            word = "choose"
+        else:  # where letters are typed, Enter comes first: until then they are commands
+            word = "type text" if spec.kind in schema.PLAIN else "edit"
+        own = {"edit": word, "undo": "undo" if self.session.done else ""}
+        if self.view_name in TYPED:  # as wide as the longest, so that the words behind it stay where they are
+            own["edit"] = word.ljust(len("type text"))
+        told = [(key, own.get(text, text)) for key, text in pairs]
+        return [(key if word.strip() else " " * len(key), word) for key, word in told]
 
 
 def _nothing(_: str) -> None:
     return
 
 
+def refusal(error: Exception) -> str:
+    """Why a command could not be carried out, as a sentence."""
+    if isinstance(error, OSError):  # a folder that is gone, a name that cannot be looked up: no fault of ours
+        log.record(error)
+        return f"the system refused that: {printable((error.strerror or str(error)).lower(), 80)}."
+    return str(error)
+
+
 def command_items() -> list[tuple[str, str]]:
     """All commands for the list of commands."""
-    return [(f"{commands.keys_text(c):<18} {c.label}", c.name) for c in COMMANDS]
+    items = []
+    for command in COMMANDS:
+        key, *others = map(commands.key_text, command.keys)
+        items.append((f"{key:<9} {command.label}" + (f" (or {', '.join(others)})" if others else ""), command.name))
+    return items

@@ -2,11 +2,18 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
-from budget.ui.view import Section
+from rich.cells import cell_len
+
+from budget.ui.view import RIGHT, Row, Section
 
 WIDE = 100  # from this width on, columns take their wide form
+
+
+def size(text: str) -> int:
+    """How many cells of the terminal a text takes."""
+    return len(text) if text.isascii() else cell_len(text)
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,6 +54,20 @@ def layout(section: Section, width: int, left: int) -> tuple[Slot, ...]:
         slots.append(Slot(index, x, widths[index]))
         x += widths[index] + 1
     return tuple(slots)
+
+
+def rooms(section: Section, row: Row, width: int, left: int) -> tuple[Slot, ...]:
+    """Where the cells of a row stand; the last one, if it is a text, may run on over the empty columns behind it."""
+    return run_on(layout(section, width, left), row, width)
+
+
+def run_on(slots: tuple[Slot, ...], row: Row, width: int) -> tuple[Slot, ...]:
+    """``rooms`` for slots that are known."""
+    last = len(row.cells) - 1
+    shown = slots if not slots or slots[-1].column <= last else tuple(s for s in slots if s.column <= last)
+    if len(shown) < len(slots) and shown and shown[-1].column == last and row.cells[last].align != RIGHT:
+        return (*shown[:-1], replace(shown[-1], width=width - shown[-1].x))
+    return shown
 
 
 def scroll_to(section: Section, width: int, left: int, column: int) -> int:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import textwrap
 from dataclasses import replace
 
+from budget import glossary
 from budget.project import edits, schema
 from budget.project.document import Path
 from budget.report import words
@@ -73,9 +74,9 @@ def checks(context: Context) -> View:
     columns = (
         Column("state", 7),
         Column("check", 15),
-        Column("of", 8, most=14),
-        Column("value", 8, RIGHT),
-        Column("limit", 8, RIGHT),
+        Column("of", 7, most=14),
+        Column("value", 9, RIGHT),
+        Column("limit", 9, RIGHT),
         Column("margin", 11, RIGHT, sense=1),
         Column("where", 16, most=24),
         Column("note", 20, most=60),
@@ -104,20 +105,7 @@ def faults(context: Context) -> View:
     if not rows:
         rows.append(Row(("none",), (Cell("nothing: every cell can be read"),)))
     columns = (Column("kind", 8), Column("where", 24, most=36), Column("what", 44, most=110))
-    return View("faults", "cells that cannot be read, and warnings", (Section(columns, tuple(rows)),))
-
-
-GLOSSARY = (
-    ("corner", "one load case at one line: low, nominal or high voltage of the source"),
-    ("worst", "the corner with the least margin; the default of every view"),
-    ("allowed", "rated current of a filter, derated for the mounting temperature"),
-    ("wanted", "what the rules leave of a limit: thin is inside the limit, beyond the wanted"),
-    ("out, in", "output power at the rails; input power at the terminals (a filter: of all behind it)"),
-    ("heat", "what does not come out again: converter and lead; a filter's row adds all behind it"),
-    ("at V", "voltage at the terminals; of a filter: behind it; of the bus: where filters are tied"),
-    ("marks", "! cannot be read or over   ~ being calculated   * not saved   FAIL, thin, ok, no data"),
-    ("typing", "2.2 uH, 4.5 A, 85 %, off; 4.7u takes the unit of its field; 2 * 1.5 A + 200 mA adds up"),
-)
+    return View("faults", "bad cells and warnings", (Section(columns, tuple(rows)),))
 
 
 def help_view(context: Context) -> View:
@@ -140,7 +128,7 @@ def help_view(context: Context) -> View:
                 wrapped(commands.keys_text(command), command.label)
     line("", "")
     line("Words", "")
-    for word, meaning in GLOSSARY:
+    for word, meaning in glossary.WORDS:
         wrapped(word, meaning)
     return View(
         "help",

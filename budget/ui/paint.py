@@ -2,28 +2,35 @@
 
 from __future__ import annotations
 
+import unicodedata
 from dataclasses import replace
+from functools import cache
 
 from rich.cells import cell_len, set_cell_size
 
-from budget.project import edits, read, schema
-from budget.project.problems import place
+from budget.project import edits
 from budget.report import words
 from budget.session import Session
 from budget.ui import plot
 from budget.ui.desk import NOT_COMPARED, Ask, Desk, Edit, Pick
-from budget.ui.layout import Slot, layout
+from budget.ui.layout import Slot, layout, run_on, size
 from budget.ui.sheet import words_only
+from budget.ui.told import MORE, Line, about, breaks, describe, ended, part, placed, plain, typing
 from budget.ui.view import RIGHT, Cell, Row, Section, View
 
-Span = tuple[str, str]  # text, tone
-Line = list[Span]
+__all__ = ["Line", "frame", "plain"]
 
-OWN_CORNER = frozenset({"spectrum", "switchon", "stable", "trials"})  # their titles name the corner
+OWN_CORNER = frozenset({"spectrum", "switchon", "stable", "trials", "reach", "map"})  # their titles tell it
 SIDE = 130  # from this width on there is a second pane at the right
 SIDE_WIDTH = 52
 LEAST_BELOW = 6  # free lines below the sheet from which on the checks stand there
 SMALLEST = (60, 12)
+LEAST_PICTURE = 11  # lines from which on a picture leaves room for its table
+BELOW = 3  # lines below the grid for what is told of the cell and for the message
+NAME = 28  # characters of a view's name before which words behind it are left out
+ALWAYS = ("?", "Space")  # keys that stand on every hint line: they lead to all others
+CUT = "+"  # the end of a text that goes on
+_SIGNS = {"\u00b5": "u", "\u03bc": "u", "\u2126": "O", "\u03a9": "O", "\u00b0": "o", "\u00d7": "x", "\u2212": "-"}
 
 
 def frame(desk: Desk, width: int, height: int) -> list[Line]:
@@ -31,7 +38,8 @@ def frame(desk: Desk, width: int, height: int) -> list[Line]:
     desk.width, desk.height = width, height
     if width < SMALLEST[0] or height < SMALLEST[1]:
         text = f"needs {SMALLEST[0]}x{SMALLEST[1]}; this is {width}x{height}"
-        return [_fit([(text if y == 0 else "", "")], width, desk.ascii_only) for y in range(height)]
+        told = [text[start:end] for start, end in breaks(text, width)][:height]
+        return [_fit([(line, "")], width, desk.ascii_only) for line in [*told, *[""] * (height - len(told))]]
     body = height - 5
     main = width - SIDE_WIDTH - 1 if width >= SIDE else width
     below = body - len(desk.lines()) - 1
@@ -51,13 +59,30 @@ def frame(desk: Desk, width: int, height: int) -> list[Line]:
             [*line, ("|" if desk.ascii_only else "\u2502", "pale"), *extra]
             for line, extra in zip(lines, side, strict=True)
         ]
-    rows = [_title(desk), *lines, *_info(desk), _message(desk, width), _hints(desk, width)]
+    rows = [_title(desk), *lines, *_below(desk, width), _hints(desk, width)]
     return [_fit(row, width, desk.ascii_only) for row in rows]
 
 
-def plain(line: Line) -> str:
-    """A line without its tones."""
-    return "".join(text for text, _ in line)
+def bare(desk: Desk, width: int, height: int, told: str) -> list[Line]:
+    """The screen where not even the sheet can be painted: words that cannot fail, and the keys that help still."""
+    texts = [
+        f"The sheet cannot be painted, a fault of this program{told}.",
+        "Nothing is lost. Keys that work: u undo, w save, W save under another name, q quit.",
+    ]
+    if isinstance(desk.mode, Ask):
+        texts += [desk.mode.question, "  ".join(f"{key} {label}" for key, (label, _) in desk.mode.options.items())]
+    elif isinstance(desk.mode, Edit):
+        texts += [f"{desk.mode.label}: {desk.mode.text}", desk.mode.error]
+    else:
+        texts.append(desk.message)
+    lines: list[Line] = []
+    for text in texts:
+        rest = words_only(text)
+        while rest:
+            lines.append([(rest[:width], "")])
+            rest = rest[width:]
+    lines = [*lines[:height], *([[("", "")]] * max(0, height - len(lines)))]
+    return [_fit(line, width, desk.ascii_only) for line in lines]
 
 
 def _fit(line: Line, width: int, ascii_only: bool) -> Line:
@@ -68,17 +93,17 @@ def _fit(line: Line, width: int, ascii_only: bool) -> Line:
         if not text.isprintable():  # no control character of a file may reach the terminal
             text = words_only(text)
         if ascii_only and not text.isascii():
-            text = text.encode("ascii", "replace").decode()
-        size = len(text) if text.isascii() else cell_len(text)
-        if size > room:
-            text, size = set_cell_size(text, room), room
+            text = "".join(map(_ascii, text))
+        taken = size(text)
+        if taken > room:
+            text, taken = set_cell_size(text, room), room
         if not text:
             continue
         if spans and spans[-1][1] == tone:
             spans[-1] = (spans[-1][0] + text, tone)
         else:
             spans.append((text, tone))
-        room -= size
+        room -= taken
         if room <= 0:
             break
     if room > 0:
@@ -89,33 +114,57 @@ def _fit(line: Line, width: int, ascii_only: bool) -> Line:
     return spans
 
 
+@cache
+def _ascii(character: str) -> str:
+    """What stands for a character where only ASCII can be shown, in as many cells."""
+    if character.isascii():
+        return character
+    cells = cell_len(character)
+    alone = _SIGNS.get(character) or unicodedata.normalize("NFKD", character)[:1]
+    return alone if cells == 1 and alone.isascii() and alone.isprintable() else "?" * cells
+
+
 def _pad(text: str, width: int, align: str) -> str:
-    size = len(text) if text.isascii() else cell_len(text)
-    if size > width:
-        return set_cell_size(text, width)
-    return " " * (width - size) + text if align == RIGHT else text + " " * (width - size)
-
-
-def _size(text: str) -> int:
-    return len(text) if text.isascii() else cell_len(text)
+    taken = size(text)
+    if taken > width:
+        return set_cell_size(text, width - 1) + CUT if width > 1 else set_cell_size(text, width)
+    return " " * (width - taken) + text if align == RIGHT else text + " " * (width - taken)
 
 
 def _title(desk: Desk) -> Line:
     session = desk.session
     name = desk.view().title if desk.view_name != "sheet" else session.title
-    state = _state(session, desk)
-    corner = [] if desk.view_name in OWN_CORNER else [(" | ", "pale"), (desk.corner_title(), "")]
+    wanted = min(size(name) + 2 * session.dirty, NAME)
+    for brevity in range(3):
+        tail = _tail(desk, brevity)
+        room = desk.width - 11 - sum(size(text) for text, _ in tail)
+        if room >= wanted:
+            break
+    name = name if size(name) <= room else set_cell_size(name, max(0, room - 2)) + ".."
+    return [(" budget ", "bar"), (f" {name}{' *' if session.dirty else ''}", "head"), *tail]
+
+
+def _tail(desk: Desk, brevity: int) -> Line:
+    """What stands behind the name of the view; the briefer, the fewer words, until the name has room."""
+    session = desk.session
+    corner: Line = []
+    if desk.view_name not in OWN_CORNER:
+        brief = "worst" if desk.corner is None else ", ".join(desk.corner)
+        corner = [(" | ", "pale"), (brief if brevity else desk.corner_title(), "")]
     if session.reference is not None and desk.view_name not in NOT_COMPARED:
         corner += [(" | ", "pale"), (f"vs {words_only(session.reference.name)}", "thin")]
-    tail: Line = [*corner, (" | ", "pale"), *state]
-    room = desk.width - 11 - sum(_size(text) for text, _ in tail)
-    name = name if _size(name) <= room else set_cell_size(name, max(0, room - 2)) + ".."
-    return [(" budget ", "bar"), (f" {name}{' *' if session.dirty else ''}", "head"), *tail]
+    if session.read_only:
+        corner = [(" | ", "pale"), ("read-only", "thin"), *corner]
+    state = _state(session, desk)
+    some = [span for span in state if span[1] != "no data"]
+    return [*corner, (" | ", "pale"), *(some if brevity == 2 and some else state)]
 
 
 def _state(session: Session, desk: Desk) -> Line:
     if desk.job is not None:
         return [(f"~ {desk.job.label} {desk.job.fraction:.0%}", "thin")]
+    if desk.failed == session.generation:
+        return [("! calculation failed", "fail")]
     if session.outcome is None or (desk.pending and not session.fresh):
         return [("~ calculating", "thin")]
     if desk.pending and not session.complete:
@@ -180,11 +229,11 @@ def _heading(section: Section, width: int, left: int) -> Line:
     text, x = "", 0
     for slot in slots:
         column = section.columns[slot.column]
-        text += " " * (slot.x - x) + _pad(column.title, slot.width, column.align)
+        gap = "<" if slot.column > 1 and x and slot is slots[1] else " "  # more columns at the left
+        text += gap * (slot.x - x) + _pad(column.title, slot.width, column.align)
         x = slot.x + slot.width
-    more = ">" if slots and slots[-1].column < len(section.columns) - 1 else ""
-    if more and len(text) < width:
-        text = _pad(text, width - 1, "left") + more
+    if slots and slots[-1].column < len(section.columns) - 1:  # more columns at the right
+        text = _pad(text[: width - 1], width - 1, "left") + ">"
     return [(_pad(text, width, "left"), "heading")]
 
 
@@ -194,22 +243,17 @@ def _row(
     spans: Line = []
     x = 0
     last = len(row.cells) - 1
-    for slot in slots:
-        if slot.column > last:
-            break
+    for slot in run_on(slots, row, width):
         cell = row.cells[slot.column]
         if slot.x > x:
             spans.append((" " * (slot.x - x), ""))
         room = slot.width
-        if slot.column == last and slot is not slots[-1]:
-            room = width - slot.x if cell.align != RIGHT else room  # a last text cell may run on over empty columns
         chosen = column >= 0 and (slot.column == column or (slot.column == last and column > last))
         if chosen and desk is not None and isinstance(desk.mode, Edit) and desk.mode.path is not None:
             spans += _editor(desk.mode, room)
         else:
-            text = _text(cell, room, stale)
-            if slot.column == 0 and row.depth:
-                text = _pad("  " * row.depth + _text(cell, room - 2 * row.depth, stale), room, "left")
+            indent = 2 * row.depth if slot.column == 0 else 0
+            text = " " * indent + _text(cell, max(1, room - indent), stale)
             spans.append((text, "cursor" if chosen else cell.tone))
         x = slot.x + room
     if x < width:
@@ -218,13 +262,10 @@ def _row(
 
 
 def _text(cell: Cell, width: int, stale: bool) -> str:
+    """The text of a cell; one that does not fit, number or not, is never shown with its end cut off unsaid."""
     mark = cell.mark or ("~" if stale and cell.calculated and cell.text and cell.text != "~" else "")
     room = width - len(mark)
-    text = cell.text
-    if _size(text) > room and cell.short:
-        text = cell.short
-    if _size(text) > room and cell.align == RIGHT and room > 0:
-        text = text[: room - 1] + "+"  # a number is never shown with its end cut off unsaid
+    text = cell.short if cell.short and size(cell.text) > room else cell.text
     if mark and cell.align == RIGHT:
         return _pad(mark + text, width, RIGHT)
     return mark + _pad(text, room, cell.align)
@@ -259,6 +300,8 @@ def _picture(desk: Desk, width: int, height: int) -> list[Line]:
     """A view with a picture: the table of its lines beside it where there is room, below it otherwise."""
     picture = desk.view().plot
     assert picture is not None
+    if height < LEAST_PICTURE:
+        return _grid(desk, width, height)
     row, _ = desk.here()
     picture = replace(picture, cursor=row.mark if row else None)
     least = max(sum(c.width + 1 for c in section.columns) for section in desk.view().sections)
@@ -290,7 +333,8 @@ def _pick(pick: Pick, width: int, height: int) -> list[Line]:
     room = max(1, height - 3)
     top = max(0, min(index - room // 2, len(shown) - room))
     edge = "-" * width
-    lines: list[Line] = [[(_pad(f"- {pick.title}: {pick.query}_ ", width, "left"), "bar")]]
+    head = f"- {pick.title} " if pick.text else f"- {pick.title}: {pick.query}_ "
+    lines: list[Line] = [[(_pad(head, width, "left"), "bar")]]
     for k in range(top, min(top + room, len(shown))):
         lines.append(
             [(_pad(f"{'>' if k == index else ' '} {shown[k][0]}", width, "left"), "cursor" if k == index else "")]
@@ -304,121 +348,37 @@ def _pick(pick: Pick, width: int, height: int) -> list[Line]:
 # -- the lines below
 
 
-def _info(desk: Desk) -> list[Line]:
-    """Two lines about the cell under the cursor; while typing, the text and what it comes to."""
+def _below(desk: Desk, width: int) -> list[Line]:
+    """Three lines: what is told of the cell under the cursor, or typed; then the message, which ends on the last one.
+
+    A message has one line; a question, a refusal or a mishap as many as it needs.
+    """
     mode = desk.mode
+    message = _message(desk)
+    paragraphs = typing(desk, mode) if isinstance(mode, Edit) else about(desk)
+    needed = len(breaks(plain(message), width)) if plain(message) else 0
     if isinstance(mode, Edit):
-        return _info_edit(desk, mode)
-    row, cell = desk.here()
-    if row is None:
-        return [[("", "")], [("", "")]]
-    summary = desk.view().summary
-    if summary:
-        info = "; ".join(part for part in (cell.change, cell.info) if part)
-        return [[(info, "")], [(_split(summary, desk.width)[0], "head")]]
-    if cell.path is None and cell.change:
-        return [[(_split(cell.info or cell.text, desk.width)[0], "")], [_changed(cell)]]
-    if cell.path is None:
-        second = "Enter goes to what it follows from" if cell.leads else ""
-        first, rest = _split(cell.info or cell.text, desk.width)
-        return [[(first, "")], [(rest, "")] if rest else [(second, "pale")]]
-    spec = edits.spec_at(cell.path)
-    help_text = spec.help if spec else ""
-    where = place(desk.session.document, cell.path)
-    problem = _problem(desk, cell)
-    if problem:
-        first, rest = _split(f"{where}: ! {problem}", desk.width)
-        return [[(first, "fail")], [(rest, "") if rest else (_second(spec, cell), "pale")]]
-    last = _changed(cell) if cell.change else (_second(spec, cell), "pale")
-    return [[(f"{where}: ", "head"), (help_text, "")], [last]]
+        taken = min(max(needed, 1), BELOW - 1)
+    else:
+        taken = min(needed, BELOW if isinstance(mode, Ask) or desk.tone in ("fail", "thin") else 1)
+    if isinstance(mode, Edit):
+        upper = paragraphs[: BELOW - taken]
+    else:
+        upper = placed(paragraphs, width, BELOW - taken) if taken < BELOW else []
+    lower = placed([message], width, taken) if needed > 1 else [message][:taken]
+    if taken == 1 and needed > 1:
+        lower = [_shortened(message, width)]
+    return [*upper, *[[("", "")]] * (BELOW - len(upper) - len(lower)), *lower]
 
 
-def _changed(cell: Cell) -> Span:
-    """What became of a cell against the reference."""
-    tone = "fail" if cell.change.endswith("worse") else "ok" if cell.change.endswith("better") else "head"
-    return f"against the reference: {cell.change}", tone
+def _shortened(message: Line, width: int) -> Line:
+    """Whole findings of a message as far as they fit, else as much as fits."""
+    text = plain(message)
+    at = text.rfind(";", 0, width - len(MORE) - 1)
+    return ended(part(message, 0, at + 1) if at > width // 2 else message, width, MORE)
 
 
-def _split(text: str, width: int) -> tuple[str, str]:
-    """A text over two lines, broken at a space."""
-    if _size(text) <= width:
-        return text, ""
-    at = text.rfind(" ", 0, width)
-    return (text[:at], text[at + 1 :]) if at > 0 else (text[:width], text[width:])
-
-
-def _problem(desk: Desk, cell: Cell) -> str:
-    """What is wrong with the cell; for the name of a marked row, what is wrong with the row."""
-    outcome = desk.session.outcome
-    problems = outcome.built.problems if outcome and cell.path is not None else ()
-    for p in problems:
-        if edits.cell_of(p.path) == cell.path:
-            return p.text
-    if cell.mark == "!" and cell.path is not None:
-        base = edits.owner(cell.path)
-        for p in problems:
-            if p.error and p.path[: len(base)] == base:
-                return f"{p.place} {p.text}"
-    return ""
-
-
-def _second(spec: schema.Field | None, cell: Cell) -> str:
-    return "; ".join(part for part in (cell.info, describe(spec) if spec else "") if part)
-
-
-def describe(spec: schema.Field) -> str:
-    """Unit, default and limits of a field in words."""
-    from budget import quantity
-
-    parts = []
-    cell = spec.fields[-1] if spec.kind == schema.CURVE else spec
-    if cell.kind in quantity.KINDS:
-        kind = quantity.KINDS[cell.kind]
-        parts.append(f"unit {kind.unit}" if kind.unit else "a fraction or %")
-        limits = schema.limits_text(cell, read.show_limit)
-        if limits:
-            parts.append(limits)
-    if spec.choices:
-        parts.append("one of " + ", ".join(spec.choices))
-    if spec.otherwise:
-        parts.append(f"default {spec.otherwise}")
-    elif isinstance(spec.default, float) and spec.kind in quantity.KINDS:
-        parts.append(f"default {read.show_limit(spec.default, spec.kind)}")
-    elif isinstance(spec.default, str) and spec.default:
-        parts.append(f"default {spec.default}")
-    if spec.required:
-        parts.append("needed")
-    return "; ".join(parts)
-
-
-def _info_edit(desk: Desk, edit: Edit) -> list[Line]:
-    if edit.refused:
-        return [[(edit.refused, "thin")], [("", "")]]
-    before, after = edit.text[: edit.caret], edit.text[edit.caret :]
-    caret, rest = (after[:1] or " "), after[1:]
-    label = edit.label or (place(desk.session.document, edit.path) if edit.path else "")
-    room = max(10, desk.width - len(label) - 24)
-    if len(before) > room:
-        before = before[-room:]
-    spec = edits.spec_at(edit.path) if edit.path else None
-    comes_to = _comes_to(spec, edit.text)
-    first: Line = [(f"{label}: ", "head"), (before, ""), (caret, "cursor"), (rest, "")]
-    if comes_to:
-        first.append((f"  = {comes_to}", "pale"))
-    return [first, [(spec.help if spec else "", "pale")]]  # its unit, default and limits stand on the message line
-
-
-def _comes_to(spec: schema.Field | None, text: str) -> str:
-    """What the text typed so far is worth, where it is more than a plain number with a unit."""
-    if spec is None or not text.strip():
-        return ""
-    from budget.ui.sheet import scaled
-
-    shown = scaled(spec, text)
-    return shown if shown and shown != text.strip() else ""
-
-
-def _message(desk: Desk, width: int) -> Line:
+def _message(desk: Desk) -> Line:
     mode = desk.mode
     if isinstance(mode, Ask):
         return [(mode.question, "thin")]
@@ -427,22 +387,22 @@ def _message(desk: Desk, width: int) -> Line:
     if isinstance(mode, Edit) and mode.path is not None:
         spec = edits.spec_at(mode.path)
         return [(describe(spec) if spec else "", "pale")]
-    text = desk.message
-    if not text and mode is None and desk.view().summary:
-        return [(_split(desk.view().summary, width)[1], "head")]
-    if _size(text) > width:  # whole findings as far as they fit, then as much as fits
-        at = text.rfind(";", 0, width)
-        text = text[:at] if at > width // 2 else text[: width - 3] + "..."
-    return [(text, desk.tone)]
+    return [(desk.message, desk.tone)]
 
 
 def _hints(desk: Desk, width: int) -> Line:
-    spans: Line = []
-    used = 0
-    for key, word in desk.hint_pairs():
-        size = len(key) + len(word) + 3
-        if used + size > width:
+    """As many keys as fit, and always those that lead to all others."""
+    pairs = desk.hint_pairs()
+    always = [pair for pair in pairs if pair[0] in ALWAYS]
+    room = width - sum(len(key) + len(word) + 3 for key, word in always)
+    shown: list[tuple[str, str]] = []
+    for key, word in pairs:
+        room -= 0 if (key, word) in always else len(key) + len(word) + 3
+        if room < 0:
             break
-        spans += [(f" {key} ", "bar"), (f"{word} ", "")]
-        used += size
+        if (key, word) not in always:
+            shown.append((key, word))
+    spans: Line = []
+    for key, word in [*shown, *always]:
+        spans += [(f" {key} ", "bar" if key.strip() else ""), (f"{word} ", "")]
     return spans

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from budget.report import words
 from budget.ui.plot import Plot, Trace
@@ -10,6 +10,11 @@ from budget.ui.sheet import Context, stale, words_only
 from budget.ui.spectrum import nothing, shown
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
+if TYPE_CHECKING:
+    from budget.engine.lines import Lines
+    from budget.engine.plan import Meeting
+
+MOST = 300  # rows of each table
 _MEET = (
     Column("meet in one bandwidth", 21, most=26),
     Column("orders", 8),
@@ -26,6 +31,14 @@ _BEAT = (
 )
 
 
+def _meetings(lines: Lines) -> tuple[Meeting, ...]:
+    """All meetings; if there are too many to be shown, those with the most pairs of lines first."""
+    from budget.engine.plan import meetings
+
+    found = meetings(lines)
+    return found if len(found) <= MOST else tuple(sorted(found, key=lambda m: -m.count))
+
+
 def plan(context: Context) -> View:
     """Meetings of lines by pair of clocks, then beats; above them the scan of one clock once that was asked for."""
     found, result = shown(context), context.session.latest("emissions")
@@ -34,21 +47,28 @@ def plan(context: Context) -> View:
         return View("plan", "frequency plan", (Section((Column("", 60, most=100),), (row,)),))
     meet: list[Row] = []
     if found is not None:
-        from budget.engine.plan import meetings
-
-        for m in meetings(found[1]):
+        known = context.fetch("meetings", (found[1],), lambda: _meetings(found[1]))
+        for m in (known or ())[:MOST]:
             pair = words_only(" and ".join(m.clocks))
             info = (
                 f"{pair}: {m.count} pairs of lines can stand in one receiver bandwidth and add up; the lowest is shown"
             )
             meet.append(_row(("meet", *m.clocks), pair, m.orders, m.low, m.high, str(m.count), info))
     beats: list[Row] = []
-    for b in result.emissions.beats:
+    for b in result.emissions.beats[:MOST]:
         pair = words_only(" and ".join(b.clocks))
         info = f"{pair}: a notice, not a level; a linear sum has no line there, a control loop may answer to it"
         beats.append(_row(("beat", *b.clocks, *b.orders), pair, b.orders, b.low, b.high, "", info))
+        if known is None:
+            meet = [Row(("meet",), (Cell("~ calculating"),))]
+        elif len(known) > MOST:
+            text = f"and {len(known) - MOST} more pairs of clocks with fewer lines that can meet"
+            meet.append(Row(("more",), (Cell(text, info=text),)))
     if not meet:
         meet = [Row(("meet",), (Cell("none" if found else nothing(context)),))]
+    if len(result.emissions.beats) > MOST:
+        text = f"and {len(result.emissions.beats) - MOST} more beats"
+        beats.append(Row(("more beats",), (Cell(text, info=text),)))
     if not beats:
         beats = [Row(("beat",), (Cell("none falls below 20 kHz or a control bandwidth"),))]
     scan = context.options.scan

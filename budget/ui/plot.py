@@ -17,6 +17,7 @@ from budget import quantity
 Span = tuple[str, str]
 Line = list[Span]
 
+LEAST = (24, 5)  # characters and lines of the smallest picture
 LEFT = 8  # columns of the axis numbers and the axis
 JOINED = ("curve", "step")
 LARGEST = 1e100  # what is larger, or on a logarithmic axis smaller than its inverse, is no value to draw
@@ -53,12 +54,13 @@ class Plot:
 
 def draw(plot: Plot, width: int, height: int, *, ascii_only: bool = False) -> list[Line]:
     """The picture as ``height`` lines of ``width`` characters: axis numbers at the left, the x axis below."""
-    canvas = _canvas(plot, width - LEFT, height - 2, ascii_only) if width >= 24 and height >= 5 else None
+    canvas = _canvas(plot, width - LEFT, height - 2, ascii_only) if width >= LEAST[0] and height >= LEAST[1] else None
     if canvas is None:
-        return [[(f"{plot.empty if k == 0 else ''}".ljust(width)[:width], "pale")] for k in range(height)]
+        text = plot.empty if width >= LEAST[0] and height >= LEAST[1] else "no room for the picture"
+        return [[(f"{text if k == 0 else ''}".ljust(width)[:width], "pale")] for k in range(height)]
     left, rows = LEFT, height - 2
     if plot.cursor is not None:
-        canvas.cursor(*plot.cursor, ascii_only)
+        canvas.cursor(*plot.cursor)
     labels = dict(_ticks(canvas.y, rows, max(2, rows // 3), plot.y_kind, left - 1))
     lines: list[Line] = []
     bar = "|" if ascii_only else "\u2502"
@@ -234,7 +236,7 @@ class _Canvas:
                     self.put(column, level, stem, "pale")
             self.put(column, high, trace.symbol, trace.tone)
 
-    def cursor(self, x: float, y: float, ascii_only: bool) -> None:
+    def cursor(self, x: float, y: float) -> None:
         """A line down at ``x``, with the cell at ``y`` turned over."""
         if not _usable(x, self.x.log):
             return
@@ -247,7 +249,7 @@ class _Canvas:
             if level == at:
                 self.put(column, level, text if text != " " else "+", "cursor")
             elif text in " .\u00b7":
-                self.put(column, level, ":" if ascii_only else "\u2506", "head")
+                self.put(column, level, ":", "head")
 
     def line(self, k: int) -> Line:
         spans: Line = []

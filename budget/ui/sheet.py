@@ -15,6 +15,7 @@ from budget.project.document import Path
 from budget.report import words
 from budget.report.numbers import Corner, Number, Numbers, corner_index, numbers
 from budget.session import Session
+from budget.ui import guide
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
 if TYPE_CHECKING:
@@ -59,7 +60,16 @@ class Options:
     log_time: bool = True
     filter: int = 0  # the stability view
     scan: Any = None
-    allocation: Any = None  # the last proposal of an allocation
+    allocation: Any = None  # the last search for an allocation
+    wishes: tuple[tuple[str, ...], ...] = ()  # what the next one must obey
+    reach: Any = None  # how far a cell can go, as last asked
+    sweep: Any = None  # the last sweep of two cells
+    first: Any = None  # the first cell of a sweep, while the second is looked for
+    as_table: bool = False  # the map of a sweep as numbers
+
+
+Memo = dict[str, tuple[tuple[Any, ...], Any]]
+Order = Callable[[Memo, str, tuple[Any, ...], Callable[[], Any]], None]
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,7 +83,8 @@ class Context:
     ascii_only: bool = False
     options: Options = Options()
     cells: Cells = field(default_factory=dict)  # made before, see ``value_cell``
-    memo: dict[str, tuple[tuple[Any, ...], Any]] = field(default_factory=dict)
+    memo: Memo = field(default_factory=dict)
+    order: Order = lambda memo, name, made_of, make: None
 
     def once(self, name: str, made_of: tuple[Any, ...], make: Callable[[], Any]) -> Any:
         """What ``make`` gives, from before if all it is ``made_of`` are still the same objects."""
@@ -82,6 +93,19 @@ class Context:
             old = (made_of, make())
             self.memo[name] = old
         return old[1]
+
+    def fetch(self, name: str, made_of: tuple[Any, ...], make: Callable[[], Any]) -> Any:
+        """What ``make`` gives, calculated aside and kept like that of ``once``; None as long as it is not there.
+
+        For what takes so long that a key would wait: the view is made anew when it has come.
+        """
+        for first in (True, False):
+            old = self.memo.get(name)
+            if old is not None and all(a is b for a, b in zip(old[0], made_of, strict=True)):
+                return old[1]
+            if first:
+                self.order(self.memo, name, made_of, make)
+        return None
 
 
 KIND_OF = {"W": "power", "A": "current", "V": "voltage"}
@@ -117,20 +141,22 @@ def sheet(context: Context) -> View:
     rows = [maker.bus()]
     filters = rows_of(document, "filter")
     converters = rows_of(document, "converter")
-    known = {f.get("id") for _, f in filters}
+    known = {f["id"] for _, f in filters if isinstance(f.get("id"), str)}
+    behind_it: dict[str, list[Row]] = {}
+    for n, unit in converters:
+        behind_it.setdefault(str(unit.get("filter")), []).append(maker.row(("converter", n), unit, maker.converter))
     for index, part in filters:
-        rows.append(maker.filter(index, part))
-        rows += [maker.converter(n, unit) for n, unit in converters if unit.get("filter") == part.get("id")]
-    loose = [(n, unit) for n, unit in converters if unit.get("filter", "") not in known or not unit.get("filter")]
-    if not filters:
-        rows.append(Row(("start",), (Cell("no filter yet: N adds one", tone="pale"),)))
-    elif not converters:
-        rows.append(Row(("start",), (Cell("no converter yet: n on a filter adds one", tone="pale"),)))
+        rows.append(maker.row(("filter", index), part, maker.filter))
+        rows += behind_it.get(part["id"], []) if isinstance(part.get("id"), str) else []
+    loose = [(n, unit) for n, unit in converters if str(unit.get("filter", "")) not in known or not unit.get("filter")]
+    first = guide.beginning(context.session)
+    if first:
+        rows.append(Row(("start",), (Cell(first, tone="pale"),)))
     if loose:
         rows.append(
             Row(("loose",), (Cell("not allocated", tone="head", info="These draw nothing: give each a filter."),))
         )
-        rows += [maker.converter(n, unit) for n, unit in loose]
+        rows += [maker.row(("converter", n), unit, maker.converter) for n, unit in loose]
     return View("sheet", "sheet", (Section(COLUMNS, tuple(rows)),))
 
 
@@ -157,7 +183,7 @@ def worst_of(rows: Iterable[CheckRow]) -> CheckRow | None:
     return next((row for row in ranked if row.status != "no data"), ranked[0] if ranked else None)
 
 
-def behind(row: CheckRow, document: doc.Document) -> Path:
+def behind(row: CheckRow, document: doc.Document, at: Path | None = None) -> Path:
     """The cell that a check leads to: the entry whose change would mend it or give it its data."""
     keys = {
         "bus current": "rating",
@@ -182,12 +208,19 @@ def behind(row: CheckRow, document: doc.Document) -> Path:
     key = keys.get(row.check, "note")
     if row.subject == "bus":
         return ("bus", key)
-    for table in ("filter", "converter"):
-        for index, entry in rows_of(document, table):
-            if entry.get("id") == row.subject:
-                missing = [m.split(".")[-1] for m in row.missing if m.startswith(table)]
-                return (table, index, missing[0] if missing else key)
-    return ("bus", "low")
+    at = at or next(
+        (
+            (table, index)
+            for table in ("filter", "converter")
+            for index, entry in rows_of(document, table)
+            if entry.get("id") == row.subject
+        ),
+        None,
+    )
+    if at is None:
+        return ("bus", "low")
+    missing = [m.split(".")[-1] for m in row.missing if m.startswith(str(at[0]))]
+    return (*at, missing[0] if missing else key)
 
 
 class _Maker:
@@ -211,6 +244,23 @@ class _Maker:
         self.outcome = self.session.outcome is not None
         made_of = (self.session.latest("emissions"), corner, context.options)
         self.emission: _Emission | None = context.once("emission", made_of, lambda: _emission(context))
+
+    def row(self, path: Path, entry: dict[str, Any], make: Callable[[int, dict[str, Any]], Row]) -> Row:
+        """A row from before if nothing that it shows has changed: an edit of one makes one anew."""
+        context, document = self.context, self.session.document
+        made_of = (
+            entry,
+            self.session.outcome,
+            self.emission,
+            context.corner,
+            context.options,
+            context.bad,
+            document.data.get("shelf"),
+            self.session.shelves,
+            document.data.get("case") if context.corner else None,
+        )
+        found: Row = context.once(f"row {path}", made_of, lambda: make(int(path[1]), entry))
+        return found
 
     def bus(self) -> Row:
         data = self.session.document.data.get("bus")
@@ -334,7 +384,7 @@ class _Maker:
             bad = next((p for p in sorted(self.context.bad, key=str) if p[: len(path)] == path), (*path, "name"))
             text = "left out" if self.outcome else PENDING
             return Cell(text, tone="fail" if self.outcome else "", mark="!" if self.outcome else "", leads=bad)
-        lead = behind(row, self.session.document)
+        lead = behind(row, self.session.document, path if path[0] != "bus" else None)
         text = words.brief(row)
         info = words.sentence(row)
         lacking = sum(r.status == "no data" for r in rows)

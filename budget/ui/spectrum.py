@@ -128,7 +128,7 @@ def table(context: Context) -> list[dict[str, Any]]:
         )
         if both[k] > -400.0
     ]
-    return sorted(rows, key=lambda row: row["margin"])
+    return sorted(rows, key=lambda row: round(row["margin"], 6))
 
 
 def spectrum(context: Context) -> View:
@@ -212,11 +212,10 @@ def _picture(entries: list[dict[str, Any]], lines: Lines, context: Context) -> P
     top = 10.0 * (int(top / 10.0) + 1)
     floor = min(y for _, y in points) - 40.0
     dash = "-" if context.ascii_only else "\u2500"
-    traces = [Trace(lines.limit.name, dash, [x for x, _ in points], [y for _, y in points], "step", "thin")]
+    traces = [Trace(lines.limit.name, dash, [x for x, _ in points], [y for _, y in points], "step", "limit")]
     if context.options.bare:
-        sign = "'" if context.ascii_only else "\u02d9"
         known = [e for e in entries if e["bare"] is not None]
-        traces.append(Trace("bare", sign, [e["frequency"] for e in known], [e["bare"] for e in known], "dots", "pale"))
+        traces.append(Trace("bare", "'", [e["frequency"] for e in known], [e["bare"] for e in known], "dots", "pale"))
     by_clock: dict[str, list[dict[str, Any]]] = {}
     for entry in entries:
         by_clock.setdefault(entry["symbol"], []).append(entry)
@@ -243,5 +242,6 @@ def csv_lines(context: Context) -> str:
     writer = csv.writer(out, lineterminator="\n")
     writer.writerow(head)
     for entry in table(context):
-        writer.writerow(["" if entry[k] is None or entry[k] == float("-inf") else entry[k] for k in head])
+        row = ("" if entry[k] is None or entry[k] == float("-inf") else entry[k] for k in head)
+        writer.writerow(words.cells(row))
     return out.getvalue()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from budget import quantity
@@ -27,7 +28,7 @@ _FILTERS = (
     Column("source peak", 12, RIGHT),
     Column("at", 11, RIGHT),
     Column("loads", 11, RIGHT),
-    Column("apart", 9, RIGHT, sense=1),
+    Column("apart", 12, RIGHT, sense=1),
 )
 
 
@@ -81,6 +82,7 @@ def _filter_rows(result: Result, c: int, k: int) -> tuple[Row, ...]:
     rows = []
     for f, part in enumerate(result.project.filters):
         peak, at, apart = float(found.peak[f]), float(found.peak_frequency[f]), float(found.impedance_db[c, k, f])
+        thin = math.isfinite(apart) and apart < result.project.rules.stability_margin
         load = _load(result, c, k, f)
         known = math.isfinite(peak)
         texts = (
@@ -88,15 +90,12 @@ def _filter_rows(result: Result, c: int, k: int) -> tuple[Row, ...]:
             quantity.show(peak, ohm) if known else "table" if part.attenuation else "undamped",
             words.frequency(at) if known and math.isfinite(at) else "",
             quantity.show(load, ohm) if load else "none runs",
-            f"{apart:.1f} dB" if math.isfinite(apart) else "",
+            (f"thin {apart:.1f} dB" if thin else f"{apart:.1f} dB") if math.isfinite(apart) else "",
         )
-        info = f"{part.id}: largest source impedance against what its converters draw like; apart is a customary rule"
-        wanted = result.project.rules.stability_margin
-        tone = "thin" if math.isfinite(apart) and apart < wanted else ""
-        cells = [
-            Cell(t, align="left" if n == 0 else RIGHT, tone=tone if n == 4 else "", info=info, calculated=True)
-            for n, t in enumerate(texts)
-        ]
+        info = f"{part.id}: largest source impedance against its loads; apart is a customary rule"
+        cells = [Cell(t, align="left" if n == 0 else RIGHT, info=info, calculated=True) for n, t in enumerate(texts)]
+        if math.isfinite(apart):
+            cells[4] = replace(cells[4], tone="thin" if thin else "", value=apart, kind="dB")
         mark = (at, 20 * math.log10(peak)) if known and peak > 0 and math.isfinite(at) else None
         rows.append(Row(("filter", part.id), tuple(cells), mark=mark))
     return tuple(rows)
@@ -171,12 +170,13 @@ def csv_stability(context: Context) -> str:
     writer.writerow(("mode frequency", "damping", "owner", "share"))
     for mode in mode_table(result.project, result.operating, c, k):
         for owner, share in mode.owners[:4]:
-            writer.writerow((mode.frequency, mode.damping, " ".join(x for x in owner if x), share))
+            row = (mode.frequency, mode.damping, " ".join(x for x in owner if x), share)
+            writer.writerow(words.cells(row))
     parts = [f for f, part in enumerate(result.project.filters) if not part.attenuation]
     grid = np.geomspace(10.0, 1e6, 900)
     z = np.abs(source_impedances(result.project, 2.0 * np.pi * grid))
     writer.writerow([])
-    writer.writerow(("frequency", *(f"{result.project.filters[f].id} source impedance" for f in parts)))
+    writer.writerow(words.cells(("frequency", *(f"{result.project.filters[f].id} source impedance" for f in parts))))
     for n, f in enumerate(grid.tolist()):
         writer.writerow((f, *(float(z[p, n]) for p in parts)))
     return out.getvalue()

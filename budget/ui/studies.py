@@ -14,7 +14,7 @@ from budget.project.build import Shelf
 from budget.project.document import Document, Path
 from budget.project.problems import ProjectError
 from budget.project.store import free_name, write_text
-from budget.ui import stable, switchon
+from budget.ui import stable, sweepmap, switchon
 from budget.ui.desk import Desk, Work
 from budget.ui.sheet import BOTH, CM, DM, rows_of
 from budget.ui.spectrum import csv_lines
@@ -66,13 +66,14 @@ _EXPORTS: dict[str, tuple[Callable[[Any], str], str]] = {
     "spectrum": (csv_lines, "lines"),
     "switchon": (switchon.csv_waves, "switch-on"),
     "stable": (stable.csv_stability, "stability"),
+    "map": (sweepmap.csv_map, "sweep"),
 }
 
 
 def export(desk: Desk) -> None:
     """Write what the view draws as CSV beside the project."""
     if desk.view_name not in _EXPORTS:
-        raise ProjectError("this view has no numbers to write; emissions (a), switch-on (J) and stability (Y) have.")
+        raise ProjectError("this view has no numbers to write; those of a, J and Y and the map of a sweep (F) have.")
     make, word = _EXPORTS[desk.view_name]
     text = make(desk.context())
     if text.count("\n") < 2:
@@ -221,55 +222,6 @@ def _with_branch(document: Document, shelves: tuple[Shelf, ...], name: str, bran
     return doc.put(document, ("filter", index, "dm"), [*ladder, {"shunt": branch}])
 
 
-def propose(desk: Desk) -> None:
-    """Search in the background for the best allocation; the best so far is told at once."""
-    result = desk.session.result
-    if result is None:
-        raise ProjectError("there are no results yet to search with.")
-    project = result.project
-    goals = [
-        ("even: the largest headroom", "even"),
-        ("fewest: the fewest filters in use, then the largest headroom", "fewest"),
-        ("quiet: the largest emission margin", "quiet"),
-    ]
-
-    def start(goal: str) -> None:
-        def run(cancelled: Callable[[], bool], progress: Callable[[float], None]) -> Any:
-            from budget.engine.allocate import allocate
-            from budget.engine.evaluate import evaluate_dc, with_emissions, with_stability
-
-            def finish(moved: Any) -> Any:
-                return with_stability(with_emissions(evaluate_dc(moved)))
-
-            return allocate(project, goal, cancelled=cancelled, finish=finish)
-
-        def done(found: Any) -> None:
-            desk.options = replace(desk.options, allocation=found)
-            desk.view_name = "allocation"
-            desk.cursor.column = 2
-
-        desk.start_job(Work(f"searching, {goal}", run, done))
-
-    desk.pick("search for which allocation?", goals, start)
-
-
-def take_candidate(desk: Desk) -> None:
-    """Put every converter where the candidate under the cursor has it, as one edit."""
-    found = desk.options.allocation
-    column = desk.cursor.column - 2
-    if found is None or not 0 <= column < len(found.candidates):
-        raise ProjectError("the cursor is not on a candidate.")
-    document = desk.session.document
-    homes = dict(found.candidates[column].allocation)
-    for index, row in rows_of(document, "converter"):
-        home = homes.get(row.get("id"))
-        if home is not None and home not in edits.ids(document, "filter"):
-            raise ProjectError("a filter of this candidate is gone meanwhile; search again.")
-        if home is not None:
-            document = edits.to_filter(document, index, home)
-    desk.change(f"allocation no. {column + 1}", document)
-
-
 def scan_clock(desk: Desk) -> None:
     """Ask for a clock and a range, and find the worst margin over it in the background."""
     result = desk.session.latest("emissions")
@@ -329,5 +281,4 @@ ACTIONS: dict[str, Callable[[Desk], None]] = {
     "export": export,
     "what_helps": what_helps,
     "scan_clock": scan_clock,
-    "propose": propose,
 }

@@ -28,6 +28,10 @@ COLUMNS = (
 )
 
 
+NEAR = 1.5  # times the highest point of the curves: limits above are left out of the picture
+MOST_LETTERS = 12  # on one limit line
+
+
 def shown_run(context: Context) -> tuple[Result, Run] | None:
     """The case and event shown: the chosen one, else the one of the worst check."""
     result = context.session.latest("inrush")
@@ -96,7 +100,8 @@ def _rows(result: Result, run: Run) -> list[Row]:
         _row(
             ("bus",),
             f"{SYMBOLS[0]} bus",
-            (_amps(run.bus_peak), _amps(bus.inrush_peak), _i2t(run.bus_i2t), _i2t(bus.breaker_i2t), "", "", "", ""),
+            (run.bus_peak, bus.inrush_peak, run.bus_i2t, bus.breaker_i2t, None, None, None),
+            "",
             (_over(run.bus_peak, bus.inrush_peak), _over(run.bus_i2t, bus.breaker_i2t), ""),
             "current from the source",
         )
@@ -104,51 +109,64 @@ def _rows(result: Result, run: Run) -> list[Row]:
     filters = {f.id: (k, f) for k, f in enumerate(project.filters)}
     for entry in run.filters:
         k, part = filters[entry.id]
-        values = (
-            _amps(entry.peak),
-            _amps(part.inrush_peak),
-            _i2t(entry.i2t),
-            _i2t(part.inrush_i2t),
-            _volts(entry.peak_voltage),
-            _volts(part.max_surge),
-            "",
-            "",
-        )
+        surge = entry.peak_voltage, part.max_surge
+        values: tuple[float | None, ...] = (entry.peak, part.inrush_peak, entry.i2t, part.inrush_i2t, *surge, None)
         tones = (
             _over(entry.peak, part.inrush_peak),
             _over(entry.i2t, part.inrush_i2t),
             _over(entry.peak_voltage, part.max_surge),
         )
         name = f"{symbol(1 + k)} {entry.id} {part.name}"
-        rows.append(_row(("filter", entry.id), name, values, tones, "current into it, voltage at its output"))
+        rows.append(_row(("filter", entry.id), name, values, "", tones, "current into it, voltage at its output"))
     units = {c.id: (k, c) for k, c in enumerate(project.converters)}
     for unit in run.converters:
         k, converter = units[unit.id]
         name = f"{symbol(k)} {unit.id} {converter.name}"
-        start, limit = _seconds(unit.runs_at), converter.max_surge
-        values = ("", "", "", "", _volts(unit.peak_voltage), _volts(limit), start, unit.state)
+        limit = converter.max_surge
+        values = (None, None, None, None, unit.peak_voltage, limit, unit.runs_at)
         tones = ("", "", _over(unit.peak_voltage, limit))
         near = [code for code, who in run.remarks if who == unit.id]
         info = "voltage at its terminals, and when it starts to run" + ("; " + ", ".join(near) if near else "")
-        rows.append(_row(("converter", unit.id), name, values, tones, info))
+        rows.append(_row(("converter", unit.id), name, values, unit.state, tones, info))
     return rows
 
 
-def _row(key: tuple[Any, ...], name: str, values: tuple[str, ...], tones: tuple[str, str, str], info: str) -> Row:
+_SHOWN = (
+    (_amps, "current"),
+    (_amps, "current"),
+    (_i2t, "i2t"),
+    (_i2t, "i2t"),
+    (_volts, "voltage"),
+    (_volts, "voltage"),
+    (_seconds, "time"),
+)
+
+
+def _row(
+    key: tuple[Any, ...],
+    name: str,
+    values: tuple[float | None, ...],
+    state: str,
+    tones: tuple[str, str, str],
+    info: str,
+) -> Row:
     info = words_only(f"{name[2:]}: {info}")
     by_column = {0: tones[0], 2: tones[1], 4: tones[2]}
     cells = [Cell(words_only(name), tone="head", info=info)]
-    for k, text in enumerate(values):
-        tone = by_column.get(k, "fail" if text in ("waiting", "tripped") else "")
+    for k, (value, (show, kind)) in enumerate(zip(values, _SHOWN, strict=True)):
+        tone = by_column.get(k, "")
         mark = "!" if tone == "fail" else ""
-        cells.append(Cell(text, None, "left" if k == 7 else RIGHT, tone, mark, info, calculated=True))
+        cells.append(Cell(show(value), None, RIGHT, tone, mark, info, calculated=True, value=value, kind=kind))
+    bad = state in ("waiting", "tripped")
+    cells.append(Cell(state, None, "left", "fail" if bad else "", "!" if bad else "", info, calculated=True))
     return Row(key, tuple(cells))
 
 
 def _summary(run: Run) -> str:
     remarks = [f"{who}: {code}" if who else code for code, who in run.remarks]
     told = "; ".join(remarks[:4]) + ("; and more" if len(remarks) > 4 else "")
-    return "A currents or voltages, j next event, L time axis, H what would help" + (f"; {told}" if told else "")
+    keys = "A currents or voltages, j next event, L time axis, H what would help"
+    return keys + (f"; {told}" if told else "")
 
 
 def _picture(context: Context, result: Result, run: Run) -> Plot | None:
@@ -169,7 +187,7 @@ def _picture(context: Context, result: Result, run: Run) -> Plot | None:
             if entry.runs_at is not None:
                 near = min(range(len(time)), key=lambda n, at=entry.runs_at: abs(time[n] - at))  # type: ignore[misc]
                 traces.append(Trace("starts", "^", [entry.runs_at], [y[near]], "dots", "head"))
-        limits = sorted({c.max_surge for c in result.project.converters if c.max_surge is not None})[:1]
+        limits = {c.id: (symbol(k), c.max_surge) for k, c in enumerate(result.project.converters)}
     else:
         traces.append(Trace("bus", SYMBOLS[0], time, wave.bus.tolist(), tone="trace0"))
         filters = {f.id: k for k, f in enumerate(result.project.filters)}
@@ -177,14 +195,34 @@ def _picture(context: Context, result: Result, run: Run) -> Plot | None:
             k = filters[part.id]
             y = wave.filters[:, column].tolist()
             traces.append(Trace(part.id, symbol(1 + k), time, y, tone=f"trace{(k + 1) % 6}"))
-        bus_limit = result.project.bus.inrush_peak
-        limits = sorted({f.inrush_peak for f in result.project.filters if f.inrush_peak is not None})[:1]
-        limits += [bus_limit] if bus_limit is not None else []
+        limits = {f.id: (symbol(1 + k), f.inrush_peak) for k, f in enumerate(result.project.filters)}
+        limits["bus"] = (SYMBOLS[0], result.project.bus.inrush_peak)
     span = (first if log else time[0], time[-1])
-    for limit in limits:
-        traces.insert(0, Trace("limit", dash, list(span), [limit, limit], "step", "thin"))
+    drawn = [trace for trace in traces if trace.kind == "curve"]
+    traces += _limits(limits, max((max(t.y) for t in drawn), default=0.0), span, log, dash)
     label = "V" if context.options.voltages else "A"
     return Plot(tuple(traces), "time", label, log_x=log, x_range=span)
+
+
+def _limits(
+    limits: dict[str, tuple[str, float | None]], top: float, span: tuple[float, float], log: bool, dash: str
+) -> list[Trace]:
+    """A line for each limit near the curves, the lowest in any case, with the letters it is for at its right end."""
+    by_value: dict[float, list[tuple[str, str]]] = {}
+    for name, (letter, value) in limits.items():
+        if value is not None:
+            by_value.setdefault(value, []).append((name, letter))
+    lines: list[Trace] = []
+    letters: list[Trace] = []
+    for value in sorted(by_value):
+        if lines and value > NEAR * top:
+            break
+        lines.append(Trace(f"limit {value:g}", dash, list(span), [value, value], "step", "limit"))
+        for n, (name, letter) in enumerate(reversed(by_value[value][:MOST_LETTERS])):
+            share = 0.985 - 0.03 * n
+            x = span[0] * (span[1] / span[0]) ** share if log else span[0] + (span[1] - span[0]) * share
+            letters.append(Trace(f"limit of {name}", letter, [x], [value], "dots", "limit"))
+    return [*reversed(lines), *letters]
 
 
 def csv_waves(context: Context) -> str:
@@ -202,7 +240,7 @@ def csv_waves(context: Context) -> str:
     writer = csv.writer(out, lineterminator="\n")
     head = ["time", "bus current", *(f"{f.id} current" for f in run.filters)]
     head += [f"{f.id} voltage" for f in run.filters] + [f"{c.id} voltage" for c in run.converters]
-    writer.writerow(head)
+    writer.writerow(words.cells(head))
     columns = [wave.time[:, None], wave.bus[:, None], wave.filters, wave.outputs, wave.terminals]
     import numpy as np
 

@@ -6,16 +6,16 @@ from typing import TYPE_CHECKING
 
 from budget.project.problems import ProjectError
 from budget.report import change, words
-from budget.study.beside import Beside, Line, beside
-from budget.study.compare import Variant
 from budget.trials import LONGEST, REFERENCE, Trial
 from budget.ui.changes import BETTER, LEGEND, WORSE
 from budget.ui.sheet import PENDING, Context, rank, words_only
 from budget.ui.view import RIGHT, Cell, Column, Row, Section, View
 
-if TYPE_CHECKING:
+if TYPE_CHECKING:  # studies load numpy, and the sheet is painted before that
     from budget.engine.checks import CheckRow
     from budget.session import Outcome
+    from budget.study.beside import Beside, Line
+    from budget.study.compare import Variant
     from budget.ui.desk import Desk
 
 PRESENT = "present"
@@ -38,6 +38,8 @@ def trials_view(context: Context) -> View:
         return View("trials", "trials side by side", (Section((Column("", 60, most=100),), rows),))
     shown = columns(context)
     made_of = (*(t.outcome for t in shown), *(t.document for t in shown))
+    from budget.study.beside import beside
+
     found: Beside = context.once("beside", made_of, lambda: beside([_variant(t) for t in shown]))
     heads = (_LABEL, *(Column(words_only(_title(context, t)), 10, RIGHT, most=16) for t in shown))
     base = next((k for k, t in enumerate(shown) if t is session.reference), 0)
@@ -60,6 +62,8 @@ def _title(context: Context, trial: Trial) -> str:
 
 
 def _variant(trial: Trial) -> Variant:
+    from budget.study.compare import Variant
+
     result = trial.outcome.result if trial.outcome else None
     return Variant(trial.name, trial.document, trial.shelves, result)
 

@@ -14,6 +14,7 @@ import os
 import pty
 import re
 import select
+import shutil
 import signal
 import statistics
 import struct
@@ -155,7 +156,10 @@ class Both:
 
     def __init__(self, file: Path, home: str) -> None:
         self.terminal = Terminal([sys.executable, "-m", "budget", str(file)], home)
-        self.desk = Desk(open_file(file))
+        twin = Path(home) / "twin" / file.name  # the program's own file is locked by it
+        twin.parent.mkdir(exist_ok=True)
+        shutil.copy(file, twin)
+        self.desk = Desk(open_file(twin))
         self.calculate()
         self.terminal.show(self.terminal.read(0.5, 3.0), lambda _: False)
         self.check("the first screen")
@@ -271,6 +275,28 @@ def edits(file: Path, home: str) -> None:
         both.terminal.close()
 
 
+def held(file: Path, home: str) -> None:
+    """Against a reference: each row whose numbers change gets a line below it; the feed's resistance changes all."""
+    both = Both(file, home)
+    try:
+        both.press("K")
+        columns = [column.title for column in both.desk.view().sections[0].columns]
+        while both.desk.cursor.column != columns.index("lead R"):
+            both.press("\x1b[C")
+        found = []
+        for k in range(EDITS // 2):
+            found.append(both.press(*f"{9 + 0.5 * k:.3g}m", "\r"))
+            both.press("\x1b[A")
+        report("every row against a reference: first edit", found[0][1], "B", 4000)
+        report("every row against a reference: later edits, largest", max(n for _, n in found[1:]), "B", 4000)
+        report("every row against a reference: Enter to painted, median",
+               1e3 * statistics.median(t for t, _ in found), "ms")  # fmt: skip
+        moves = [both.press("\x1b[B") for _ in range(4)] + [both.press("\x1b[A") for _ in range(4)]
+        report("against a reference: bytes per move, largest", max(n for _, n in moves), "B", 500)
+    finally:
+        both.terminal.close()
+
+
 def first_paint(file: Path, home: str) -> None:
     desk = Desk(open_file(file))
     names = [plain(line)[:16] for line in frame(desk, WIDTH, HEIGHT)[1 : HEIGHT - 5]]
@@ -344,6 +370,7 @@ def main() -> None:
         check_command(home)
         first_paint(file, home)
         edits(file, home)
+        held(file, home)
 
 
 if __name__ == "__main__":
