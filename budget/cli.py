@@ -404,7 +404,7 @@ def _allocate(options: argparse.Namespace) -> int:
 
     try:
         wishes = constraints_of(_wishes(options))
-        with _stoppable() as stopped:
+        with stoppable() as stopped:
             finish = all_checks(CHECKING, stopped)
             found = allocate(project, options.goal, wishes, time_limit=options.time, cancelled=stopped, finish=finish)
     except ValueError as error:
@@ -443,7 +443,7 @@ def _wishes(options: argparse.Namespace) -> list[tuple[str, ...]]:
 
 
 @contextlib.contextmanager
-def _stoppable() -> Iterator[Callable[[], bool]]:
+def stoppable() -> Iterator[Callable[[], bool]]:
     """Ctrl+C only says that it is enough; pressed again, it ends the program."""
     asked: list[int] = []
 

@@ -131,14 +131,18 @@ def reach(options: argparse.Namespace) -> tuple[int, str]:
 
 def sweep(options: argparse.Namespace) -> tuple[int, str]:
     """Exit status and output of ``budget sweep``; raises ProjectError."""
+    from budget.cli import stoppable
+    from budget.engine.cancel import CancelledError
+
     try:
-        return _sweep(options)
-    except KeyboardInterrupt:
+        with stoppable() as enough:  # an exception out of a signal handler may get lost in a callback
+            return _sweep(options, enough)
+    except (KeyboardInterrupt, CancelledError):
         _tell("budget: stopped; nothing was written.")
         return STOPPED, ""
 
 
-def _sweep(options: argparse.Namespace) -> tuple[int, str]:
+def _sweep(options: argparse.Namespace, enough: Callable[[], bool]) -> tuple[int, str]:
     import json
 
     from budget.report import study
@@ -165,6 +169,7 @@ def _sweep(options: argparse.Namespace) -> tuple[int, str]:
             executor=executor,
             workers=workers,
             progress=told,
+            cancelled=enough,
         )
     if found.failing:
         names = ", ".join(f"{row.subject} {row.check}" for row in found.failing)

@@ -420,7 +420,9 @@ def test_the_message_about_the_file_comes_once_and_follows_its_fate(file: Path) 
 # -- clocks
 
 
-@pytest.mark.parametrize("when", [0, 1, time.time() - 1e6, time.time() + 1e6, 4e9])
+@pytest.mark.parametrize(
+    "when", [0, 1, time.time() - 1e6, time.time() + 1e6, 4e9], ids=["0", "1", "past", "future", "far"]
+)
 def test_the_time_of_a_file_decides_nothing(file: Path, when: float) -> None:
     desk = edited(file)
     os.utime(file, (when, when))

@@ -350,8 +350,8 @@ TOO_MUCH = {
     "lists in each other": (f"x = {'[' * 31}{']' * 31}", "deep"),
     "many lists in each other": (f"x = {'[' * 5000}", "nested"),
     "tables in each other": (f"x = {'{a=' * 31}1{'}' * 31}", "deep"),
-    "rows": ("[[filter]]\n" * 1001, "filter has 1001 rows"),
-    "inline rows": (f"case = [{'{},' * 1001}]", "case has 1001 rows"),
+    "rows": ("[[filter]]\n" * 501, "filter has 501 rows"),
+    "inline rows": (f"case = [{'{},' * 501}]", "case has 501 rows"),
     "items": (f"x = [{'1,' * 20_001}]", "20001 things"),
     "keys": ("".join(f"k{k} = 1\n" for k in range(20_001)), "20001 things"),
     "values": ("".join(f"k{k} = [{'0,' * 15_000}]\n" for k in range(11)), "values"),
@@ -363,6 +363,19 @@ TOO_MUCH = {
 @pytest.mark.parametrize(("text", "why"), TOO_MUCH.values(), ids=TOO_MUCH)
 def test_too_much_is_refused_in_a_sentence(text: str, why: str) -> None:
     assert why in refusal(text)
+
+
+def test_a_network_that_no_machine_could_hold_is_an_error() -> None:
+    """Its state equations are matrices of thousands by thousands: the file opens, and is not calculated."""
+    shunt = "{ shunt = { C = 1, L = 1 } },"
+    row = '[[filter]]\nid = "L{}"\ncm = []\ndm = [{}]\n'
+    text = SMALLEST + row.format(1, shunt * 201)
+    (problem,) = (p for p in build(store.parse(text, None, "x.toml").document).errors)
+    assert problem.sentence() == "filter L1, dm: 201 rows were found; at most 200 were expected."
+    text = SMALLEST + "".join(row.format(k, shunt * 200) for k in range(8))
+    built = build(store.parse(text, None, "x.toml").document)
+    assert built.project is None
+    assert "1602 elements together; at most 1500" in built.errors[0].text
 
 
 def test_what_only_looks_like_too_long_a_key_is_none() -> None:

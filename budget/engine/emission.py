@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from budget.engine import waveform
 from budget.engine.beats import Beat, beats
-from budget.engine.lines import Lines, Source, lines_of, places
+from budget.engine.lines import MOST, Lines, Source, lines_of, places
 from budget.engine.model import LINES, Converter, Project
 from budget.engine.network import COMMON
 from budget.engine.operating import Operating
@@ -102,13 +102,16 @@ def emissions(
     old = {spectrum.limit: spectrum for spectrum in previous.spectra} if previous else {}
     # what a project of absurd numbers brings out of range ends as a level far above any limit, see levels()
     with np.errstate(all="ignore"):
-        spectra = tuple(lines_of(project, limit, old.get(limit)) for limit in project.checked)
+        spectra, left = [], MOST
+        for limit in project.checked:
+            spectra.append(lines_of(project, limit, old.get(limit), left))
+            left -= spectra[-1].room
         rows = tuple(row for spectrum in spectra for row in _rows(project, operating, spectrum, lines))
     quiet = (not (unit.chop or unit.ripple or unit.spectrum) for unit in project.converters)
     ever: list[bool] = np.asarray(operating.running.any(axis=0)).tolist()
     homes: list[bool] = (operating.home >= 0).tolist()
     return Emissions(
-        spectra=spectra,
+        spectra=tuple(spectra),
         rows=rows,
         beats=beats(project),
         silent=tuple(u.id for u, q, runs in zip(project.converters, quiet, ever, strict=True) if q and runs),

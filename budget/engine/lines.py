@@ -19,9 +19,14 @@ from budget.engine.sweep import ROUNDING, Sweep, plan
 Floats = NDArray[np.float64]
 Indices = NDArray[np.intp]
 
-MOST = (
-    8_000_000  # transfers of one limit set; a 50 Hz clock up to 50 MHz with both modes and a tolerance takes 6 million
-)
+# Bytes that the lines of all limit sets may take, with what is needed beside them while they are added up (measured); a
+# 50 Hz clock up to 50 MHz with both modes and a tolerance, a million lines, takes all of it.
+MOST = 440_000_000
+_A_LINE, _AMONG_OTHERS, _A_TRANSFER = (
+    330,
+    160,
+    16,
+)  # a line, more if there are several clocks, and a way to the receiver
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,6 +85,16 @@ class Lines:
     held: tuple[str, ...]  # table filters used beyond the ends of their table
     too_many: bool = False  # more lines than can be added up; all arrays are empty then
 
+    @property
+    def room(self) -> int:
+        """What they take of ``MOST``."""
+        transfers = sum(source.transfer.size for source in self.sources)
+        return _a_line(self.clocks) * self.frequency.size + _A_TRANSFER * transfers
+
+
+def _a_line(found: tuple[Clock, ...]) -> int:
+    return _A_LINE + (_AMONG_OTHERS if len(found) > 1 else 0)
+
 
 def clocks(project: Project) -> tuple[Clock, ...]:
     """The clocks of all allocated converters, in project order of their first members."""
@@ -117,22 +132,25 @@ def network_key(project: Project, limit: LimitLine) -> tuple[object, ...]:
     )
 
 
-def lines_of(project: Project, limit: LimitLine, previous: Lines | None = None) -> Lines:
-    """All lines of the project that the limit set can see; ``previous`` is returned where its network is the same."""
+def lines_of(project: Project, limit: LimitLine, previous: Lines | None = None, most: int = MOST) -> Lines:
+    """All lines of the project that the limit set can see; ``previous`` is returned where its network is the same.
+
+    What would take more than ``most`` bytes has no lines and is ``too_many``.
+    """
     key = network_key(project, limit)
-    if previous is not None and previous.key == key:
+    if previous is not None and previous.key == key and not previous.too_many and previous.room <= most:
         return previous
     found = clocks(project)
     middle = all(clock.tolerance == 0.0 for clock in found)
     spread = (0.0,) if middle else (-1.0, 0.0, 1.0)
 
-    most = MOST
     grids = []
     for clock in found:
-        grid = _harmonics(project, clock, limit, most // len(spread))
+        grid = _harmonics(project, clock, limit, most // _a_line(found))
         if grid is None:
             return _too_many(limit, key, found)
-        most -= grid.size * len(spread) * max(1, sum(len(places(project.converters[k])) for k in clock.members))
+        each = len(spread) * sum(len(places(project.converters[k])) for k in clock.members)
+        most -= grid.size * (_a_line(found) + _A_TRANSFER * each)
         if most < 0:
             return _too_many(limit, key, found)
         grids.append(grid)

@@ -22,6 +22,7 @@ _OWN = frozenset(("id", "part", "filter"))  # what makes a row one particular ro
 _LADDERS = ("dm", "cm", "attenuation", "input")  # a row without one of these that it should have is another row
 _CM_SOURCE = ("converter", "cm")  # has the name of a ladder, and is none
 MAX_PROBLEMS = 1_000  # of each sort: nobody reads more, and a hostile file could ask for a hundred thousand
+MAX_ELEMENTS = 1_500  # of all differential ladders together: one network, whose matrices grow with the square
 _FROM_NEWER = "was found, of a newer program; this one reads up to format"
 
 
@@ -146,7 +147,18 @@ class _Build:
             checked=_checked(rules.emissions, own, bus.nominal),
             title=title,
         )
+        if not self.fits(project):
+            return Built(None, tuple(self.problems), tuple(self.left_out))
         return Built(project, tuple(self.problems), tuple(self.left_out))
+
+    def fits(self, project: model.Project) -> bool:
+        """Whether the network is one that can be calculated in the memory of an ordinary machine."""
+        ladders = (*(f.dm for f in project.filters), *(c.input for c in project.converters))
+        count = sum(map(len, ladders))
+        if count > MAX_ELEMENTS:
+            text = f"the ladders have {count} elements together; at most {MAX_ELEMENTS} can be calculated."
+            self.note(("filter",), text)
+        return count <= MAX_ELEMENTS
 
     def lose(self, converter: model.Converter | None, lost: set[str]) -> bool:
         """Whether a converter goes with its filter; it is named as left out then."""

@@ -21,6 +21,7 @@ from budget.project.schema import Field
 
 LARGEST, SMALLEST = 1e15, 1e-24  # in SI units, of any quantity: what lies beyond would only make overflows
 MAX_ROWS = 20_000  # of one table of numbers; a longer one is a mistake
+MAX_LADDER = 200  # elements of one ladder
 
 
 @dataclass(slots=True)
@@ -164,8 +165,9 @@ def _list(spec: Field, raw: Any, out: Reading, at: Path) -> list[Any] | None:
     if not isinstance(raw, list):
         out.fault(at, f"{found(raw)} was found; {expectation(spec)} was expected.")
         return None
-    if len(raw) > MAX_ROWS:
-        out.fault(at, f"{len(raw)} rows were found; at most {MAX_ROWS} were expected.")
+    most = MAX_LADDER if spec.kind in (schema.LADDER, schema.TABLES) else MAX_ROWS
+    if len(raw) > most:
+        out.fault(at, f"{len(raw)} rows were found; at most {most} were expected.")
         return None
     return raw
 

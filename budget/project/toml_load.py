@@ -18,7 +18,7 @@ from budget.project.problems import ProjectError, printable
 MAX_KEY = 16  # names in one dotted key; the deepest field of a project has eight
 MAX_DEPTH = 30  # of lists and tables in each other
 MAX_ITEMS = 20_000  # of one list or one table
-MAX_ROWS = 1_000  # of one array of tables: converters, filters, cases
+MAX_ROWS = 500  # of one array of tables: converters, filters, cases
 MAX_VALUES = 150_000  # of a file, lists and tables included
 MAX_FAULTS = 20  # of the syntax, told at once
 MAX_PIECES = 500  # tables of a broken file that are read by themselves

@@ -11,6 +11,7 @@ import codecs
 import contextlib
 import gc
 import io
+import os
 import locale
 import signal
 import sys
@@ -31,7 +32,7 @@ from textual._xterm_parser import XTermParser
 from textual.app import App, ComposeResult
 from textual.drivers import linux_driver
 from textual.events import Key, Paste, Resize
-from textual.geometry import Region
+from textual.geometry import Region, Size
 from textual.message import Message
 from textual.messages import Prompt
 from textual.strip import Strip
@@ -564,6 +565,9 @@ class BudgetApp(App[int], inherit_bindings=False):
             return
         if self.keeper is not None and self.keeper.tick():
             self.board.sync()
+        width, height = os.get_terminal_size(0)
+        if (width, height) != self.size and width and height:  # word of it got lost in a storm of sizes
+            self.post_message(Resize(Size(width, height), Size(width, height)))
 
     def _handle_exception(self, error: Exception) -> None:
         self.fault = self.fault or error

@@ -33,9 +33,8 @@ WANTED = 340.0  # MB of all stages together: 400 for the program less some 60 fo
 STAGES = ("dc", "emissions", "stability", "switch-on", "all")
 
 
-def copies() -> Project:
-    """The demo's filters, converters and cases over and over, on a bus that carries them."""
-    loaded = store.load(HERON)
+def tree() -> Tree:
+    """The demo's filters, converters and cases over and over, on a bus that carries them, as a file would hold them."""
     data: Tree = tomllib.loads(HERON.read_text())
     filters, converters, cases = data["filter"], data["converter"], data["case"]
     data["filter"] = [{**deepcopy(filters[k % len(filters)]), "id": f"FL{k + 1}"} for k in range(FILTERS)]
@@ -52,7 +51,12 @@ def copies() -> Project:
             {**case, "id": f"case{k + 1}", "load": {new: load[old] for new, old in names if old in load}}
         )
     data["bus"] |= {"resistance": "0.4 mohm", "rating": "900 A"}
-    project = build(from_data(data), loaded.shelves).project
+    return data
+
+
+def copies() -> Project:
+    """The project of ``tree``."""
+    project = build(from_data(tree()), store.load(HERON).shelves).project
     assert project is not None
     return project
 

@@ -191,7 +191,8 @@ def _spec(path: Sequence[Any]) -> Field | None:
         spec = next((f for f in fields if f.key == name), None)
         fields = spec.fields if spec is not None else ()
     if spec is not None and spec.fields and path and isinstance(path[-1], int):
-        column = path[-1] if spec.kind in (schema.ROWS, schema.CURVE) and path[-1] < len(spec.fields) else None
+        inside = len(path) > 1 and isinstance(path[-2], int) and spec.kind in (schema.ROWS, schema.CURVE)
+        column = path[-1] if inside and path[-1] < len(spec.fields) else None
         return spec.fields[column] if column is not None else None
     return spec
 
@@ -254,6 +255,46 @@ def _add(rng: Random, data: dict[str, Any]) -> None:
         data[table.key] = [row]
 
 
+def extreme(rng: Random, source: str) -> str:
+    """A project that can be read as a whole, with a few numbers of any magnitude that their fields take."""
+    try:
+        data = copy.deepcopy(toml_load.loads(source))
+    except (ValueError, RecursionError):
+        data = copy.deepcopy(toml_load.loads(SMALL))
+    cells = [path for path in _paths(data) if (spec := _spec(path)) is not None and spec.kind in quantity.KINDS]
+    for path in rng.sample(cells, min(len(cells), rng.choice((1, 1, 2, 3, 5, 9, 30)))):
+        node: Any = data
+        for key in path[:-1]:
+            node = node[key]
+        if isinstance(node, dict | list):
+            node[path[-1]] = _taken(rng, _spec(path))
+    for key in ("filter", "converter", "case"):
+        rows = data.get(key)
+        if isinstance(rows, list) and rows and rng.random() < 0.15:
+            twin = copy.deepcopy(rng.choice(rows))
+            rows.append({**twin, "id": f"N{len(rows)}"} if isinstance(twin, dict) else twin)
+    for row in data.get("filter", ()) if rng.random() < 0.2 else ():
+        if isinstance(row, dict) and "dm" in row:
+            row["dm"] = [branch(rng) for _ in range(rng.choice((1, 2, 3, 7)))]
+    if rng.random() < 0.1:
+        data["rules"] = {**data.get("rules", {}), "emissions": [*schema.LIMIT_SETS], "inrush_window": "10 s"}
+    try:
+        return toml_dump.dump(data)
+    except (ValueError, TypeError, AttributeError):
+        return source
+
+
+def _taken(rng: Random, spec: Field | None) -> float:
+    """A number that the field takes: anywhere in its limits, at them, or next to what stands there mostly."""
+    assert spec is not None
+    low = spec.low if spec.low is not None else rng.choice((-1.0, 1.0)) * 10.0 ** rng.uniform(-24, 15)
+    high = spec.high if spec.high is not None else 1e15
+    if rng.random() < 0.2:
+        return rng.choice((low if not spec.above else max(low, 1e-24), high if not spec.below else high * (1 - 1e-12)))
+    found = 10.0 ** rng.choice((rng.uniform(-24, 15), rng.uniform(-12, 6), rng.uniform(-3, 3)))
+    return min(max(found, low), high)
+
+
 def lines(rng: Random, source: str) -> str:
     """The text with lines lost, doubled, swapped, cut or given other values, not knowing what they mean."""
     parts = source.split("\n")
@@ -289,7 +330,7 @@ def lines(rng: Random, source: str) -> str:
 
 def big(rng: Random, source: str) -> str:
     """A project that is far too much of something: rows, values, depth, names, one text."""
-    count = rng.choice((300, 1_000, 1_001, 20_000, 100_000))
+    count = rng.choice((200, 300, 500, 501, 20_000, 100_000))
     sort = rng.randrange(12)
     row = rng.choice(("filter", "converter", "case", "limit", "x"))
     if sort == 0:

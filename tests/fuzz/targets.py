@@ -295,7 +295,8 @@ def command_line(data: bytes) -> None:
     os.chdir(folder())
     try:
         # The files on the command line are the user's own choice, links that lead out of the folder included.
-        with watching(folder().parent), contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
+        asked = frozenset(_named(word) for word in words)
+        with watching(folder().parent, asked), contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
             try:
                 status = cli.run(words)
             except SystemExit as leaving:
@@ -309,6 +310,13 @@ def command_line(data: bytes) -> None:
     if "json" in words and out.getvalue().startswith(("{", "[")):
         assert out.getvalue().isascii()
     said(out.getvalue())
+
+
+def _named(word: str) -> str:
+    try:
+        return os.path.realpath(word)
+    except ValueError:
+        return ""
 
 
 # -- the sheet
@@ -438,6 +446,10 @@ _FILES = tuple(map(_file, dict.fromkeys(mutate.SEEDS)))
 _project = mutate.of_text(mutate.project)
 
 
+def _extreme(rng: Random, data: bytes) -> bytes:
+    return (mutate.of_text(mutate.extreme) if rng.random() < 0.7 else _project)(rng, data)
+
+
 def _project_or_bytes(rng: Random, data: bytes) -> bytes:
     return mutate.raw(rng, data) if rng.random() < 0.5 else _project(rng, data)
 
@@ -479,5 +491,5 @@ TARGETS: dict[str, Target] = {
     "command line": Target(command_line, _command, (b"check\n--dc\nhostile.toml\n\n" + _file(SMALL),), 8),
     "views": Target(views, _project, _FILES, 2),
     "keys": Target(keys, _pressed, (b"\x01\x02\n\n" + _file(SMALL), b"\x05\n\n" + _file(BROKEN)), 3),
-    "everything": Target(everything, _project, (_file(SMALL), _file(mutate.DEMOS["smallest"])), 0),
+    "everything": Target(everything, _extreme, (_file(SMALL), _file(mutate.DEMOS["smallest"])), 0),
 }

@@ -72,7 +72,7 @@ _NEVER = (
 )
 
 _folder = ""  # what may be read and written; "" while nobody watches
-_refused: frozenset[str] = frozenset()  # files below it that nobody may open
+_asked: frozenset[str] = frozenset()  # files that the user himself named
 _faults: list[str] = []
 _hooked = False
 
@@ -82,14 +82,14 @@ class ReachedError(AssertionError):
 
 
 @contextmanager
-def watching(folder: Path, refused: frozenset[str] = frozenset()) -> Iterator[None]:
-    """Raise ReachedError at the end if anything outside ``folder``, or a ``refused`` file in it, was touched."""
-    global _folder, _refused, _hooked
+def watching(folder: Path, asked: frozenset[str] = frozenset()) -> Iterator[None]:
+    """Raise ReachedError at the end if anything outside ``folder`` was touched; files ``asked`` for may be read."""
+    global _folder, _asked, _hooked
     if not _hooked:
         sys.addaudithook(_hook)
         _hooked = True
     _faults.clear()
-    _folder, _refused = os.path.realpath(folder), refused
+    _folder, _asked = os.path.realpath(folder), asked
     try:
         yield
     finally:
@@ -117,9 +117,9 @@ def _opened(name: Any, mode: Any, flags: Any) -> None:
         return
     place = _real(name)
     writes = isinstance(flags, int) and flags & _WRITE
-    if _below(place) and place not in _refused:
+    if _below(place):
         return
-    if writes or place in _refused or not (place.startswith(_OWN) or place in ("/dev/null", "/dev/urandom")):
+    if writes or not (place.startswith(_OWN) or place in _asked or place in ("/dev/null", "/dev/urandom")):
         _faults.append(f"open {place!r} for {'writing' if writes else 'reading'}")
 
 

@@ -285,6 +285,8 @@ def test_after_a_signal_the_next_start_offers_the_work(file: Path, number: signa
         program.until(lambda lines: "load, C1 = 5" in said(lines))
         program.press("7 enter u")
         program.until(lambda lines: "undone" in said(lines))
+        journal = file.with_name(f".{file.name}.journal")
+        program.until(lambda _: b'"undo"' in journal.read_bytes())  # within a second; a kill may come before
         program.process.send_signal(number)
         status = program.end()
     assert status == (-number if number == signal.SIGKILL else 128 + number)
