@@ -21,8 +21,8 @@ from budget.engine.allocate import allocate
 from budget.engine.checks import ORDER
 from budget.engine.evaluate import evaluate_dc
 from budget.engine.transient import inrush
-from budget.project import limits, reference
 from budget.glossary import markdown as words_table
+from budget.project import limits, reference
 from budget.report import tables, words
 from budget.session import Outcome, calculate, open_file
 from budget.ui import commands

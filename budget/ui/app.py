@@ -11,8 +11,8 @@ import codecs
 import contextlib
 import gc
 import io
-import os
 import locale
+import os
 import signal
 import sys
 import termios
