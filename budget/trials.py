@@ -24,6 +24,7 @@ if TYPE_CHECKING:
 REFERENCE = "reference"  # its name until the user gives it one
 LONGEST = 24  # characters of a name
 MOST = 20  # trials of one project
+MOST_BYTES = 4 * store.MAX_BYTES  # of their file
 FORMAT = 1
 _HEAD = """\
 # Trials of {name}, kept by budget: whole projects as text, with the name each was held by.
@@ -100,7 +101,10 @@ def write(path: FilePath, held: Shelved) -> None:
     text = tomli_w.dumps(tree, multiline_strings=True)
     if tomllib.loads(text) != tree:  # a line end of another system inside a text
         text = tomli_w.dumps(tree)
-    store.write_text(target, _HEAD.format(name=printable(path.name, 80)) + text)
+    text = _HEAD.format(name=printable(path.name, 80)) + text
+    if len(text.encode("utf-8")) > MOST_BYTES:  # it would not be read again
+        raise ProjectError(f"the trials would take more than {MOST_BYTES / 1e6:.0f} MB; remove one.")
+    store.write_text(target, text)
 
 
 def _row(trial: Trial, reference: bool) -> dict[str, Any]:
@@ -115,7 +119,7 @@ def read(path: FilePath) -> Shelved:
     """
     source = file_of(path)
     try:
-        loaded = store.load(source)
+        loaded = store.load(source, MOST_BYTES)
     except store.NoFileError:
         return Shelved()
     data = loaded.document.data

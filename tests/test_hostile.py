@@ -196,7 +196,7 @@ def test_shelf_files_have_one_limit_together(place: Path) -> None:
     path.write_text(f'shelf_files = ["big0.toml", "big1.toml", "big2.toml"]\n{SMALLEST}')
     loaded = store.load(path)
     assert [s.name for s in loaded.shelves] == ["big0.toml", "big1.toml"]
-    assert "all its shelf files together" in loaded.problems[0].text
+    assert "with all its shelf files together" in loaded.problems[0].text
     assert store.read_shelves(loaded.document.data, path) == (loaded.shelves, loaded.problems)
 
 
@@ -446,6 +446,19 @@ def test_a_large_file_is_saved_with_its_comments() -> None:
     assert "# part 17" in store.render(gone).text
 
 
+def test_trials_of_a_large_project_are_read_again(tmp_path: Path) -> None:
+    """Twenty whole projects may take more than one, and what would not be read again is not written."""
+    path = tmp_path / "p.toml"
+    path.write_text(SMALLEST + "".join(f"# {k:075}\n" for k in range(5000)))
+    session = open_file(path)
+    for k in range(9):
+        assert session.hold_as(f"t{k}") == ""
+        session.enter(("bus", "name"), f"name {k}", None)
+    assert len(open_file(path).trials) == 9
+    assert "remove one" in session.hold_as("t9") + session.hold_as("t10")
+    assert len(open_file(path).trials) in (9, 10)
+
+
 # -- what reaches the terminal
 
 
@@ -622,6 +635,18 @@ def test_no_error_lets_a_control_character_out(budget: Run, command: tuple[str, 
     assert out == ""
     assert err
     assert harmless(err), ascii(err)
+
+
+def test_a_name_without_end_does_not_blow_up_a_table(budget: Run) -> None:
+    """Every row of a table is as wide as its widest cell."""
+    rows = "".join(
+        SMALLEST[SMALLEST.index("[[converter]]") :].replace("CV1", f"C{k}") + 'name = "n"\n' for k in range(200)
+    )
+    Path("p.toml").write_text(SMALLEST.replace('id = "CV1"', f'id = "CV1"\nname = "{"x" * 300_000}"') + rows)
+    for form in ("text", "markdown", "csv", "json"):
+        status, out, _ = budget("check", "--dc", "--format", form, "p.toml")
+        assert status == 0
+        assert len(out) < 1_000_000
 
 
 def test_json_keeps_what_stands_in_the_file(budget: Run) -> None:

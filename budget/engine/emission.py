@@ -32,7 +32,7 @@ Indices = NDArray[np.intp]
 
 NO_ROOM = "no room for the edges"
 
-_AT_ONCE = 1_500_000  # values of a block of corners and lines
+_AT_ONCE = 500_000  # values of a block of corners and lines
 _BEYOND = 1e30  # V or A; stands for what no float holds
 
 

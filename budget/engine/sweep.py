@@ -80,6 +80,7 @@ def plan(limit: LimitLine, clock: Indices, count: int, start: Floats, end: Float
     closes = clock * size + np.searchsorted(candidate, end, side="right")
     slot = _distinct(np.concatenate((opens, closes)))
     begin, stop = np.searchsorted(slot, opens), np.searchsorted(slot, closes)
+    del opens, closes
     position = slot % size
     merged = np.argsort(position, kind="stable")
     return Sweep(
@@ -112,8 +113,11 @@ def _levels(begin: Indices, stop: Indices) -> tuple[Level, ...]:
         if k:
             lines, places = np.concatenate((lines, lines)), np.concatenate((places, stop[lines] - (1 << k)))
         order = np.argsort(places, kind="stable")
-        place, first = np.unique(places[order], return_index=True)
-        found.append(Level(1 << k, lines[order], first, place))
+        places = places[order]
+        new = np.ones(places.size, dtype=np.bool_)
+        np.not_equal(places[1:], places[:-1], out=new[1:])
+        first = np.flatnonzero(new)
+        found.append(Level(1 << k, lines[order], first, places[first]))
     return tuple(found)
 
 
@@ -145,15 +149,19 @@ def _worst(sweep: Sweep, table: Floats, power: int) -> list[Tuned | None]:
     found: list[Tuned | None] = []
     if not table.size:
         return [None] * table.shape[0]
+    # With a million lines each of these is megabytes by the dozen, so none stays longer than it must.
     terms = table if power == 1 else table * table
-    steps = np.diff(terms, axis=1, prepend=0.0)[:, sweep.merged]
+    steps = np.diff(terms, axis=1, prepend=0.0)
+    del terms
     running = np.zeros((table.shape[0], sweep.slot.size + 1))
-    np.cumsum(steps, axis=1, out=running[:, 1:])
-    reading = running[:, sweep.last]
-    allowed = (MICRO * 10.0 ** (sweep.limit / 20.0)) ** power
-    ratio = reading / allowed
+    np.cumsum(steps[:, sweep.merged], axis=1, out=running[:, 1:])
+    del steps
     # each addition rounds by at most half an ulp of the largest partial sum; twice that for the steps themselves
     doubt = 2.0 * np.finfo(np.float64).eps * sweep.slot.size * running.max(axis=1, initial=0.0)
+    ratio = running[:, sweep.last]
+    del running
+    allowed = (MICRO * 10.0 ** (sweep.limit / 20.0)) ** power
+    ratio /= allowed
     for row in range(table.shape[0]):
         slack = doubt[row] / allowed
         least = (ratio[row] - slack).max()
@@ -165,7 +173,7 @@ def _worst(sweep: Sweep, table: Floats, power: int) -> list[Tuned | None]:
 def _exact(sweep: Sweep, table: Floats, could: Indices, power: int) -> Tuned | None:
     """The best of some candidates, added up clock by clock; on a tie the lowest frequency."""
     clocks = sweep.clock_start.size - 1
-    at_once = max(1, 2_000_000 // clocks)
+    at_once = max(1, 300_000 // clocks)
     best: tuple[float, int, Floats] | None = None
     for begin in range(0, could.size, at_once):
         some = could[begin : begin + at_once]

@@ -52,20 +52,22 @@ class Saved:
     notes: tuple[str, ...]
 
 
-def load(path: FilePath) -> Loaded:
-    """Read a project and the shelf files it names.
+def load(path: FilePath, most: int = MAX_BYTES) -> Loaded:
+    """Read a project of at most ``most`` bytes and the shelf files it names.
 
     Raises ProjectError, a sentence, where the file itself is unusable; what is wrong with an included file is a
     problem of the result, so that the project still opens.
     """
-    raw, mark = _read_bytes(path)
-    return parse(_decode(raw, path.name), path.parent, path.name, mark)
+    raw, mark = _read_bytes(path, most)
+    return parse(_decode(raw, path.name), path.parent, path.name, mark, most)
 
 
-def parse(text: str, folder: FilePath | None, name: str, mark: Fingerprint | None = None) -> Loaded:
+def parse(
+    text: str, folder: FilePath | None, name: str, mark: Fingerprint | None = None, most: int = MAX_BYTES
+) -> Loaded:
     """A document from ``text``; ``folder`` is where its shelf files are looked for (None: nowhere)."""
-    if len(text) > MAX_BYTES:
-        raise ProjectError(_too_large(name, len(text)))
+    if len(text) > most:
+        raise ProjectError(_too_large(name, len(text), most))
     data = toml_load.load(text, _shown(name))
     problems: list[Problem] = []
     shelves = _shelves(data, folder, name, len(text), problems) if folder is not None else ()
@@ -261,7 +263,7 @@ def _read_bytes(path: FilePath, most: int = MAX_BYTES) -> tuple[bytes, Fingerpri
             if not stat.S_ISREG(info.st_mode):
                 raise ProjectError(f"{_shown(path)} is not an ordinary file; a project file was expected.")
             if info.st_size > most:
-                raise ProjectError(_too_large(path, info.st_size))
+                raise ProjectError(_too_large(path, info.st_size, most))
             raw = handle.read(most + 1) or b""  # None where the system has files that wait for what is not there yet
     except FileNotFoundError as error:
         name = _shown(path)
@@ -273,7 +275,7 @@ def _read_bytes(path: FilePath, most: int = MAX_BYTES) -> tuple[bytes, Fingerpri
     except (OSError, ValueError) as error:
         raise ProjectError(f"{_shown(path)} could not be read: {_reason(error)}.") from error
     if len(raw) > most:
-        raise ProjectError(_too_large(path, len(raw)))
+        raise ProjectError(_too_large(path, len(raw), most))
     return raw, Fingerprint(info.st_mtime_ns, info.st_size, info.st_ino, hashlib.sha256(raw).hexdigest())
 
 
@@ -285,11 +287,11 @@ def _shown(path: FilePath | str) -> str:
     return printable(str(path), 200)
 
 
-def _too_large(path: FilePath | str, size: int) -> str:
-    most = f"{MAX_BYTES / 1e6:.0f} MB"
-    return (
-        f"{_shown(path)} has {size / 1e6:.1f} MB; a project file has at most {most}, all its shelf files together too."
-    )
+def _too_large(path: FilePath | str, size: int, most: int) -> str:
+    found = f"{_shown(path)} has {size / 1e6:.1f} MB"
+    if most > MAX_BYTES:
+        return f"{found}; at most {most / 1e6:.0f} MB were expected."
+    return f"{found}; a project file has at most {MAX_BYTES / 1e6:.0f} MB, with all its shelf files together."
 
 
 def _reason(error: BaseException) -> str:

@@ -12,6 +12,7 @@ from budget.report import tables, words
 # Bold and the three colours that every palette has; the word beside them says the same.
 _TONES = {"fail": "\x1b[1;31m", "thin": "\x1b[33m", "ok": "\x1b[32m", "no data": "\x1b[2m"}
 _END = "\x1b[0m"
+_LONGEST = 500
 _RIGHT = {
     "value",
     "limit",
@@ -71,6 +72,8 @@ def _tone(text: str, status: str) -> str:
 
 
 def columns(head: tuple[str, ...], rows: list[tuple[str, ...]], colour: bool) -> list[str]:
+    """A table as lines; a cell that is longer than any name has a right to be is cut, since all others are as wide."""
+    rows = [tuple(cell if len(cell) <= _LONGEST else f"{cell[: _LONGEST - 3]}..." for cell in row) for row in rows]
     used = [i for i in range(len(head)) if any(row[i] for row in rows)]
     widths = {i: max(len(head[i]), *(_width(row[i]) for row in rows)) for i in used}
 

@@ -50,7 +50,9 @@ from budget.ui.paint import Line, bare, frame
 from budget.ui.recovery import Keeper
 
 LATE = 0.05  # seconds after which results that have not come look stale
+HEAVY = 0.02  # seconds of processor time to take results and paint them, from which on a key is painted before
 PAUSE = 0.03  # seconds between two stages: painting and calculating at once would make both late
+PATIENCE = 0.2  # seconds at most, where painting takes long
 FAST = 2  # stages that follow an edit at once: DC and emissions
 BREATH = 0.1  # seconds between two paints while more keys wait than can be painted
 TURN = 0.01  # seconds the rest of the program then has
@@ -153,14 +155,23 @@ class Worker:
         self._post = post
         self._newest: Snapshot | None = None
         self._told = 0.0
-        self._moved = threading.Event()  # a newer snapshot has come
+        self._screen = threading.Condition()
+        self._painted = 0  # results that have reached the screen
+        self.heavy = False  # results take long to be painted
         self._slow = Mailbox("slow stages", self._rest)
         self._fast = Mailbox("fast stages", self._begin)
 
     def want(self, snapshot: Snapshot) -> None:
-        self._newest = snapshot
-        self._moved.set()
+        with self._screen:
+            self._newest = snapshot
+            self._screen.notify_all()
         self._fast.put(snapshot)
+
+    def painted(self) -> None:
+        """Results have reached the screen: what waited for that may go on."""
+        with self._screen:
+            self._painted += 1
+            self._screen.notify_all()
 
     def _begin(self, snapshot: Snapshot) -> None:
         def results() -> Iterator[Outcome]:  # so that an error before the first stage is one of a stage too
@@ -186,14 +197,23 @@ class Worker:
         """Send the next ``count`` stages; whether the rest is still wanted."""
         try:
             for outcome in islice(results, count):
+                before = self._painted
                 self._send(Calculated(outcome))
-                self._moved.clear()
-                if self._newest is not snapshot or self._moved.wait(PAUSE):  # the screen comes first
+                self._rest_a_while(snapshot, before)
+                if self._newest is not snapshot:
                     return False
         except Exception as error:  # the sheet must stay open whatever the calculation does
             self._send(Trouble(snapshot.generation, log.told(error)))
             return False
         return True
+
+    def _rest_a_while(self, snapshot: Snapshot, before: int) -> None:
+        """Leave the processor to the screen: for a moment, or where painting takes long until it is done."""
+        with self._screen:
+            if self.heavy:
+                self._screen.wait_for(lambda: self._painted > before or self._newest is not snapshot, PATIENCE)
+            else:
+                self._screen.wait_for(lambda: self._newest is not snapshot, PAUSE)
 
     def _progress(self, share: float) -> None:
         if share - self._told >= 0.1 or share < self._told:  # a word now and then; each costs the terminal bytes
@@ -444,7 +464,11 @@ class BudgetApp(App[int], inherit_bindings=False):
     def start_calculation(self) -> None:
         if self.worker is None:
             return
-        self.worker.want(self.desk.session.snapshot())
+        snapshot = self.desk.session.snapshot()
+        if self.worker.heavy:  # what the key did is painted first; in a small project both go in one
+            self.call_after_refresh(self.worker.want, snapshot)
+        else:
+            self.worker.want(snapshot)
         generation = self.desk.session.generation
         self.set_timer(LATE, lambda: self.late(generation))
 
@@ -456,9 +480,14 @@ class BudgetApp(App[int], inherit_bindings=False):
 
     def on_calculated(self, event: Calculated) -> None:
         fresh: list[bool] = []
+        begun = time.thread_time()
         self.board.guard(lambda: fresh.append(self.desk.accept(event.outcome)))
         if fresh != [False]:
             self.board.sync()
+        if self.worker is not None:
+            if fresh != [False]:
+                self.worker.heavy = time.thread_time() - begun > HEAVY
+            self.call_after_refresh(self.worker.painted)
 
     def on_aside(self, event: Aside) -> None:
         if self.desk.session.fill(event.document, event.outcome):

@@ -155,6 +155,8 @@ class Both:
     """The program in its terminal, and a desk in this process that is given the same keys."""
 
     def __init__(self, file: Path, home: str) -> None:
+        for left in file.parent.glob(f".{file.name}.*"):  # of a program that was killed: it would be offered
+            left.unlink()
         self.terminal = Terminal([sys.executable, "-m", "budget", str(file)], home)
         twin = Path(home) / "twin" / file.name  # the program's own file is locked by it
         twin.parent.mkdir(exist_ok=True)

@@ -265,7 +265,7 @@ def extreme(rng: Random, source: str) -> str:
     for path in rng.sample(cells, min(len(cells), rng.choice((1, 1, 2, 3, 5, 9, 30)))):
         node: Any = data
         for key in path[:-1]:
-            node = node[key]
+            node = node[key] if isinstance(node, dict | list) else None  # replaced as a whole before
         if isinstance(node, dict | list):
             node[path[-1]] = _taken(rng, _spec(path))
     for key in ("filter", "converter", "case"):

@@ -428,7 +428,7 @@ def everything(data: bytes) -> None:
         def enough() -> bool:
             nonlocal asked
             asked += 1
-            return asked > 400
+            return asked > 60
 
         with contextlib.suppress(CancelledError):
             result = with_inrush(result, enough)
