@@ -260,7 +260,7 @@ def test_an_edit_that_changes_every_row_sends_little_also_against_a_reference(tm
         program.press("enter")
         lines = ready(program, "resistance = 11m: ")
         assert sum(line.startswith(("change", "  change")) for line in lines) > 8
-        # All rows and as many lines of changes: some 3.6 kB, more where stages are painted one by one on a busy machine.
+        # All rows and as many lines of changes: some 3.6 kB, more where stages are painted apart on a busy machine.
         assert 0 < program.sent - before <= 6000
         program.press("home")
         program.settle()
