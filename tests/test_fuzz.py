@@ -25,6 +25,7 @@ COUNTS = {
     "file text": 120,
     "file bytes": 80,
     "shelf file": 50,
+    "trials file": 30,
     "cell": 250,
     "quantity": 250,
     "path": 250,

@@ -378,6 +378,14 @@ def test_a_network_that_no_machine_could_hold_is_an_error() -> None:
     assert "1602 elements together; at most 1500" in built.errors[0].text
 
 
+@pytest.mark.parametrize(("old", "new"), [('L = "10 uH"', "L = 1e15"), ('C = "100 uF"', "C = 2e6")])
+def test_a_choke_the_size_of_the_moon_is_refused(old: str, new: str) -> None:
+    """The stability of a network with 1e15 H took minutes: its poles lie some thirty decades apart."""
+    built = build(store.parse(SMALLEST.replace(old, new), None, "x.toml").document)
+    assert len(built.errors) == 1
+    assert "is beyond anything on a real bus" in built.errors[0].text
+
+
 def test_what_only_looks_like_too_long_a_key_is_none() -> None:
     chain = ".".join("abcdefghijklmnopqrstuvwxyz")
     text = (

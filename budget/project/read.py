@@ -20,6 +20,8 @@ from budget.project.problems import Problem, found, printable
 from budget.project.schema import Field
 
 LARGEST, SMALLEST = 1e15, 1e-24  # in SI units, of any quantity: what lies beyond would only make overflows
+# A henry is a large choke and a farad a large bank; a million of them only make poles that no arithmetic can tell apart.
+LARGEST_OF = {"inductance": 1e6, "capacitance": 1e6}
 MAX_ROWS = 20_000  # of one table of numbers; a longer one is a mistake
 MAX_LADDER = 200  # elements of one ladder
 
@@ -77,7 +79,7 @@ def quantity_value(spec: Field, raw: Any) -> float:
 
 def check_limits(spec: Field, value: float, raw: Any) -> None:
     """Raise ValueError, a sentence, where ``value`` lies outside the limits of its field, or of what is real."""
-    if abs(value) > LARGEST or 0.0 < abs(value) < SMALLEST:
+    if abs(value) > LARGEST_OF.get(spec.kind, LARGEST) or 0.0 < abs(value) < SMALLEST:
         raise ValueError(f"{found(raw)} is beyond anything on a real bus; {expectation(spec)} was expected.")
     low_missed = spec.low is not None and (value <= spec.low if spec.above else value < spec.low)
     high_missed = spec.high is not None and (value >= spec.high if spec.below else value > spec.high)

@@ -35,7 +35,8 @@ GIVEN_UP = 10.0  # s of processor time after which an input is interrupted in th
 SLOWEST = 5  # inputs of a target that are timed again alone
 KEPT = 20  # faults of a target that are kept
 NAMES = (  # as in targets.TARGETS, with their shares; named here because the instruments come before that import
-    *("file text", "file bytes", "shelf file", "cell", "quantity", "path", "saving", "command line", "views"),
+    *("file text", "file bytes", "shelf file", "trials file", "cell", "quantity", "path", "saving"),
+    *("command line", "views"),
     *("keys", "everything"),
 )
 

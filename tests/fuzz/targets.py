@@ -161,6 +161,24 @@ def shelf_file(data: bytes) -> None:
                 edits.shelf_part(loaded.document, loaded.shelves, ("shelf", key, name))
 
 
+def trials_file(data: bytes) -> None:
+    """The bytes of the file of trials that stands beside a project."""
+    path = folder() / "good.toml"
+    before = set(os.listdir(folder()))
+    (folder() / "good.trials.toml").write_bytes(data)
+    try:
+        with watching(folder()), refusing():
+            session = open_file(path)
+            for note in session.notes:
+                said(note)
+            for trial in session.held():
+                said(trial.name)
+                _problems(trial.problems)
+    finally:
+        for name in set(os.listdir(folder())) - before:
+            (folder() / name).unlink()
+
+
 # -- cells, quantities, paths
 
 
@@ -471,6 +489,18 @@ def _command(rng: Random, data: bytes) -> bytes:
     return head + b"\n\n" + body
 
 
+def _trials(rng: Random, data: bytes) -> bytes:
+    """Bytes of the file, or hostile projects in it that are trials."""
+    if data and rng.random() < 0.5:
+        return mutate.raw(rng, data) if rng.random() < 0.5 else mutate.of_text(mutate.lines)(rng, data)
+    rows = []
+    for k in range(rng.choice((1, 2, 3))):
+        value = mutate.project(rng) if rng.random() < 0.8 else mutate.anything(rng)
+        name = f"t{k}" if rng.random() < 0.8 else mutate.text(rng)
+        rows.append({"name": name, "held": mutate.text(rng), "text": value, "reference": rng.random() < 0.3})
+    return _file(toml_dump.dump({"format": 1, "trial": rows}))
+
+
 def _pressed(rng: Random, data: bytes) -> bytes:
     head, _, body = data.partition(b"\n\n")
     if rng.random() < 0.8 or not head:
@@ -484,6 +514,7 @@ TARGETS: dict[str, Target] = {
     "file text": Target(file_text, _project, _FILES, 26),
     "file bytes": Target(file_bytes, _project_or_bytes, _FILES, 12),
     "shelf file": Target(shelf_file, mutate.of_text(mutate.shelf), (_file(mutate.SHELF),), 8),
+    "trials file": Target(trials_file, _trials, (b'format = 1\n[[trial]]\nname = "a"\ntext = "format = 1"\n',), 2),
     "cell": Target(cell, _cell, (b"\0\0" + b"28 V", b"\0\x09" + b"2 * 3 A"), 16),
     "quantity": Target(quantity_text, mutate.of_text(mutate.quantity_text), (b"2 * (3 A + 100 mA)", b"4.7 uF"), 12),
     "path": Target(path_text, mutate.of_text(mutate.path), (b"C1.output.0.current", b'"FA".dm.0.L'), 8),
