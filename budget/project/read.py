@@ -20,7 +20,7 @@ from budget.project.problems import Problem, found, printable
 from budget.project.schema import Field
 
 LARGEST, SMALLEST = 1e15, 1e-24  # in SI units, of any quantity: what lies beyond would only make overflows
-# A henry is a large choke and a farad a large bank; a million of them only make poles that no arithmetic can tell apart.
+# A henry is a large choke, a farad a large bank; a million of them only make poles that no arithmetic can tell apart.
 LARGEST_OF = {"inductance": 1e6, "capacitance": 1e6}
 MAX_ROWS = 20_000  # of one table of numbers; a longer one is a mistake
 MAX_LADDER = 200  # elements of one ladder
