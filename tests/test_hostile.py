@@ -14,12 +14,14 @@ import unicodedata
 from collections.abc import Callable
 from pathlib import Path
 
+import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from budget import trials
 from budget.cli import run
+from budget.engine.lines import MOST, lines_of
 from budget.project import document as doc
 from budget.project import permit, store, toml_load
 from budget.project.build import MAX_PROBLEMS, build
@@ -377,6 +379,22 @@ def test_a_network_that_no_machine_could_hold_is_an_error() -> None:
     built = build(store.parse(text, None, "x.toml").document)
     assert built.project is None
     assert "1602 elements together; at most 1500" in built.errors[0].text
+
+
+def test_the_lines_of_all_limit_sets_have_one_room() -> None:
+    """Slow clocks make millions of lines: what has no room is said to be too many, and never begun."""
+    text = SMALL.replace('"300 kHz"', '"1 kHz"').replace('emissions = ["CE102", "own"]', 'emissions = ["CE102"]')
+    project = build(store.parse(text, None, "x.toml").document).project
+    assert project is not None
+    whole = lines_of(project, project.checked[0])
+    assert not whole.too_many
+    assert 0 < whole.room < MOST
+    assert lines_of(project, project.checked[0], whole, whole.room) is whole
+    short = lines_of(project, project.checked[0], whole, whole.room // 2)
+    assert short.too_many
+    assert short.frequency.size == 0
+    again = lines_of(project, project.checked[0], short, whole.room)
+    assert np.array_equal(again.frequency, whole.frequency), "there is room again"
 
 
 @pytest.mark.parametrize(("old", "new"), [('L = "10 uH"', "L = 1e15"), ('C = "100 uF"', "C = 2e6")])

@@ -273,11 +273,12 @@ def extreme(rng: Random, source: str) -> str:
         if isinstance(rows, list) and rows and rng.random() < 0.15:
             twin = copy.deepcopy(rng.choice(rows))
             rows.append({**twin, "id": f"N{len(rows)}"} if isinstance(twin, dict) else twin)
-    for row in data.get("filter", ()) if rng.random() < 0.2 else ():
+    filters, rules = data.get("filter"), data.get("rules", {})
+    for row in filters if isinstance(filters, list) and rng.random() < 0.2 else ():
         if isinstance(row, dict) and "dm" in row:
             row["dm"] = [branch(rng) for _ in range(rng.choice((1, 2, 3, 7)))]
-    if rng.random() < 0.1:
-        data["rules"] = {**data.get("rules", {}), "emissions": [*schema.LIMIT_SETS], "inrush_window": "10 s"}
+    if rng.random() < 0.1 and isinstance(rules, dict):
+        data["rules"] = {**rules, "emissions": [*schema.LIMIT_SETS], "inrush_window": "10 s"}
     try:
         return toml_dump.dump(data)
     except (ValueError, TypeError, AttributeError):

@@ -18,6 +18,7 @@ import heapq
 import json
 import os
 import resource
+import shutil
 import signal
 import subprocess
 import sys
@@ -340,6 +341,8 @@ def _all(options: argparse.Namespace) -> int:
                 flush=True,
             )
             left += [(told["target"], *fault) for fault in told["faults"]]
+    for litter in (*Path(options.out).glob("tmp-*"), *Path(options.out).glob("corpus-*")):
+        shutil.rmtree(litter, ignore_errors=True)
     for target, name, faults in left:
         print(f"{target}: {'; '.join(faults)}: {name}")
     return 1 if left else 0

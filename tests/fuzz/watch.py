@@ -7,7 +7,9 @@ end: an exception inside the program could be swallowed there.
 
 from __future__ import annotations
 
+import atexit
 import os
+import shutil
 import sys
 import sysconfig
 import tempfile
@@ -161,6 +163,7 @@ def _importing() -> bool:
 def scratch() -> Path:
     """A folder for one process, with what a hostile file might like to read beside and below it."""
     base = Path(tempfile.mkdtemp(prefix="budget-fuzz-"))
+    atexit.register(shutil.rmtree, base, ignore_errors=True)
     (base / "secret.toml").write_text("[shelf.filter.secret]\nrated_current = 1\n")
     folder = base / "project"
     folder.mkdir()

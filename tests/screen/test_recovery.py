@@ -298,7 +298,7 @@ def test_after_a_signal_the_next_start_offers_the_work(file: Path, number: signa
     with terminal(file) as program:
         program.until(lambda lines: "was not saved: 3 changes" in said(lines))
         program.press("d")
-        lines = program.until(lambda lines: "in this work" in lines[1])
+        lines = program.until(lambda lines: "in this work" in lines[1] and not lines[3].strip())  # all of it is painted
         assert "rest.load.C1" in lines[2]
         assert "50 %" in lines[2]
         assert not lines[3].strip()
